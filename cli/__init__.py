@@ -1,0 +1,1 @@
+"""The wedgewright command: a thin skin over the library."""

@@ -1,0 +1,1 @@
+"""Wedge scan in, per-pixel responses out."""

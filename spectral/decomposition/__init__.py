@@ -1,0 +1,1 @@
+"""Counts and a calibration in, areal densities with errors out."""

@@ -1,0 +1,1 @@
+"""Areal densities and a pixel response in, expected counts out."""

@@ -1,0 +1,1 @@
+"""Pure functions of X-ray physics: cross sections, tube, sensor, counting."""

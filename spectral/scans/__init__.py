@@ -1,0 +1,1 @@
+"""Scans and maps as data, and the files they come from and go to."""

@@ -1,0 +1,1 @@
+"""An event-by-event detector that shares nothing with the forward model."""
