@@ -156,7 +156,8 @@ class Scan:
     def areal_density(self) -> NDArray[np.float64]:
         """What stood in the beam, shape (exposure, material), in g/cm2."""
         density = np.array([layer.density_g_cm3 for layer in self.materials])
-        return self.thickness_mm * 0.1 * density
+        areal: NDArray[np.float64] = self.thickness_mm * 0.1 * density
+        return areal
 
     def exposures(self, *roles: str) -> NDArray[np.int64]:
         """Indices of the exposures that have one of the roles, in order."""
