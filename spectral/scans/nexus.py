@@ -117,7 +117,7 @@ class Node:
         """A dataset that must be there."""
         found = self.group.get(field)
         if not isinstance(found, h5py.Dataset):
-            msg = f"{self.name(field)} is missing; a scan needs it"
+            msg = f"{self.name(field)} is missing; the file needs it"
             raise FileFormatError(msg)
         return found
 
