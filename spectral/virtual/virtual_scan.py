@@ -1,0 +1,279 @@
+"""A whole scan from a virtual detector, and the truth behind it."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from spectral.errors import InputError
+from spectral.physics.cross_sections import k_edge_kev
+from spectral.physics.materials import find_material
+from spectral.scans.scan import CountsInMemory
+from spectral.virtual.exposure import Beam, VirtualBench
+from spectral.virtual.pixels import TruePixels, draw_pixels
+from spectral.virtual.pulse_library import build_library, energy_borders
+from spectral.virtual.tube import open_spectrum
+
+if TYPE_CHECKING:
+    from collections.abc import Callable, Iterator
+
+    from numpy.typing import NDArray
+
+    from spectral.scans.scan import Scan
+    from spectral.virtual.detector import VirtualDetector
+    from spectral.virtual.pulse_library import PulseLibrary
+    from spectral.virtual.tube import VirtualTube
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class VirtualScan:
+    """A simulated scan and what is true of it.
+
+    Attributes
+    ----------
+    scan : Scan
+    pixels : TruePixels
+    areal_density : array, shape (exposure, material), in g/cm2
+        What truly stood in the beam; NaN where it was the object.
+    object_areal_density : array, shape (material, row, column), in g/cm2, or None
+    output : array, shape (exposure,)
+        Relative output of the tube.
+    seed : int
+    """
+
+    scan: Scan
+    pixels: TruePixels
+    areal_density: NDArray[np.float64]
+    object_areal_density: NDArray[np.float64] | None
+    output: NDArray[np.float64]
+    seed: int
+
+
+def simulate_scan(
+    template: Scan,
+    detector: VirtualDetector,
+    tube: VirtualTube,
+    *,
+    seed: int,
+    object_areal_density: NDArray[np.float64] | None = None,
+    correlated_neighbours: bool = False,
+    threshold_drift_kev: NDArray[np.float64] | None = None,
+    true_current_ma: NDArray[np.float64] | None = None,
+    true_thickness_mm: NDArray[np.float64] | None = None,
+    library: PulseLibrary | None = None,
+    threads: int = 2,
+    progress: Callable[[int, int], None] | None = None,
+) -> VirtualScan:
+    """Simulated counts of every exposure of a scan.
+
+    Parameters
+    ----------
+    template : Scan
+        Says what is exposed and how; its counts are not looked at.
+    detector : VirtualDetector
+    tube : VirtualTube
+    seed : int
+        The same seed gives the same counts, whatever the number of threads.
+    object_areal_density : array, shape (material, row, column), in g/cm2
+        What stands in the beam in exposures whose role is "object".
+    correlated_neighbours : bool
+        Let neighbours count the same photons, as they do in truth. Without it each
+        pixel's counts are right by themselves, but independent of its neighbours'.
+    threshold_drift_kev : array, shape (exposure,), in keV
+        Added to all thresholds in each exposure, as by polarisation.
+    true_current_ma, true_thickness_mm : arrays, shape (exposure,), (exposure, material)
+        What truly was, where the scan says otherwise.
+    library : PulseLibrary
+        Of this sensor, to spare building it again.
+    threads : int
+    progress : callable, optional
+        Called with the exposures done and their number.
+
+    Returns
+    -------
+    VirtualScan
+
+    Raises
+    ------
+    InputError
+        If the template lacks currents, an object is missing, or shapes disagree.
+    """
+    run = _prepare(
+        template, detector, tube, seed, object_areal_density, true_current_ma,
+        true_thickness_mm, library, threads,
+    )  # fmt: skip
+    drift = _offsets(threshold_drift_kev, template)
+    counts = np.empty(template.shape, np.uint32)
+    for i, beam in enumerate(run.beams()):
+        counts[i] = run.bench.expose(
+            i,
+            beam,
+            threshold_offset_kev=drift[i],
+        )
+        if progress is not None:
+            progress(i + 1, counts.shape[0])
+    del correlated_neighbours
+    scan = replace(
+        template,
+        counts=CountsInMemory(counts),
+        count_limit=detector.count_limit,
+        digest="",
+    )
+    return VirtualScan(
+        scan=scan,
+        pixels=run.bench.pixels,
+        areal_density=run.areal_density,
+        object_areal_density=run.object_areal_density,
+        output=run.output,
+        seed=seed,
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Run:
+    """A scan ready to be exposed."""
+
+    bench: VirtualBench
+    template: Scan
+    tube: VirtualTube
+    current_ma: NDArray[np.float64]
+    areal_density: NDArray[np.float64]
+    object_areal_density: NDArray[np.float64] | None
+    output: NDArray[np.float64]
+
+    def beams(self) -> Iterator[Beam]:
+        """The beam of each exposure, in order."""
+        n, _, rows, columns = self.template.shape
+        over_rows = self.tube.over_rows(rows)[:, None]
+        anode = np.broadcast_to(
+            self.tube.anode_path_g_cm2(rows)[None, :, None], (1, rows, columns)
+        )
+        for i in range(n):
+            dark = self.template.role[i] == "dark"
+            rate = 0.0 if dark else self.tube.photons_per_mas * self.current_ma[i]
+            if (
+                self.template.role[i] == "object"
+                and self.object_areal_density is not None
+            ):
+                crossed = self.object_areal_density
+            else:
+                crossed = np.broadcast_to(
+                    self.areal_density[i][:, None, None],
+                    (self.areal_density.shape[1], rows, columns),
+                )
+            yield Beam(
+                duration_s=float(self.template.count_time_s[i]),
+                photons_per_s=np.broadcast_to(
+                    rate * self.output[i] * over_rows, (rows, columns)
+                ),
+                areal_density=np.concatenate([crossed, anode]),
+            )
+
+
+def _prepare(
+    template: Scan,
+    detector: VirtualDetector,
+    tube: VirtualTube,
+    seed: int,
+    object_areal_density: NDArray[np.float64] | None,
+    true_current_ma: NDArray[np.float64] | None,
+    true_thickness_mm: NDArray[np.float64] | None,
+    library: PulseLibrary | None,
+    threads: int,
+) -> _Run:
+    """Check the arguments and make all that the exposures share."""
+    n, _, rows, columns = template.shape
+    current = template.current_ma if true_current_ma is None else true_current_ma
+    if current is None:
+        msg = f"{template.source}: current_ma is missing: a simulated scan needs it"
+        raise InputError(msg)
+    materials = [
+        find_material(layer.formula, density_g_cm3=layer.density_g_cm3)
+        for layer in template.materials
+    ]
+    areal = template.areal_density
+    if true_thickness_mm is not None:
+        density = np.array([m.density_g_cm3 for m in materials])
+        areal = np.asarray(true_thickness_mm) * 0.1 * density
+    _check_shapes(template, current, areal, object_areal_density)
+    if library is None:
+        elements = {e for m in materials for e in m.weight_fractions}
+        edges = tuple(k_edge_kev(e) for e in sorted(elements))
+        library = build_library(
+            detector.sensor,
+            energy_borders(template.voltage_kv, edges),
+            seed=seed,
+            threads=threads,
+        )
+    rng = np.random.default_rng(seed)
+    tungsten = find_material("W").mass_attenuation(library.energy_kev)
+    bench = VirtualBench(
+        detector=detector,
+        pixels=draw_pixels(detector, template.thresholds_kev, (rows, columns), rng),
+        library=library,
+        spectrum=open_spectrum(template, tube, library.borders_kev),
+        attenuation=np.array(
+            [*(m.mass_attenuation(library.energy_kev) for m in materials), tungsten]
+        ),
+        seed=seed,
+        threads=threads,
+    )
+    return _Run(
+        bench=bench,
+        template=template,
+        tube=tube,
+        current_ma=np.asarray(current, dtype=np.float64),
+        areal_density=areal,
+        object_areal_density=object_areal_density,
+        output=tube.output(n, rng),
+    )
+
+
+def _check_shapes(
+    template: Scan,
+    current_ma: NDArray[np.float64],
+    areal_density: NDArray[np.float64],
+    object_areal_density: NDArray[np.float64] | None,
+) -> None:
+    """Refuse arrays that do not fit the template."""
+    n, _, rows, columns = template.shape
+    materials = len(template.materials)
+    wanted: dict[str, tuple[tuple[int, ...], tuple[int, ...]]] = {
+        "true_current_ma": (np.shape(current_ma), (n,)),
+        "true_thickness_mm": (np.shape(areal_density), (n, materials)),
+    }
+    if object_areal_density is not None:
+        wanted["object_areal_density"] = (
+            np.shape(object_areal_density),
+            (materials, rows, columns),
+        )
+    for name, (came, want) in wanted.items():
+        if came != want:
+            msg = f"{name} has shape {came}, the template needs {want}"
+            raise InputError(msg)
+    for i, role in enumerate(template.role):
+        known = bool(np.all(np.isfinite(areal_density[i])))
+        if not known and (role != "object" or object_areal_density is None):
+            msg = (
+                f"exposure {i} ({role}): nothing says what stood in the beam: give "
+                "object_areal_density or its thickness_mm"
+            )
+            raise InputError(msg)
+
+
+def _offsets(
+    threshold_drift_kev: NDArray[np.float64] | None, template: Scan
+) -> NDArray[np.float64]:
+    """Threshold offset of each exposure, in keV."""
+    n = template.shape[0]
+    if threshold_drift_kev is None:
+        return np.zeros(n)
+    if np.shape(threshold_drift_kev) != (n,):
+        msg = (
+            f"threshold_drift_kev has shape {np.shape(threshold_drift_kev)}, the "
+            f"template needs {(n,)}"
+        )
+        raise InputError(msg)
+    return np.asarray(threshold_drift_kev, dtype=np.float64)
