@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -73,9 +73,7 @@ class CountingModel:
         -------
         array, shape (case, grid), in 1/s
         """
-        rate = np.broadcast_to(
-            np.asarray(photon_rate, float), areal_density.shape[:1]
-        )
+        rate = np.broadcast_to(np.asarray(photon_rate, float), areal_density.shape[:1])
         pulses = (self.transmitted(areal_density) @ self.heights) * rate[:, None]
         return crossing_rate(
             pulses,
@@ -83,6 +81,17 @@ class CountingModel:
             step_kev=self.step_kev,
             noise_kev=self.noise_kev,
             size=_transform_length(self.heights.shape[1]),
+        )
+
+    def with_dead_time(self, factor: float) -> CountingModel:
+        """The model with all times of the pulse multiplied by ``factor``."""
+        return replace(
+            self,
+            shape=replace(
+                self.shape,
+                dead_time_ns=self.shape.dead_time_ns * factor,
+                tail_ns=self.shape.tail_ns * factor,
+            ),
         )
 
 

@@ -7,6 +7,7 @@ from itertools import combinations_with_replacement
 from typing import TYPE_CHECKING
 
 import numpy as np
+
 from spectral.errors import InputError
 
 if TYPE_CHECKING:

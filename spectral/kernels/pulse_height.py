@@ -27,7 +27,7 @@ def _normal_cdf(value: float, table: NDArray[np.float64]) -> float:
         return 1.0
     cell = int(place)
     share = place - cell
-    return table[cell] + share * (table[cell + 1] - table[cell])
+    return float(table[cell] + share * (table[cell + 1] - table[cell]))
 
 
 @njit(nogil=True, cache=True, error_model="numpy")

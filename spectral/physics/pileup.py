@@ -34,6 +34,11 @@ class PulseShape:
     tail_ns: float = 0.0
     tail_height: float = 0.5
 
+    @property
+    def effective_ns(self) -> float:
+        """Dead time of a counter with the same loss for pulses of one height."""
+        return self.dead_time_ns + self.tail_height * self.tail_ns
+
 
 def crossing_rate(
     pulses: NDArray[np.float64],
@@ -112,6 +117,7 @@ def _scaled(pulses: NDArray[np.float64], factor: float) -> NDArray[np.float64]:
     cell = place.astype(np.int64)
     part = place - cell
     out = np.zeros_like(pulses)
-    np.add.at(out, (slice(None), cell), pulses * (1.0 - part))
-    np.add.at(out, (slice(None), cell + 1), pulses * part)
+    for source, (target, share) in enumerate(zip(cell, part, strict=True)):
+        out[:, target] += pulses[:, source] * (1.0 - share)
+        out[:, target + 1] += pulses[:, source] * share
     return out

@@ -19,6 +19,8 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
+    from spectral.physics.cross_sections import Process
+
 UM_PER_CM = 1.0e4
 PAIR_ENERGY_EV = {"Si": 3.62, "CdTe": 4.43, "CdZnTe": 4.6, "GaAs": 4.2}
 """Energy per electron-hole pair, in eV (detector handbooks, from memory)."""
@@ -79,7 +81,9 @@ class ChargeTransport:
     fluorescence: float = 1.0
 
 
-def electron_range_um(sensor: Sensor, energy_kev: NDArray[np.float64]) -> NDArray[np.float64]:
+def electron_range_um(
+    sensor: Sensor, energy_kev: NDArray[np.float64]
+) -> NDArray[np.float64]:
     """Range of an electron in the sensor, in um, shape as ``energy_kev``.
 
     Notes
@@ -159,7 +163,6 @@ def pulse_heights(
     """
     out = np.zeros((energy_kev.size, grid))
     points = sample_points(samples)
-    mu = _linear(sensor, energy_kev, "total")
     photo = _linear(sensor, energy_kev, "photo")
     scatter = _linear(sensor, energy_kev, "incoherent")
     active = photo + scatter
@@ -201,13 +204,18 @@ def pulse_heights(
         add(absorbed * share, full - second, second, np.full(shape, line_mu), even)
     cosine = compton.scattering_cosine(energy_kev, points[:, 3])
     left = compton.scattered_energy_kev(energy_kev[:, None], cosine)
-    add(stopped * scatter / active, full - left, left, _linear(sensor, left, "total"), cosine)
-    del mu
+    add(
+        stopped * scatter / active,
+        full - left,
+        left,
+        _linear(sensor, left, "total"),
+        cosine,
+    )
     return _with_fano(out, sensor, step_kev)
 
 
 def _linear(
-    sensor: Sensor, energy_kev: NDArray[np.float64], process: str
+    sensor: Sensor, energy_kev: NDArray[np.float64], process: Process
 ) -> NDArray[np.float64]:
     """Linear attenuation of the sensor, in 1/um."""
     return (

@@ -1,0 +1,299 @@
+"""The average pixel: fitting tube and sensor unknowns to the scan's mean counts."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from spectral.calibration.nuisance import as_mapping, population_nuisances
+from spectral.errors import CalibrationError
+from spectral.forward.counting_model import CountingModel, counts_to_bins, cubic_weights
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from numpy.typing import NDArray
+
+    from spectral.calibration.nuisance import Nuisance
+    from spectral.calibration.wedge_data import WedgeData
+    from spectral.forward.setup import Setup
+
+MODEL_ERROR = 2e-3
+"""Relative error of the mean model that the fit allows for in each bin."""
+DRIFT_SPREAD = 3e-3
+"""Prior spread of the tube's output from exposure to exposure."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Population:
+    """What the average pixel taught.
+
+    Attributes
+    ----------
+    model : CountingModel
+    values : dict of str to float
+        Unknowns by name (`spectral.calibration.nuisance`).
+    errors : dict of str to float
+        Their standard deviations.
+    photons_per_mas : float
+        Photons of the open beam upon one pixel per mA s.
+    shift_kev : array, shape (threshold,), in keV
+        Mean true threshold minus its nominal setting.
+    drift : array, shape (exposure,)
+        Relative output of the tube in each exposure, minus 1.
+    residual : array, shape (exposure, bin)
+        Mean counts over model, minus 1.
+    residual_error : array, shape (exposure, bin)
+        Statistical standard deviation of that.
+    """
+
+    model: CountingModel
+    values: dict[str, float]
+    errors: dict[str, float]
+    photons_per_mas: float
+    shift_kev: NDArray[np.float64]
+    drift: NDArray[np.float64]
+    residual: NDArray[np.float64]
+    residual_error: NDArray[np.float64]
+
+
+@dataclass(slots=True, kw_only=True, eq=False)
+class _Problem:
+    """Mean bin counts of a scan, and their prediction."""
+
+    setup: Setup
+    nuisances: tuple[Nuisance, ...]
+    areal: NDArray[np.float64]
+    current: NDArray[np.float64]
+    time: NDArray[np.float64]
+    nominal: NDArray[np.float64]
+    spread_kev: NDArray[np.float64]
+    samples: int
+
+    def predict(
+        self,
+        values: NDArray[np.float64],
+        drift: NDArray[np.float64],
+        heights: NDArray[np.float64],
+    ) -> NDArray[np.float64]:
+        """Mean counts above each threshold, shape (exposure, threshold)."""
+        named = as_mapping(self.nuisances, values)
+        model = self.setup.model(named, heights=heights)
+        rate = np.exp(named["ln_flux"]) * self.current * (1.0 + drift)
+        curves = model.counting_curves(self.areal, rate)
+        levels = self.nominal + _shifts(named, self.nominal.size)
+        return self.time[:, None] * mean_over_spread(
+            curves, levels, self.spread_kev, model.step_kev
+        )
+
+    def heights(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
+        return self.setup.heights(
+            as_mapping(self.nuisances, values), samples=self.samples
+        )
+
+
+def _shifts(named: dict[str, float], count: int) -> NDArray[np.float64]:
+    return np.array([named[f"shift_{k + 1}_kev"] for k in range(count)])
+
+
+def mean_over_spread(
+    curves: NDArray[np.float64],
+    levels_kev: NDArray[np.float64],
+    spread_kev: NDArray[np.float64],
+    step_kev: float,
+) -> NDArray[np.float64]:
+    """Curves read at normally scattered thresholds and averaged.
+
+    Parameters
+    ----------
+    curves : array, shape (exposure, grid)
+    levels_kev, spread_kev : arrays, shape (threshold,), in keV
+    step_kev : float
+
+    Returns
+    -------
+    array, shape (exposure, threshold)
+
+    Notes
+    -----
+    Five-point Gauss-Hermite quadrature. Source: M. Abramowitz, I. Stegun, Handbook
+    of Mathematical Functions, 25.4.46.
+    """
+    node, share = np.polynomial.hermite_e.hermegauss(5)
+    share = share / share.sum()
+    levels = levels_kev[:, None] + spread_kev[:, None] * node
+    first, value, _ = cubic_weights(levels, step_kev, curves.shape[1])
+    read = np.zeros((curves.shape[0], *levels.shape))
+    for q in range(4):
+        read += curves[:, first + q] * value[..., q]
+    return np.asarray(read @ share)
+
+
+def fit_population(
+    data: WedgeData,
+    setup: Setup,
+    *,
+    spread_kev: NDArray[np.float64],
+    start: dict[str, float] | None = None,
+    rounds: int = 6,
+    samples: int = 2048,
+    progress: Callable[[float], None] | None = None,
+) -> Population:
+    """Fit the unknowns to the mean counts of the good pixels.
+
+    Parameters
+    ----------
+    data : WedgeData
+    setup : Setup
+    spread_kev : array, shape (threshold,), in keV
+        Standard deviation of the thresholds between pixels.
+    start : dict, optional
+        Values to start from; the prior means otherwise.
+    rounds : int
+        Gauss-Newton rounds.
+    samples : int
+        Interactions per energy for the pulse heights.
+    progress : callable, optional
+        Called with the finished share.
+
+    Raises
+    ------
+    CalibrationError
+        If the fit does not come near the data.
+
+    Notes
+    -----
+    Gauss-Newton with normal priors on unknowns and on each exposure's drift;
+    variance of a mean bin = Poisson / pixels + (MODEL_ERROR x counts)^2.
+    """
+    nuisances = population_nuisances(data.thresholds_kev.size)
+    problem = _Problem(
+        setup=setup,
+        nuisances=nuisances,
+        areal=data.areal_density,
+        current=data.current_ma,
+        time=data.count_time_s,
+        nominal=data.thresholds_kev,
+        spread_kev=spread_kev,
+        samples=samples,
+    )
+    observed = data.above.mean(axis=0)
+    prior = np.array([n.start for n in nuisances])
+    values = prior.copy()
+    for i, nuisance in enumerate(nuisances):
+        if start is not None and nuisance.name in start:
+            values[i] = start[nuisance.name]
+    drift = np.zeros(observed.shape[0])
+    heights = problem.heights(values)
+    if start is None:
+        values[0] = _first_flux(problem, values, heights, observed)
+        prior[0] = values[0]
+    covariance = np.empty((0, 0))
+    for turn in range(rounds):
+        values, drift, covariance = _gauss_newton(
+            problem, values, drift, prior, observed, data.above.shape[0]
+        )
+        if progress is not None:
+            progress((turn + 1) / rounds)
+    heights = problem.heights(values)
+    return _result(problem, values, drift, covariance, heights, data)
+
+
+def _first_flux(
+    problem: _Problem,
+    values: NDArray[np.float64],
+    heights: NDArray[np.float64],
+    observed: NDArray[np.float64],
+) -> float:
+    """Logarithm of the flux that meets the lowest threshold's counts."""
+    low = 10.0
+    trial = values.copy()
+    trial[0] = low
+    counted = problem.predict(trial, np.zeros(observed.shape[0]), heights)
+    ratio = np.median(observed[:, 0] / counted[:, 0])
+    if not np.isfinite(ratio) or ratio <= 0.0:
+        msg = "the open and wedge exposures hold no counts above the lowest threshold"
+        raise CalibrationError(msg)
+    return float(low + np.log(ratio))
+
+
+def _gauss_newton(
+    problem: _Problem,
+    values: NDArray[np.float64],
+    drift: NDArray[np.float64],
+    prior: NDArray[np.float64],
+    observed: NDArray[np.float64],
+    pixels: int,
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
+    """One round: new values, new drift, covariance of both."""
+    heights = problem.heights(values)
+    at = problem.predict(values, drift, heights)
+    columns = []
+    for i, nuisance in enumerate(problem.nuisances):
+        moved = values.copy()
+        moved[i] += nuisance.step
+        other = problem.heights(moved) if nuisance.changes_heights else heights
+        change = problem.predict(moved, drift, other) - at
+        columns.append(counts_to_bins(change / nuisance.step).ravel())
+    expected = counts_to_bins(at)
+    for e in range(at.shape[0]):
+        one = np.zeros_like(expected)
+        one[e] = expected[e]
+        columns.append(one.ravel())
+    jacobian = np.stack(columns, axis=1)
+    floor = np.maximum(expected, 1e-3)
+    weight = 1.0 / (floor / pixels + (MODEL_ERROR * floor) ** 2).ravel()
+    spread = np.concatenate(
+        [[n.spread for n in problem.nuisances], np.full(drift.size, DRIFT_SPREAD)]
+    )
+    information = (jacobian.T * weight) @ jacobian + np.diag(1.0 / spread**2)
+    score = jacobian.T @ (weight * (counts_to_bins(observed) - expected).ravel())
+    score -= np.concatenate([values - prior, drift]) / spread**2
+    move = np.linalg.solve(information, score)
+    limit = np.array([10.0 * n.spread for n in problem.nuisances])
+    step = np.clip(move[: values.size], -limit, limit)
+    # logarithms move by at most a factor of two in one round
+    for i, nuisance in enumerate(problem.nuisances):
+        if nuisance.name.startswith("ln_"):
+            step[i] = np.clip(step[i], -np.log(2.0), np.log(2.0))
+        if nuisance.name == "trapping":
+            step[i] = max(step[i], -values[i] - 0.02)
+    return values + step, drift + move[values.size :], np.linalg.inv(information)
+
+
+def _result(
+    problem: _Problem,
+    values: NDArray[np.float64],
+    drift: NDArray[np.float64],
+    covariance: NDArray[np.float64],
+    heights: NDArray[np.float64],
+    data: WedgeData,
+) -> Population:
+    """Collect a fit, and refuse one that does not come near the data."""
+    named = as_mapping(problem.nuisances, values)
+    expected = counts_to_bins(problem.predict(values, drift, heights))
+    observed = counts_to_bins(data.above.mean(axis=0))
+    residual = observed / expected - 1.0
+    error = 1.0 / np.sqrt(np.maximum(expected, 1e-3) * data.above.shape[0])
+    if not np.all(np.isfinite(residual)) or np.median(np.abs(residual)) > 0.2:
+        msg = (
+            "the forward model does not come near the scan's mean counts (median "
+            f"departure {100 * np.median(np.abs(residual)):.0f} %); check voltage, "
+            "filters, sensor and threshold energies in the file"
+        )
+        raise CalibrationError(msg)
+    deviation = np.sqrt(np.diag(covariance))
+    return Population(
+        model=problem.setup.model(named, heights=heights),
+        values=named,
+        errors={
+            n.name: float(d) for n, d in zip(problem.nuisances, deviation, strict=False)
+        },
+        photons_per_mas=float(np.exp(named["ln_flux"])),
+        shift_kev=_shifts(named, problem.nominal.size),
+        drift=drift,
+        residual=residual,
+        residual_error=error,
+    )
