@@ -23,6 +23,7 @@ from spectral.physics.tube_target import (
     escape,
     path_length,
     stopping_power,
+    towards_window,
     tungsten_attenuation,
 )
 
@@ -147,11 +148,11 @@ def _bremsstrahlung(
         * path_length(voltage_kv)
         / np.sin(np.deg2rad(anode_angle_deg))
     )
-    u = electron / voltage_kv
     per_kev = (
         bremsstrahlung_per_path(electron, photon)
         / stopping_power(electron)
-        * escape(u, absorbed[:, None])
+        * towards_window(voltage_kv, electron, anode_angle_deg)
+        * escape(voltage_kv, electron, absorbed[:, None])
     )
     return np.asarray((span * per_kev) @ _UNIT_WEIGHTS) / (4.0 * np.pi)
 

@@ -106,7 +106,7 @@ def _vacancies_by_electrons(
         * k_ionisation(electron)
         / stopping_power(electron)
     )
-    return float(np.sum(step * per_kev * escape(electron / voltage_kv, absorbed)))
+    return float(np.sum(step * per_kev * escape(voltage_kv, electron, absorbed)))
 
 
 def _vacancies_by_photons(
@@ -134,7 +134,7 @@ def _vacancies_by_photons(
             electron, np.broadcast_to(photon[:, None], span.shape)
         )
         / stopping_power(electron)
-        * escape(electron / voltage_kv, np.zeros(1)),
+        * escape(voltage_kv, electron, np.zeros(1)),
         axis=1,
     )
     attenuation = tungsten_attenuation(photon)

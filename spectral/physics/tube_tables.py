@@ -41,39 +41,93 @@ BREMSSTRAHLUNG_MB = np.array([
      6.381, 5.901, 5.481, 5.117, 4.774, 4.471],
 ])
 
-# Electrons in thick tungsten, normal incidence, against u = energy over start energy.
-# Mean of 30, 60, 100 and 150 keV (15 000 electrons each): in these units the four
-# differ by 2 to 4 % only. The walk: single elastic collisions after the screened
-# Rutherford formula, continuous slowing down after Bethe's formula
-# (tests/reference/test_electron_depths.py walks it again).
-# Source: the formulas of D. C. Joy, Monte Carlo Modeling for Electron Microscopy and
-# Microanalysis, Oxford (1995), ch. 3, from memory; the digits are our own run.
-ELECTRON_U = np.array([
-    0.125, 0.175, 0.225, 0.275, 0.325, 0.375, 0.425, 0.475, 0.525, 0.575,
-    0.625, 0.675, 0.725, 0.775, 0.825, 0.875, 0.925, 0.975, 1.0,
+# Electrons in thick tungsten, upright incidence. Rows: start energies T0; columns:
+# the middle of each interval of u = energy / T0.
+# A walk of our own, 30 000 electrons a row: single elastic collisions after the
+# screened Rutherford formula, hard collisions with electrons (from 0.4 % of T0 up)
+# after Moller's, the rest of the stopping power spread evenly; knocked-on electrons
+# are followed too. tests/reference/test_electron_depths.py walks it again.
+# Source of the formulas, from memory: D. C. Joy, Monte Carlo Modeling for Electron
+# Microscopy and Microanalysis, Oxford (1995), ch. 3 (elastic); ICRU Report 37 (1984),
+# eq. 2.16 (Moller). Standard error of the digits: about 0.5 % near u = 1.
+ELECTRON_START_KEV = np.array([20.0, 40.0, 80.0, 160.0])
+ELECTRON_U_BORDERS = np.array(
+    [0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.775, 0.85, 0.9, 0.94, 0.97, 0.985, 1.0]
+)
+# Path at u per electron, over the path dT / S(T) of steady slowing down.
+ELECTRON_PATH = np.array([
+    [0.675, 0.519, 0.478, 0.472, 0.488, 0.520, 0.565,
+     0.643, 0.735, 0.861, 1.016, 1.205, 1.711],
+    [0.654, 0.528, 0.500, 0.497, 0.516, 0.551, 0.596,
+     0.667, 0.761, 0.882, 1.034, 1.189, 1.537],
+    [0.635, 0.527, 0.502, 0.503, 0.522, 0.556, 0.615,
+     0.687, 0.778, 0.902, 1.035, 1.168, 1.433],
+    [0.636, 0.539, 0.518, 0.524, 0.545, 0.582, 0.636,
+     0.712, 0.810, 0.919, 1.038, 1.159, 1.378],
 ])
-# Path walked per electron while at u, over the unlimited path: 1 less what left.
-ELECTRON_REMAINING = np.array([
-    0.4965, 0.4976, 0.4996, 0.5021, 0.5062, 0.5115, 0.5187, 0.5277, 0.5400, 0.5554,
-    0.5752, 0.6008, 0.6327, 0.6748, 0.7319, 0.8055, 0.8984, 0.9786, 1.0,
-])
-# Mean depth at u, over the path length from start to 5 keV.
+# Mean depth at u, over the unbent path from T0 to 5 keV.
 ELECTRON_DEPTH = np.array([
-    0.1717, 0.1713, 0.1706, 0.1697, 0.1682, 0.1664, 0.1639, 0.1607, 0.1566, 0.1518,
-    0.1461, 0.1390, 0.1302, 0.1192, 0.1055, 0.0890, 0.0667, 0.0300, 0.0,
+    [0.1600, 0.1690, 0.1707, 0.1682, 0.1626, 0.1529, 0.1411,
+     0.1247, 0.1063, 0.0880, 0.0681, 0.0488, 0.0226],
+    [0.1578, 0.1647, 0.1660, 0.1633, 0.1585, 0.1489, 0.1357,
+     0.1189, 0.1004, 0.0818, 0.0623, 0.0434, 0.0189],
+    [0.1582, 0.1654, 0.1660, 0.1637, 0.1576, 0.1466, 0.1331,
+     0.1164, 0.0979, 0.0794, 0.0594, 0.0403, 0.0170],
+    [0.1615, 0.1682, 0.1688, 0.1654, 0.1582, 0.1472, 0.1333,
+     0.1161, 0.0969, 0.0774, 0.0570, 0.0380, 0.0156],
 ])
-# Mean squared over variance of the depth: the shape parameter of a gamma law.
+# Mean squared over variance of the depth: the shape of a gamma law.
 ELECTRON_SHAPE = np.array([
-    3.383, 3.373, 3.356, 3.338, 3.310, 3.291, 3.275, 3.254, 3.216, 3.208,
-    3.211, 3.220, 3.262, 3.325, 3.479, 3.948, 5.026, 2.804, 2.804,
+    [2.53, 2.75, 2.82, 2.82, 2.79, 2.76, 2.75,
+     2.75, 2.86, 3.05, 3.46, 4.30, 2.19],
+    [2.63, 2.84, 2.90, 2.90, 2.87, 2.83, 2.83,
+     2.84, 2.97, 3.30, 3.94, 5.40, 2.39],
+    [2.68, 2.88, 2.97, 2.97, 2.90, 2.82, 2.85,
+     2.94, 3.11, 3.54, 4.46, 6.31, 2.53],
+    [2.79, 3.01, 3.09, 3.04, 2.99, 2.93, 2.98,
+     3.07, 3.33, 3.86, 5.03, 7.45, 2.64],
 ])
-# Mean of the Legendre polynomials P1 and P2 of the direction cosine to the beam.
-ELECTRON_P1 = np.array([
-    0.0, 0.0, 0.001, 0.002, 0.002, 0.004, 0.005, 0.008, 0.008, 0.009,
-    0.012, 0.020, 0.035, 0.051, 0.075, 0.124, 0.248, 0.620, 1.0,
-])
-ELECTRON_P2 = np.array([
-    0.0, 0.0, 0.0, 0.0, 0.0, -0.001, -0.001, -0.002, -0.003, -0.003,
-    -0.004, -0.005, -0.006, -0.007, -0.010, -0.012, 0.011, 0.336, 1.0,
+# Mean Legendre polynomials 1 to 4 of the direction cosine to the beam.
+ELECTRON_LEGENDRE = np.stack([
+    np.array([
+        [0.000, -0.001, 0.002, 0.007, 0.008, 0.016, 0.027,
+         0.054, 0.092, 0.150, 0.258, 0.402, 0.705],
+        [0.003, 0.001, 0.006, 0.006, 0.012, 0.018, 0.039,
+         0.064, 0.106, 0.165, 0.287, 0.459, 0.752],
+        [0.002, 0.004, 0.002, 0.006, 0.015, 0.017, 0.037,
+         0.067, 0.111, 0.180, 0.314, 0.501, 0.781],
+        [0.000, 0.000, 0.007, 0.008, 0.012, 0.025, 0.047,
+         0.074, 0.127, 0.207, 0.344, 0.540, 0.808],
+    ]),
+    np.array([
+        [0.001, 0.000, -0.001, 0.001, -0.002, -0.005, -0.004,
+         -0.004, -0.007, -0.001, 0.029, 0.110, 0.458],
+        [0.000, 0.001, -0.001, -0.003, -0.006, -0.003, -0.007,
+         -0.006, -0.007, 0.001, 0.038, 0.142, 0.514],
+        [0.000, -0.003, 0.001, -0.004, -0.002, -0.003, -0.005,
+         -0.007, -0.005, 0.003, 0.044, 0.170, 0.552],
+        [0.000, 0.000, 0.000, -0.001, 0.001, -0.005, -0.006,
+         -0.009, -0.007, 0.004, 0.056, 0.202, 0.591],
+    ]),
+    np.array([
+        [0.001, -0.001, 0.000, -0.001, 0.000, -0.002, 0.001,
+         0.001, 0.001, 0.002, 0.012, 0.042, 0.319],
+        [0.000, -0.001, -0.002, 0.000, 0.000, 0.001, -0.001,
+         0.001, 0.002, 0.005, 0.015, 0.050, 0.361],
+        [0.000, 0.000, -0.001, 0.000, -0.001, 0.001, 0.000,
+         0.002, 0.003, 0.004, 0.012, 0.059, 0.391],
+        [0.000, 0.000, 0.001, -0.001, -0.001, 0.001, 0.002,
+         0.002, 0.001, 0.004, 0.013, 0.068, 0.425],
+    ]),
+    np.array([
+        [0.000, 0.001, -0.001, 0.000, -0.001, -0.001, -0.001,
+         -0.001, 0.001, 0.002, 0.006, 0.018, 0.238],
+        [0.000, 0.000, 0.000, 0.001, -0.001, 0.001, 0.000,
+         0.001, 0.000, 0.000, 0.007, 0.022, 0.267],
+        [0.000, 0.000, 0.001, 0.000, 0.000, -0.001, -0.001,
+         0.001, 0.000, 0.003, 0.005, 0.024, 0.288],
+        [0.000, 0.000, -0.001, 0.000, 0.001, 0.002, -0.001,
+         0.000, 0.001, -0.001, 0.005, 0.024, 0.312],
+    ]),
 ])
 # fmt: on

@@ -6,7 +6,8 @@ from functools import cache
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.interpolate import CubicSpline, PchipInterpolator, RectBivariateSpline
+from numpy.polynomial.legendre import Legendre, leggauss
+from scipy.interpolate import CubicSpline, RectBivariateSpline
 
 from spectral.physics import tube_tables as tables
 from spectral.physics.cross_sections import (
@@ -27,7 +28,7 @@ AVOGADRO_PER_MOL = 6.02214076e23  # SI, exact
 MEAN_EXCITATION_KEV = 0.727
 # The path length that scales the depths ends here.
 _STOPPED_KEV = 5.0
-_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(20)
+_NODES, _WEIGHTS = leggauss(20)
 
 
 def stopping_power(electron_kev: ArrayLike) -> NDArray[np.float64]:
@@ -77,54 +78,55 @@ def bremsstrahlung_per_path(
 
 
 def towards_window(
-    u: NDArray[np.float64],
-    electron_kev: NDArray[np.float64],
-    photon_kev: NDArray[np.float64],
-    anode_angle_deg: float,
+    voltage_kv: float, electron_kev: NDArray[np.float64], anode_angle_deg: float
 ) -> NDArray[np.float64]:
     """Radiation into the beam's direction, over that of isotropic radiation.
 
     Notes
     -----
-    Dipole pattern seen from a moving electron: a share 1 - k/T of transverse, k/T of
-    longitudinal acceleration (our interpolation between the soft and the tip limit),
-    to second order in Legendre polynomials and averaged over the electrons'
-    directions. It matters only near the tip, where electrons still fly straight.
-    Source: form of E. Acosta, X. Llovet, F. Salvat, Appl. Phys. Lett. 80 (2002) 3228.
+    Isotropic for the moving electron, so beamed forward for the target, to fourth
+    order in Legendre polynomials, averaged over the electrons' directions. It matters
+    within some 10 % of the end point, where electrons still fly straight. The weaker
+    polarisation of the true pattern is left out.
+    Source: Lorentz transformation of a solid angle; the averaging over directions
+    follows A. Omar, P. Andreo, G. Poludniowski, Med. Phys. 47 (2020) 4763.
     """
     cosine = -np.sin(np.deg2rad(anode_angle_deg))
-    second = 0.5 * (3.0 * cosine**2 - 1.0)
-    p1, p2 = _legendre_of_electrons()
     tau = electron_kev / ELECTRON_REST_KEV
     beta = np.sqrt(tau * (tau + 2.0)) / (tau + 1.0)
-    share = photon_kev / electron_kev
-    across, along = _dipole_moments()
-    mix = share[..., None]
-    moments = (1.0 - mix) * across(beta) + mix * along(beta)
-    pattern = moments[..., 0] * p1(u) * cosine + moments[..., 1] * p2(u) * second
-    return np.asarray(1.0 + pattern)
+    beamed = _beaming()(beta)
+    u, log_start = electron_kev / voltage_kv, np.log(voltage_kv)
+    pattern = np.ones_like(electron_kev)
+    for order, electrons in enumerate(_directions()):
+        seen = Legendre.basis(order + 1)(cosine)
+        pattern += beamed[..., order] * electrons.ev(log_start, u) * seen
+    return pattern
 
 
 def escape(
-    u: NDArray[np.float64], depths_of_absorption: NDArray[np.float64]
+    voltage_kv: float,
+    electron_kev: NDArray[np.float64],
+    depths_of_absorption: NDArray[np.float64],
 ) -> NDArray[np.float64]:
-    """Mean share of photons that leave, times the share of electrons still inside.
+    """Mean share of photons that leave, times path over that of steady slowing down.
 
     Parameters
     ----------
-    u : array
-        Electron energy over start energy, 0.1 to 1.
-    depths_of_absorption : array, broadcast with `u`
-        mu * path_length / sin(anode angle): how often the electrons' path would
-        absorb the photon.
+    voltage_kv : float
+        Start energy of the electrons.
+    electron_kev : array
+        Energy at which they radiate.
+    depths_of_absorption : array, broadcast with `electron_kev`
+        mu * path_length / sin(anode angle): how often the electrons' unbent path
+        would absorb the photon.
 
     Notes
     -----
     Laplace transform of a gamma law with the mean and variance of the depth.
     """
-    remaining, depth, shape = _electron_depths()
-    k = shape(u)
-    return np.asarray(remaining(u) * (1.0 + depths_of_absorption * depth(u) / k) ** -k)
+    u, log_start = electron_kev / voltage_kv, np.log(voltage_kv)
+    path, depth, shape = (curve.ev(log_start, u) for curve in _depths())
+    return np.asarray(path * (1.0 + depths_of_absorption * depth / shape) ** -shape)
 
 
 def tungsten_attenuation(energy_kev: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -146,38 +148,46 @@ def _scaled_cross_section() -> RectBivariateSpline:
 
 
 @cache
-def _electron_depths() -> tuple[
-    PchipInterpolator, PchipInterpolator, PchipInterpolator
-]:
-    return (
-        PchipInterpolator(tables.ELECTRON_U, tables.ELECTRON_REMAINING),
-        PchipInterpolator(tables.ELECTRON_U, tables.ELECTRON_DEPTH),
-        PchipInterpolator(tables.ELECTRON_U, tables.ELECTRON_SHAPE),
+def _depths() -> tuple[RectBivariateSpline, ...]:
+    """Path, mean depth and shape against (ln start energy, u)."""
+    return tuple(
+        _over_start_and_u(table)
+        for table in (
+            tables.ELECTRON_PATH,
+            tables.ELECTRON_DEPTH,
+            tables.ELECTRON_SHAPE,
+        )
     )
 
 
 @cache
-def _legendre_of_electrons() -> tuple[PchipInterpolator, PchipInterpolator]:
-    return (
-        PchipInterpolator(tables.ELECTRON_U, tables.ELECTRON_P1),
-        PchipInterpolator(tables.ELECTRON_U, tables.ELECTRON_P2),
+def _directions() -> tuple[RectBivariateSpline, ...]:
+    """Legendre means of the electrons' directions against (ln start energy, u)."""
+    return tuple(_over_start_and_u(table) for table in tables.ELECTRON_LEGENDRE)
+
+
+def _over_start_and_u(table: NDArray[np.float64]) -> RectBivariateSpline:
+    borders = tables.ELECTRON_U_BORDERS
+    return RectBivariateSpline(
+        np.log(tables.ELECTRON_START_KEV),
+        0.5 * (borders[1:] + borders[:-1]),
+        table,
+        kx=2,
+        ky=2,
     )
 
 
 @cache
-def _dipole_moments() -> tuple[CubicSpline, CubicSpline]:
-    """First and second Legendre coefficients against beta, across and along."""
+def _beaming() -> CubicSpline:
+    """Legendre coefficients 1 to 4 of the beamed pattern against beta."""
     beta = np.linspace(0.0, 0.8, 33)
-    cosine, weight = np.polynomial.legendre.leggauss(32)
-    doppler = (1.0 - beta**2) / (1.0 - np.outer(cosine, beta)) ** 2
-    own = (cosine[:, None] - beta) / (1.0 - np.outer(cosine, beta))
-    curves = []
-    for dipole in (0.75 * (1.0 + own**2), 1.5 * (1.0 - own**2)):
-        pattern = 0.5 * weight[:, None] * doppler * dipole
-        first = 3.0 * np.sum(pattern * cosine[:, None], axis=0)
-        second = 5.0 * np.sum(pattern * (1.5 * cosine**2 - 0.5)[:, None], axis=0)
-        curves.append(CubicSpline(beta, np.stack([first, second], axis=-1)))
-    return curves[0], curves[1]
+    cosine, weight = leggauss(32)
+    pattern = (1.0 - beta**2) / (1.0 - np.outer(cosine, beta)) ** 2
+    moments = [
+        (order + 0.5) * (weight * Legendre.basis(order)(cosine)) @ pattern
+        for order in range(1, 5)
+    ]
+    return CubicSpline(beta, np.stack(moments, axis=-1))
 
 
 @cache
