@@ -7,8 +7,14 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.forward.counting_model import counts_to_bins
 from spectral.forward.node_response import NodeTables, node_tables
-from spectral.forward.pixel_response import PixelDepartures, departure_names
+from spectral.forward.pixel_response import (
+    PixelDepartures,
+    curve_tables,
+    departure_names,
+    expected_above,
+)
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -175,6 +181,33 @@ class Calibration:
         return PixelDepartures(
             values=self.departures.reshape(-1, self.departures.shape[-1])[flat]
         )
+
+    def expected_bins(
+        self,
+        areal_density: NDArray[np.float64],
+        current_ma: NDArray[np.float64],
+        output: NDArray[np.float64],
+        flat: NDArray[np.int64],
+    ) -> NDArray[np.float64]:
+        """Counts per second in each bin, by the full model.
+
+        Parameters
+        ----------
+        areal_density : array, shape (case, material), in g/cm2
+        current_ma, output : arrays, shape (case,)
+            Tube current and the tube's relative output at it.
+        flat : array of int64, shape (pixel,)
+            Flat indices of the pixels.
+
+        Returns
+        -------
+        array, shape (pixel, case, bin), in 1/s
+        """
+        rate = self.photons_per_mas * current_ma * output
+        tables = curve_tables(self.model, areal_density, rate)
+        above, _ = expected_above(tables, self.levels_kev, self.pixels(flat))
+        factor = np.exp(self.residual.log_factor(areal_density, current_ma))
+        return counts_to_bins(above) * factor
 
     def nodes(self, current_ma: float, output: float = 1.0) -> NodeTables:
         """Node tables at one tube current and relative output of the tube."""

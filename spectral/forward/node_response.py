@@ -29,8 +29,8 @@ if TYPE_CHECKING:
 
     from spectral.forward.counting_model import CountingModel
 
-NODE_COUNTS = (8, 10, 12, 14, 16, 20, 24)
-TOLERANCE = 2e-5
+NODE_COUNTS = (8, 12, 16, 20, 24)
+TOLERANCE = 5e-5
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

@@ -137,7 +137,8 @@ class Setup:
         elements |= {e for m in materials for e in m.weight_fractions}
         elements |= set(sensor.weight_fractions)
         edges = sorted(k for k in map(k_edge_kev, elements) if LEAST_KEV < k < top)
-        borders, centre = energy_bins(LEAST_KEV, top, width_kev, edges=edges)
+        bins = energy_bins(LEAST_KEV, top, width_kev, edges_kev=edges)
+        borders, centre = bins.borders_kev, bins.centres_kev
         attenuation = np.array(
             [mass_attenuation(m.weight_fractions, centre) for m in materials]
         )
