@@ -17,6 +17,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numba import njit
 
+from spectral.kernels.charge_division import TOUCHED, collect
 from spectral.kernels.random_stream import substream, uniform
 
 if TYPE_CHECKING:
@@ -28,122 +29,7 @@ if TYPE_CHECKING:
 SPREAD = (0.8566748838545029, 0.733891856627126, 0.6287067210378086, 0.53859725722361)
 DRAWS_PER_FLIGHT = 8
 MOST_FLIGHTS = 16
-TOUCHED = 64
-SQRT_HALF = math.sqrt(0.5)
 ELECTRON_REST_KEV = 510.99895
-
-
-@njit(nogil=True, cache=True)
-def _normal_cdf(value: float) -> float:
-    """Standard normal distribution function."""
-    return 0.5 * math.erfc(-value * SQRT_HALF)
-
-
-@njit(nogil=True, cache=True)
-def _divide(
-    place: float,
-    sigma: float,
-    pitch: float,
-    half_gap: float,
-    gap_loss: float,
-    share: NDArray[np.float64],
-) -> None:
-    """Shares of a cloud at ``place`` in [0, pitch) left, inside and right.
-
-    Of charge that lands within ``half_gap`` of a border, ``gap_loss`` is lost.
-    """
-    share[0] = 0.0
-    share[1] = 1.0
-    share[2] = 0.0
-    near = 6.0 * sigma + half_gap
-    if place < near:
-        border = _normal_cdf(-place / sigma)
-        share[0] = border
-        share[1] -= border
-        if half_gap > 0.0:
-            before = _normal_cdf((-half_gap - place) / sigma)
-            after = _normal_cdf((half_gap - place) / sigma)
-            share[0] -= gap_loss * (border - before)
-            share[1] -= gap_loss * (after - border)
-    if pitch - place < near:
-        border = _normal_cdf((place - pitch) / sigma)
-        share[2] = border
-        share[1] -= border
-        if half_gap > 0.0:
-            before = _normal_cdf((place - pitch - half_gap) / sigma)
-            after = _normal_cdf((place - pitch + half_gap) / sigma)
-            share[2] -= gap_loss * (border - before)
-            share[1] -= gap_loss * (after - border)
-
-
-@njit(nogil=True, cache=True)
-def _read_cloud(
-    cloud_um: NDArray[np.float64],
-    energy: float,
-    drift: float,
-    energy_step: float,
-    drift_step: float,
-) -> float:
-    """Bilinear reading of the cloud's size table."""
-    row = min(energy / energy_step, cloud_um.shape[0] - 1.000001)
-    column = min(drift / drift_step, cloud_um.shape[1] - 1.000001)
-    i, j = int(row), int(column)
-    u, v = row - i, column - j
-    low = cloud_um[i, j] + v * (cloud_um[i, j + 1] - cloud_um[i, j])
-    high = cloud_um[i + 1, j] + v * (cloud_um[i + 1, j + 1] - cloud_um[i + 1, j])
-    return low + u * (high - low)
-
-
-@njit(nogil=True, cache=True)
-def _collect(
-    x: float,
-    y: float,
-    drift: float,
-    energy: float,
-    normal: float,
-    slab: NDArray[np.float64],
-    cloud_um: NDArray[np.float64],
-    collected: NDArray[np.float64],
-    work: NDArray[np.float64],
-    touched: NDArray[np.int64],
-    n_touched: int,
-    charge: NDArray[np.float64],
-) -> int:
-    """Divide one deposit between pixels; returns how many pixels hold charge."""
-    pitch = slab[1]
-    energy += normal * math.sqrt(slab[4] * energy)
-    if energy <= 0.0:
-        return n_touched
-    sigma = _read_cloud(cloud_um, energy, drift, slab[5], slab[6])
-    column = min(drift / slab[6], collected.size - 1.000001)
-    cell = int(column)
-    kept = collected[cell] + (column - cell) * (collected[cell + 1] - collected[cell])
-    energy *= kept
-    ix = math.floor(x / pitch)
-    iy = math.floor(y / pitch)
-    _divide(x - ix * pitch, sigma, pitch, slab[2], slab[3], work[0])
-    _divide(y - iy * pitch, sigma, pitch, slab[2], slab[3], work[1])
-    for a in range(3):
-        for b in range(3):
-            part = energy * work[0, a] * work[1, b]
-            if part < 1e-6:
-                continue
-            px = ix + a - 1
-            py = iy + b - 1
-            found = -1
-            for j in range(n_touched):
-                if touched[j, 0] == px and touched[j, 1] == py:
-                    found = j
-                    break
-            if found < 0 and n_touched < TOUCHED:
-                found = n_touched
-                touched[found, 0] = px
-                touched[found, 1] = py
-                charge[found] = 0.0
-                n_touched += 1
-            if found >= 0:
-                charge[found] += part
-    return n_touched
 
 
 @njit(nogil=True, cache=True)
@@ -162,6 +48,41 @@ def _turn(
     out[3] = cosine * ux + (c * ux * uz - s * uy) / across
     out[4] = cosine * uy + (c * uy * uz + s * ux) / across
     out[5] = cosine * uz - c * across
+
+
+@njit(nogil=True, cache=True)
+def _point(cosine: float, azimuth: float, out: NDArray[np.float64]) -> None:
+    """Direction by its angles, written to ``out``."""
+    sine = math.sqrt(1.0 - cosine * cosine)
+    out[3] = sine * math.cos(azimuth)
+    out[4] = sine * math.sin(azimuth)
+    out[5] = cosine
+
+
+@njit(nogil=True, cache=True)
+def _choose_line(
+    chosen: float,
+    cell: int,
+    part: float,
+    line_reach: NDArray[np.float64],
+    line_kev: NDArray[np.float64],
+) -> float:
+    """Energy of the K photon that an absorption sends out, or 0."""
+    for line in range(line_kev.size):
+        low = line_reach[line, cell]
+        if chosen < low + part * (line_reach[line, cell + 1] - low):
+            return float(line_kev[line])
+    return 0.0
+
+
+@njit(nogil=True, cache=True)
+def _choose_cosine(chosen: float, row: float, cosines: NDArray[np.float64]) -> float:
+    """Cosine of a Compton scattering, at a quantile and the nearest energy."""
+    i = int(min(row, cosines.shape[0] - 1.0) + 0.5)
+    column = chosen * (cosines.shape[1] - 1)
+    at = int(column)
+    low = cosines[i, at]
+    return float(low + (column - at) * (cosines[i, at + 1] - low))
 
 
 @njit(nogil=True, cache=True)
@@ -204,43 +125,24 @@ def _follow(
         flights += 1
         if flight[2] < 0.0 or flight[2] > thickness:
             break
-        deposit = energy
         share = photo_share[cell] + part * (photo_share[cell + 1] - photo_share[cell])
+        absorbed = uniform(key, draw + np.uint64(1)) < share
         azimuth = 2.0 * math.pi * uniform(key, draw + np.uint64(4))
         turned = uniform(key, draw + np.uint64(3))
-        if uniform(key, draw + np.uint64(1)) < share:
+        if absorbed:
             chosen = uniform(key, draw + np.uint64(2))
-            for line in range(line_kev.size):
-                reach = line_reach[line, cell] + part * (
-                    line_reach[line, cell + 1] - line_reach[line, cell]
-                )
-                if chosen < reach:
-                    cosine = 2.0 * turned - 1.0
-                    sine = math.sqrt(1.0 - cosine * cosine)
-                    following[3] = sine * math.cos(azimuth)
-                    following[4] = sine * math.sin(azimuth)
-                    following[5] = cosine
-                    deposit = energy - line_kev[line]
-                    break
+            remaining = _choose_line(chosen, cell, part, line_reach, line_kev)
+            _point(2.0 * turned - 1.0, azimuth, following)
         else:
-            row = min(energy / grid[2], cosines.shape[0] - 1.0)
-            column = turned * (cosines.shape[1] - 1)
-            at = int(column)
-            i = int(row + 0.5)
-            cosine = cosines[i, at] + (column - at) * (
-                cosines[i, at + 1] - cosines[i, at]
-            )
-            left = energy / (1.0 + energy / ELECTRON_REST_KEV * (1.0 - cosine))
-            deposit = energy - left
+            cosine = _choose_cosine(turned, energy / grid[2], cosines)
+            remaining = energy / (1.0 + energy / ELECTRON_REST_KEV * (1.0 - cosine))
             _turn(flight, cosine, azimuth, following)
         radius = math.sqrt(-2.0 * math.log(uniform(key, draw + np.uint64(5))))
         normal = radius * math.cos(2.0 * math.pi * uniform(key, draw + np.uint64(6)))
-        remaining = energy - deposit
-        if remaining > 0.0 and (remaining < grid[3] or flights == MOST_FLIGHTS):
-            deposit = energy
+        if remaining < grid[3] or flights == MOST_FLIGHTS:
             remaining = 0.0
-        n_touched = _collect(
-            flight[0], flight[1], thickness - flight[2], deposit, normal, slab,
+        n_touched = collect(
+            flight[0], flight[1], thickness - flight[2], energy - remaining, normal, slab,
             cloud_um, collected, work, touched, n_touched, charge,
         )  # fmt: skip
         if remaining == 0.0:

@@ -1,8 +1,7 @@
-"""Compiled pulse trains: pulses in time, and how often their sum rises through levels.
+"""Compiled pulse trains: each pixel's pulses in time, drawn from its own stream.
 
-`count_crossings` is the comparator and knows nothing of chance; `expose_pixels` draws
-each pixel's pulses from its own stream of random numbers and hands them over block by
-block. Flat arrays in, ``counts`` filled, no validation. The NumPy twin stands in
+Pulses are drawn block by block and handed to `spectral.kernels.comparator`. Flat arrays
+in, ``counts`` filled, no validation. The NumPy twin stands in
 `spectral.kernels.pulse_train_numpy`.
 """
 
@@ -14,175 +13,24 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numba import njit
 
+from spectral.kernels.comparator import (
+    CR_RC,
+    RING,
+    STATE,
+    count_crossings,
+    finish_train,
+)
 from spectral.kernels.random_stream import substream, uniform
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-RECTANGLE, EXPONENTIAL, CR_RC = 0, 1, 2
 BLOCK = 256
-RING = 256
-DRAWS_PER_PULSE = 5
-STATE = 6
-# state: 0 signal, 1 its rising part, 2 time of last arrival, 3 oldest, 4 next, 5 held
+DRAWS_PER_PULSE = 4
 BEFORE = 12.0  # pulse times that a train starts before the shutter opens
 
 
-@njit(nogil=True, cache=True)
-def _rectangles(
-    times: NDArray[np.float64],
-    heights: NDArray[np.float64],
-    pulses: int,
-    width: float,
-    levels: NDArray[np.float64],
-    state: NDArray[np.float64],
-    ring: NDArray[np.float64],
-    counts: NDArray[np.int64],
-) -> None:
-    """Up-crossings of a sum of rectangles of one width."""
-    signal = state[0]
-    oldest, following, held = int(state[3]), int(state[4]), int(state[5])
-    mask = ring.shape[1] - 1
-    lowest = levels[0]
-    for i in range(pulses):
-        t = times[i]
-        while held > 0 and (ring[0, oldest] <= t or held > mask):
-            signal -= ring[1, oldest]
-            oldest = (oldest + 1) & mask
-            held -= 1
-        if held == 0:
-            signal = 0.0
-        risen = signal + heights[i]
-        if t >= 0.0 and risen >= lowest:
-            for k in range(levels.size):
-                if signal < levels[k] <= risen:
-                    counts[k] += 1
-        signal = risen
-        ring[0, following] = t + width
-        ring[1, following] = heights[i]
-        following = (following + 1) & mask
-        held += 1
-    state[0] = signal
-    state[3], state[4], state[5] = oldest, following, held
-
-
-@njit(nogil=True, cache=True)
-def _exponentials(
-    times: NDArray[np.float64],
-    heights: NDArray[np.float64],
-    pulses: int,
-    decay: float,
-    levels: NDArray[np.float64],
-    state: NDArray[np.float64],
-    counts: NDArray[np.int64],
-) -> None:
-    """Up-crossings of a sum of pulses that rise at once and decay exponentially."""
-    signal, last = state[0], state[2]
-    lowest = levels[0]
-    for i in range(pulses):
-        t = times[i]
-        signal *= math.exp((last - t) / decay)
-        last = t
-        risen = signal + heights[i]
-        if t >= 0.0 and risen >= lowest:
-            for k in range(levels.size):
-                if signal < levels[k] <= risen:
-                    counts[k] += 1
-        signal = risen
-    state[0], state[2] = signal, last
-
-
-@njit(nogil=True, cache=True)
-def _rise(
-    signal: float,
-    rising: float,
-    span: float,
-    levels: NDArray[np.float64],
-    counts: NDArray[np.int64],
-) -> None:
-    """Up-crossings of (signal + rising s) exp(-s) for s from 0 to ``span``."""
-    if rising <= signal or rising <= 0.0:
-        return
-    if math.e * levels[0] > math.e * signal + rising:  # peak <= signal + rising / e
-        return
-    s = min(1.0 - signal / rising, span)
-    peak = (signal + rising * s) * math.exp(-s)
-    for k in range(levels.size):
-        if signal < levels[k] <= peak:
-            counts[k] += 1
-
-
-@njit(nogil=True, cache=True)
-def _semi_gaussians(
-    times: NDArray[np.float64],
-    heights: NDArray[np.float64],
-    pulses: int,
-    peaking: float,
-    levels: NDArray[np.float64],
-    state: NDArray[np.float64],
-    counts: NDArray[np.int64],
-) -> None:
-    """Up-crossings of a sum of CR-RC pulses (t/T) exp(1 - t/T)."""
-    signal, rising, last = state[0], state[1], state[2]
-    for i in range(pulses):
-        span = (times[i] - last) / peaking
-        if last >= 0.0:
-            _rise(signal, rising, span, levels, counts)
-        fall = math.exp(-span)
-        signal = (signal + rising * span) * fall
-        rising = rising * fall + math.e * heights[i]
-        last = times[i]
-    state[0], state[1], state[2] = signal, rising, last
-
-
-@njit(nogil=True, cache=True)
-def count_crossings(
-    shape: int,
-    times: NDArray[np.float64],
-    heights: NDArray[np.float64],
-    pulses: int,
-    pulse_time: float,
-    levels: NDArray[np.float64],
-    state: NDArray[np.float64],
-    ring: NDArray[np.float64],
-    counts: NDArray[np.int64],
-) -> None:
-    """Add to ``counts`` how often the sum of pulses rises through each level.
-
-    Parameters
-    ----------
-    shape : int
-        `RECTANGLE`, `EXPONENTIAL` or `CR_RC`.
-    times, heights : arrays, shape (>= pulses,), in ns and keV
-        Arrivals in order; a pulse has the height given at its peak. Arrivals before
-        0 build up the signal but are not counted.
-    pulses : int
-    pulse_time : float, in ns
-        Width, decay time or peaking time.
-    levels : array, shape (threshold,), in keV
-        The lowest first.
-    state : array, shape (STATE,)
-        Zeros at first; carries the signal from one call to the next.
-    ring : array, shape (2, power of two)
-        Workspace of the pulses that still stand.
-    counts : array of int64, shape (threshold,)
-        Added to.
-
-    Notes
-    -----
-    Exact for each shape: a sum of CR-RC pulses between two arrivals is
-    (a + b s) exp(-s), which has one maximum at s = 1 - a/b. Its rise after the last
-    arrival is not counted until `count_crossings` meets the next one.
-    """
-    if shape == RECTANGLE:
-        _rectangles(times, heights, pulses, pulse_time, levels, state, ring, counts)
-    elif shape == EXPONENTIAL:
-        _exponentials(times, heights, pulses, pulse_time, levels, state, counts)
-    else:
-        _semi_gaussians(times, heights, pulses, pulse_time, levels, state, counts)
-
-
-@njit(nogil=True, cache=True)
+@njit(nogil=True, cache=True, error_model="numpy")
 def fill_alias(
     weights: NDArray[np.float64],
     threshold: NDArray[np.float64],
@@ -228,7 +76,7 @@ def fill_alias(
     return total
 
 
-@njit(nogil=True, cache=True)
+@njit(nogil=True, cache=True, error_model="numpy")
 def _draw_block(
     key: np.uint64,
     first: int,
@@ -249,6 +97,12 @@ def _draw_block(
     """
     kinds = threshold.size
     cells = quantiles.shape[1] - 1
+    for i in range(0, times.size, 2):  # Box & Muller, Ann. Math. Stat. 29 (1958) 610
+        draw = np.uint64((first + i) * DRAWS_PER_PULSE + 3)
+        radius = noise * math.sqrt(-2.0 * math.log(uniform(key, draw)))
+        angle = 2.0 * math.pi * uniform(key, draw + np.uint64(DRAWS_PER_PULSE))
+        heights[i] = radius * math.cos(angle)
+        heights[i + 1] = radius * math.sin(angle)
     for i in range(times.size):
         draw = np.uint64((first + i) * DRAWS_PER_PULSE)
         last_time -= interval * math.log(uniform(key, draw))
@@ -262,19 +116,16 @@ def _draw_block(
             heights[i] = math.sqrt(
                 noise_floor * noise_floor - 2.0 * noise * noise * math.log(place)
             )
-            continue
-        place *= cells
-        cell = int(place)
-        low = quantiles[kind, cell]
-        high = quantiles[kind, cell + 1]
-        heights[i] = gain * (low + (place - cell) * (high - low))
-        if noise > 0.0:
-            radius = math.sqrt(-2.0 * math.log(uniform(key, draw + np.uint64(3))))
-            angle = 2.0 * math.pi * uniform(key, draw + np.uint64(4))
-            heights[i] = max(heights[i] + noise * radius * math.cos(angle), 0.0)
+        else:
+            place *= cells
+            cell = int(place)
+            low = quantiles[kind, cell]
+            high = quantiles[kind, cell + 1]
+            height = gain * (low + (place - cell) * (high - low))
+            heights[i] = max(height + heights[i], 0.0)
 
 
-@njit(nogil=True, cache=True)
+@njit(nogil=True, cache=True, error_model="numpy")
 def expose_pixels(
     key: np.uint64,
     first: int,
@@ -368,7 +219,8 @@ def expose_pixels(
             )  # fmt: skip
             block += 1
             drawn += pulses
-        if shape == CR_RC and state[2] >= 0.0:
-            span = (duration - state[2]) / pulse_time[pixel]
-            _rise(state[0], state[1], span, levels[pixel], counts[pixel])
+        if shape == CR_RC:
+            finish_train(
+                duration, pulse_time[pixel], levels[pixel], state, counts[pixel]
+            )
     return drawn

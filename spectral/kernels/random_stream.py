@@ -24,10 +24,10 @@ _SECOND = np.uint64(0x94D049BB133111EB)
 _S30 = np.uint64(30)
 _S27 = np.uint64(27)
 _S31 = np.uint64(31)
-_S11 = np.uint64(11)
+_S12 = np.uint64(12)
 _ONE = np.uint64(1)
-_UNIT = 2.0**-53
-_HALF_UNIT = 2.0**-54
+_UNIT = 2.0**-52
+_HALF_UNIT = 2.0**-53
 
 
 @njit(nogil=True, cache=True, inline="always")
@@ -43,7 +43,7 @@ def mix(word: np.uint64) -> np.uint64:
 def uniform(key: np.uint64, draw: np.uint64) -> float:
     """Draw number ``draw`` of stream ``key``, in the open interval (0, 1)."""
     word = mix(np.uint64(key) + (np.uint64(draw) + _ONE) * _STEP)
-    return float(word >> _S11) * _UNIT + _HALF_UNIT
+    return float(word >> _S12) * _UNIT + _HALF_UNIT
 
 
 @njit(nogil=True, cache=True, inline="always")
@@ -66,7 +66,7 @@ def uniform_array(
     """`uniform` of each pair of key and draw (broadcasting), at least 1-d."""
     key, draw = np.atleast_1d(key), np.atleast_1d(draw)
     word = mix_array(key + (draw + _ONE) * _STEP)
-    return (word >> _S11).astype(np.float64) * _UNIT + _HALF_UNIT
+    return (word >> _S12).astype(np.float64) * _UNIT + _HALF_UNIT
 
 
 def substream_array(

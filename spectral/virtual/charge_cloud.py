@@ -36,7 +36,8 @@ def electron_range_um(
     """
     mass = sum(w * atomic_mass(element) for element, w in weight_fractions.items())
     number = sum(w * atomic_number(element) for element, w in weight_fractions.items())
-    return 0.0276 * mass * energy_kev**1.67 / (number**0.89 * density_g_cm3)
+    factor = 0.0276 * mass / (number**0.89 * density_g_cm3)
+    return np.asarray(factor * energy_kev**1.67)
 
 
 def cloud_size_um(

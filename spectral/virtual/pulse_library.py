@@ -88,6 +88,49 @@ class PulseLibrary:
         return np.asarray(above * self.pulses_per_photon[:, None])
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class RecordedPhotons:
+    """Events of all energies in one row, of the photons that left a pulse at all.
+
+    Attributes
+    ----------
+    share : array, shape (energy,)
+        Of the photons that left a pulse.
+    first_photon : array, shape (energy + 1,)
+    begin : array, shape (photon + 1,)
+    height_kev : array of float32, shape (pulse,), in keV
+    offset : array of int16, shape (pulse, 2)
+    """
+
+    share: NDArray[np.float64]
+    first_photon: NDArray[np.int64]
+    begin: NDArray[np.int64]
+    height_kev: NDArray[np.float32]
+    offset: NDArray[np.int16]
+
+
+def recorded_photons(library: PulseLibrary) -> RecordedPhotons:
+    """Events of a library that kept them.
+
+    Raises
+    ------
+    InputError
+        If it did not.
+    """
+    if not library.events:
+        msg = "this library kept no events: build it with keep_events=True"
+        raise InputError(msg)
+    pulses = [np.diff(events.begin) for events in library.events]
+    left = [each[each > 0] for each in pulses]
+    return RecordedPhotons(
+        share=np.array([(each > 0).mean() for each in pulses]),
+        first_photon=np.concatenate([[0], np.cumsum([each.size for each in left])]),
+        begin=np.concatenate([[0], np.cumsum(np.concatenate(left))]),
+        height_kev=np.concatenate([events.height_kev for events in library.events]),
+        offset=np.concatenate([events.offset for events in library.events]),
+    )
+
+
 def energy_borders(
     highest_kev: float, edges_kev: tuple[float, ...] = ()
 ) -> NDArray[np.float64]:
@@ -98,7 +141,8 @@ def energy_borders(
     inside = [edge for edge in edges_kev if LOWEST_KEV < edge < highest_kev]
     borders = np.unique(np.concatenate([regular, inside]))
     # two borders closer than 10 eV are one
-    return borders[np.concatenate([[True], np.diff(borders) > 0.01])]
+    apart = np.concatenate([[True], np.diff(borders) > 0.01])
+    return np.asarray(borders[apart])
 
 
 def build_library(

@@ -79,7 +79,7 @@ class VirtualTube:
         """Relative output of each row, shape (row,), mean 1."""
         place = np.linspace(0.0, 1.0, rows) if rows > 1 else np.array([0.5])
         profile = 1.0 + self.heel * place
-        return profile / profile.mean()
+        return np.asarray(profile / profile.mean())
 
     def anode_path_g_cm2(self, rows: int) -> NDArray[np.float64]:
         """Tungsten that each row's beam crosses beyond the first row's, in g/cm2."""

@@ -13,7 +13,11 @@ from spectral.physics.materials import find_material
 from spectral.scans.scan import CountsInMemory
 from spectral.virtual.exposure import Beam, VirtualBench
 from spectral.virtual.pixels import TruePixels, draw_pixels
-from spectral.virtual.pulse_library import build_library, energy_borders
+from spectral.virtual.pulse_library import (
+    build_library,
+    energy_borders,
+    recorded_photons,
+)
 from spectral.virtual.tube import open_spectrum
 
 if TYPE_CHECKING:
@@ -89,7 +93,7 @@ def simulate_scan(
         Of this sensor, to spare building it again.
     threads : int
     progress : callable, optional
-        Called with the exposures done and their number.
+        Called with the pixels done, over all exposures, and their number.
 
     Returns
     -------
@@ -102,7 +106,7 @@ def simulate_scan(
     """
     run = _prepare(
         template, detector, tube, seed, object_areal_density, true_current_ma,
-        true_thickness_mm, library, threads,
+        true_thickness_mm, library, threads, correlated_neighbours,
     )  # fmt: skip
     drift = _offsets(threshold_drift_kev, template)
     counts = np.empty(template.shape, np.uint32)
@@ -111,10 +115,8 @@ def simulate_scan(
             i,
             beam,
             threshold_offset_kev=drift[i],
+            progress=_counted_on(progress, i, counts.shape),
         )
-        if progress is not None:
-            progress(i + 1, counts.shape[0])
-    del correlated_neighbours
     scan = replace(
         template,
         counts=CountsInMemory(counts),
@@ -182,6 +184,7 @@ def _prepare(
     true_thickness_mm: NDArray[np.float64] | None,
     library: PulseLibrary | None,
     threads: int,
+    correlated_neighbours: bool,
 ) -> _Run:
     """Check the arguments and make all that the exposures share."""
     n, _, rows, columns = template.shape
@@ -205,6 +208,7 @@ def _prepare(
             detector.sensor,
             energy_borders(template.voltage_kv, edges),
             seed=seed,
+            keep_events=correlated_neighbours,
             threads=threads,
         )
     rng = np.random.default_rng(seed)
@@ -219,6 +223,7 @@ def _prepare(
         ),
         seed=seed,
         threads=threads,
+        recorded=recorded_photons(library) if correlated_neighbours else None,
     )
     return _Run(
         bench=bench,
@@ -229,6 +234,16 @@ def _prepare(
         object_areal_density=object_areal_density,
         output=tube.output(n, rng),
     )
+
+
+def _counted_on(
+    progress: Callable[[int, int], None] | None, exposure: int, shape: tuple[int, ...]
+) -> Callable[[int], None] | None:
+    """Progress within one exposure, counted on from those before."""
+    if progress is None:
+        return None
+    pixels = shape[2] * shape[3]
+    return lambda done: progress(exposure * pixels + done, shape[0] * pixels)
 
 
 def _check_shapes(
