@@ -1,0 +1,294 @@
+"""Expectation, information and score of a block of pixels, side by side.
+
+Every inner loop runs over `LANES` pixels, so that one instruction serves several.
+Arrays end in the lane axis: counts n[b, l], weights w[b, k, l], moments
+moment[b, q, l] with q = expected counts, first derivatives, second derivatives (upper
+triangle, row by row). A last row b = B holds the sum over the bins; with
+scale[b] = 1 / lambda_b and scale[B] = c / (1 - c sum lambda), x' C^-1 y is
+sum_b x_b y_b scale_b over all B + 1 rows, for the covariance of the counts
+C = diag(lambda) - c lambda lambda'.
+
+Source: that inverse is Sherman & Morrison 1950, Ann. Math. Stat. 21:124.
+"""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from numba import njit
+
+from spectral.kernels.elementary import exponential, logarithm
+
+if TYPE_CHECKING:
+    import numpy as np
+    from numpy.typing import NDArray
+
+    Array = NDArray[np.float64]
+
+# 7 cache lines of 64 bytes: an odd number, so rows spread over all cache sets.
+LANES = 56
+SMALLEST_PIVOT = 1e-13  # of the diagonal: a share of information not to be told from 0
+LARGEST_INFLATION = 0.5  # of the variance, by curvature
+_TINY = 1e-290
+_HUGE = 1e290
+_LOOSE = {"contract", "reassoc", "nsz", "arcp"}  # NaN and inf stay exact
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def regress(n: Array, opened: Array, x: Array, coefficients: Array, a: Array) -> None:
+    """Start values: quadratic polynomial in ln((N + 1/2) / open counts)."""
+    bins = n.shape[0]
+    for b in range(bins):
+        for lane in range(LANES):
+            ratio = (n[b, lane] + 0.5) / opened[b, lane]
+            x[b, lane] = logarithm(min(max(ratio, 1e-30), 1e30))
+    for j in range(a.shape[0]):
+        for lane in range(LANES):
+            a[j, lane] = coefficients[0, j]
+        f = 1 + bins
+        for b in range(bins):
+            linear = coefficients[1 + b, j]
+            for lane in range(LANES):
+                a[j, lane] += linear * x[b, lane]
+            for other in range(b, bins):
+                square = coefficients[f, j]
+                f += 1
+                for lane in range(LANES):
+                    a[j, lane] += square * x[b, lane] * x[other, lane]
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def expect(  # noqa: PLR0912 (loops, not decisions)
+    minus: Array, factor: Array, a: Array, w: Array, t: Array, p: Array, moment: Array
+) -> None:
+    """Expected counts and their derivatives; minus = -M, factor[q, k] its products."""
+    nodes, materials = minus.shape
+    bins = w.shape[0]
+    for q in range(factor.shape[0]):
+        for lane in range(LANES):
+            moment[bins, q, lane] = 0.0
+    for k in range(nodes):
+        for lane in range(LANES):
+            t[k, lane] = minus[k, 0] * a[0, lane]
+        for j in range(1, materials):
+            for lane in range(LANES):
+                t[k, lane] += minus[k, j] * a[j, lane]
+        for lane in range(LANES):
+            t[k, lane] = exponential(t[k, lane])
+    for b in range(bins):
+        for k in range(nodes):
+            for lane in range(LANES):
+                p[k, lane] = w[b, k, lane] * t[k, lane]
+        for q in range(factor.shape[0]):
+            for lane in range(LANES):
+                moment[b, q, lane] = 0.0
+            for k in range(0, nodes, 4):
+                f0, f1 = factor[q, k], factor[q, k + 1]
+                f2, f3 = factor[q, k + 2], factor[q, k + 3]
+                for lane in range(LANES):
+                    moment[b, q, lane] += (
+                        f0 * p[k, lane]
+                        + f1 * p[k + 1, lane]
+                        + f2 * p[k + 2, lane]
+                        + f3 * p[k + 3, lane]
+                    )
+            for lane in range(LANES):
+                moment[bins, q, lane] += moment[b, q, lane]
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def inform(moment: Array, c: Array, scale: Array, sound: Array, f: Array) -> None:
+    """Fisher information f[j, i]; sound[l] is 0 where lambda or C cannot be."""
+    rows, materials = scale.shape[0], f.shape[0]
+    for lane in range(LANES):
+        live = 1.0 - c[lane] * moment[rows - 1, 0, lane]
+        good = live > 0.0 and moment[rows - 1, 0, lane] < _HUGE
+        sound[lane] = 1.0 if good else 0.0
+        scale[rows - 1, lane] = c[lane] / live
+    for b in range(rows - 1):
+        for lane in range(LANES):
+            sound[lane] = sound[lane] if moment[b, 0, lane] > _TINY else 0.0
+            scale[b, lane] = 1.0 / moment[b, 0, lane]
+    for j in range(materials):
+        for i in range(j, materials):
+            for lane in range(LANES):
+                f[j, i, lane] = 0.0
+            for b in range(rows):
+                for lane in range(LANES):
+                    product = moment[b, 1 + j, lane] * moment[b, 1 + i, lane]
+                    f[j, i, lane] += product * scale[b, lane]
+            for lane in range(LANES):
+                f[i, j, lane] = f[j, i, lane]
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def invert(  # noqa: PLR0912 (loops, not decisions)
+    f: Array, v: Array, sound: Array
+) -> None:
+    """Inverse v of f by Gauss-Jordan elimination; sound[l] turns 0 where f is singular."""
+    materials = f.shape[0]
+    for j in range(materials):
+        for i in range(materials):
+            for lane in range(LANES):
+                v[j, i, lane] = f[j, i, lane]
+    for k in range(materials):
+        for lane in range(LANES):
+            pivot = v[k, k, lane]
+            good = pivot > SMALLEST_PIVOT * f[k, k, lane]
+            sound[lane] = sound[lane] if good else 0.0
+            v[k, k, lane] = 1.0 / pivot
+        for j in range(materials):
+            if j != k:
+                for lane in range(LANES):
+                    v[j, k, lane] *= v[k, k, lane]
+                for i in range(materials):
+                    if i != k:
+                        for lane in range(LANES):
+                            v[j, i, lane] -= v[j, k, lane] * v[k, i, lane]
+        for i in range(materials):
+            if i != k:
+                for lane in range(LANES):
+                    v[k, i, lane] *= -v[k, k, lane]
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def score(
+    corrected: bool,
+    n: Array,
+    moment: Array,
+    scale: Array,
+    v: Array,
+    residual: Array,
+    u: Array,
+) -> None:
+    """Quasi-score u[j] and residuals, with the pseudo-counts q / 2 if corrected."""
+    rows, materials = scale.shape[0], u.shape[0]
+    for lane in range(LANES):
+        residual[rows - 1, lane] = 0.0
+    for b in range(rows - 1):
+        for lane in range(LANES):
+            residual[b, lane] = n[b, lane] - moment[b, 0, lane]
+        if corrected:
+            q = 1 + materials
+            for j in range(materials):
+                for i in range(j, materials):
+                    share = 0.5 if i == j else 1.0
+                    for lane in range(LANES):
+                        residual[b, lane] += share * v[j, i, lane] * moment[b, q, lane]
+                    q += 1
+        for lane in range(LANES):
+            residual[rows - 1, lane] += residual[b, lane]
+    for j in range(materials):
+        for lane in range(LANES):
+            u[j, lane] = 0.0
+        for b in range(rows):
+            for lane in range(LANES):
+                product = moment[b, 1 + j, lane] * residual[b, lane]
+                u[j, lane] += product * scale[b, lane]
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def observe(moment: Array, scale: Array, residual: Array, observed: Array) -> None:
+    """Observed information: minus the slope of the score, q held."""
+    rows, materials = scale.shape[0], observed.shape[0]
+    q = 1 + materials
+    for j in range(materials):
+        for i in range(j, materials):
+            for lane in range(LANES):
+                observed[j, i, lane] = 0.0
+            for b in range(rows):
+                sign = 1.0 if b < rows - 1 else -1.0
+                for lane in range(LANES):
+                    first = moment[b, 1 + j, lane] * moment[b, 1 + i, lane]
+                    pull = residual[b, lane] * scale[b, lane]
+                    slope = first * (1.0 + sign * pull) * scale[b, lane]
+                    observed[j, i, lane] += slope - moment[b, q, lane] * pull
+            for lane in range(LANES):
+                observed[i, j, lane] = observed[j, i, lane]
+            q += 1
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def bend(  # noqa: PLR0912 (loops, not decisions)
+    moment: Array, scale: Array, v: Array, g: Array, y: Array
+) -> None:
+    """Curvature y_j = G_j v, with G_j = sum_e v_je d_e' C^-1 (second derivatives)."""
+    rows, materials = scale.shape[0], v.shape[0]
+    for e in range(materials):
+        q = 1 + materials
+        for k in range(materials):
+            for i in range(k, materials):
+                for lane in range(LANES):
+                    g[e, k, i, lane] = 0.0
+                for b in range(rows):
+                    for lane in range(LANES):
+                        product = moment[b, 1 + e, lane] * moment[b, q, lane]
+                        g[e, k, i, lane] += product * scale[b, lane]
+                for lane in range(LANES):
+                    g[e, i, k, lane] = g[e, k, i, lane]
+                q += 1
+    for e in range(materials):
+        for k in range(materials):
+            for i in range(materials):
+                for lane in range(LANES):
+                    y[e, k, i, lane] = 0.0
+                for j in range(materials):
+                    for lane in range(LANES):
+                        y[e, k, i, lane] += g[e, k, j, lane] * v[j, i, lane]
+    for k in range(materials):
+        for i in range(materials):
+            for e in range(materials):
+                for lane in range(LANES):
+                    g[e, k, i, lane] = 0.0
+                for j in range(materials):
+                    for lane in range(LANES):
+                        g[e, k, i, lane] += v[e, j, lane] * y[j, k, i, lane]
+    y[:] = g
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def inflate(f: Array, v: Array, y: Array, extra: Array, share: Array) -> None:
+    """Add to v what the curvature of the expectation adds to the variance.
+
+    Half of trace(y_j y_i), the second-order variance of a bias-corrected estimate
+    but for its statistical-curvature term: S. Amari 1985, Differential-Geometrical
+    Methods in Statistics, Springer, chapter 4 (from memory). share[l] is its mean
+    ratio to v; above LARGEST_INFLATION the series is no guide and is cut there.
+    """
+    materials = f.shape[0]
+    for lane in range(LANES):
+        share[lane] = 0.0
+    for j in range(materials):
+        for i in range(materials):
+            for lane in range(LANES):
+                extra[j, i, lane] = 0.0
+            for k in range(materials):
+                for e in range(materials):
+                    for lane in range(LANES):
+                        product = y[j, k, e, lane] * y[i, e, k, lane]
+                        extra[j, i, lane] += 0.5 * product
+            for lane in range(LANES):
+                share[lane] += extra[j, i, lane] * f[j, i, lane] / materials
+    for j in range(materials):
+        for i in range(materials):
+            for lane in range(LANES):
+                cut = min(1.0, LARGEST_INFLATION / max(share[lane], 1e-30))
+                v[j, i, lane] += cut * extra[j, i, lane]
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def misfit(n: Array, moment: Array, scale: Array, dof: float, chi: Array) -> None:
+    """Deviance per degree of freedom, with the dead time's share of C^-1."""
+    rows = scale.shape[0]
+    for lane in range(LANES):
+        chi[lane] = 0.0
+    for b in range(rows - 1):
+        for lane in range(LANES):
+            count, expected = n[b, lane], moment[b, 0, lane]
+            ratio = min(max(max(count, 1e-30) / expected, 1e-300), 1e300)
+            chi[lane] += 2.0 * (count * logarithm(ratio) - count + expected)
+    for lane in range(LANES):
+        excess = -moment[rows - 1, 0, lane]
+        for b in range(rows - 1):
+            excess += n[b, lane]
+        chi[lane] = (chi[lane] + scale[rows - 1, lane] * excess * excess) / dof
