@@ -10,8 +10,9 @@ from scipy import stats
 
 from spectral.scans.bad_lines import line_stretches
 from spectral.scans.counts_faults import count_faults
+from spectral.scans.dispersion import repeat_scatter
 from spectral.scans.pixel_series import FALSE_ALARM, scatter, too_scattered
-from spectral.scans.repeats import setting_numbers
+from spectral.scans.repeats import setting_numbers, settings_with_repeats
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -24,6 +25,7 @@ _FEWEST_COUNTS = 20.0
 _OUTLIER_DEVIATIONS = 6.0
 _POLISH_ROUNDS = 4
 _MOST_BYTES = 1 << 30
+_REPEATS_AGREE = 1.5
 
 
 class PixelReason(enum.IntFlag):
@@ -54,17 +56,21 @@ REASON_MEANING: dict[PixelReason, str] = {
 }
 
 
-def find_bad_pixels(scan: Scan) -> NDArray[np.uint16]:
+def find_bad_pixels(scan: Scan, *, object_repeats: bool = False) -> NDArray[np.uint16]:
     """Reasons not to use each pixel, from a scan's dark, open and wedge exposures.
 
-    Objects are left aside, so the scan of an object will do if it holds dark and
-    open exposures; the more exposures, the more is found.
+    The scan of an object will do if it holds dark and open exposures; the more
+    exposures, the more is found.
 
     Parameters
     ----------
     scan : Scan
         At most 1 GiB of its counts is read; of a longer scan, exposures spread
         evenly over it.
+    object_repeats : bool
+        Whether to look at repeated exposures of an object too. They count only if
+        most pixels repeat to within counting noise, and a pixel among changing
+        neighbours is left alone: there, something may have moved.
 
     Returns
     -------
@@ -94,6 +100,9 @@ def find_bad_pixels(scan: Scan) -> NDArray[np.uint16]:
         usable = (reasons == 0).reshape(y, x)
         odd = _odd_response(bright.reshape(k, y, x), usable)
         _mark(reasons, odd.reshape(-1), PixelReason.ODD_RESPONSE)
+    if object_repeats:
+        moved = _unstable_in_objects(scan, (reasons == 0).reshape(y, x))
+        _mark(reasons, moved.reshape(-1), PixelReason.UNSTABLE)
     failing = PixelReason.DEAD | PixelReason.UNSTABLE | PixelReason.ODD_RESPONSE
     stretches = line_stretches((reasons & failing != 0).reshape(y, x))
     _mark(reasons, stretches.reshape(-1), PixelReason.PARTIAL_COLUMN)
@@ -211,6 +220,31 @@ def unstable_pixels(
             chi_square, degrees, sound, chance=FALSE_ALARM / thresholds
         )
     return out
+
+
+def _unstable_in_objects(scan: Scan, sound: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Single pixels and lines that scatter where the object's repeats agree."""
+    out = np.zeros(sound.shape, bool)
+    for group in settings_with_repeats(scan, "object", fewest=3):
+        chi_square, _ = repeat_scatter(scan, group, sound)
+        degrees = len(group) - 1
+        usual = np.median(chi_square, axis=1) / stats.chi2.median(degrees)
+        if np.any(usual > _REPEATS_AGREE):
+            continue
+        chance = FALSE_ALARM / len(usual)
+        everyone = np.ones(chi_square.shape[1], bool)
+        failing = np.zeros(sound.shape, bool)
+        for one in chi_square:
+            failing[sound] |= too_scattered(one, degrees, everyone, chance=chance)
+        beside = _neighbours(failing, 1) & _neighbours(failing, 0)
+        out |= failing & ~beside
+    return out
+
+
+def _neighbours(failing: NDArray[np.bool_], axis: int) -> NDArray[np.bool_]:
+    """Whether a pixel's neighbour along an axis fails."""
+    padded = np.pad(np.moveaxis(failing, axis, 0), ((1, 1), (0, 0)))
+    return np.moveaxis(padded[:-2] | padded[2:], 0, axis)
 
 
 def _odd_response(
