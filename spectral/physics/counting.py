@@ -197,11 +197,9 @@ def two_source_dead_time(
     x = first * second - background * both
     y = first * second * (both + background) - background * both * (first + second)
     z = y * lost / x**2
-    if not (x > 0.0 and z <= 1.0):
-        msg = "the background is too high for the two-source method"
-        raise InputError(msg)
-    # X (1 - sqrt(1 - Z)) / Y, without the difference of near-equal numbers.
-    return lost / (x * (1.0 + math.sqrt(1.0 - z)))
+    # X (1 - sqrt(1 - Z)) / Y, without the difference of near-equal numbers. The
+    # check above makes x > (both - first) (both - second) > 0 and z <= 1.
+    return lost / (x * (1.0 + math.sqrt(max(1.0 - z, 0.0))))
 
 
 def _checked_rate(

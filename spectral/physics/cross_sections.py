@@ -53,8 +53,8 @@ def mass_attenuation(
     Returns
     -------
     array, shape of `energy_kev`, in cm2/g
-        Sum over the elements (mixture rule). At exactly an absorption edge: the
-        value of its lower side.
+        Sum over the elements (mixture rule). Within 2 eV of an absorption edge, it
+        depends on the element which side is given.
 
     Raises
     ------

@@ -68,7 +68,7 @@ def energy_bins(
     Returns
     -------
     EnergyBins
-        Widths between 0.25 and 1.25 of `width_kev`, unless edges stand closer.
+        Widths between 0.25 and 1.5 of `width_kev`, unless edges stand closer.
 
     Raises
     ------

@@ -36,8 +36,8 @@ def stopping_power(electron_kev: ArrayLike) -> NDArray[np.float64]:
 
     Notes
     -----
-    Bethe's formula with Moller scattering and no density effect (under 1 % below
-    200 keV); too low under some 5 keV.
+    Bethe's formula with Moller scattering, without density effect and without losses
+    by radiation (1 to 5 % of all); not to be trusted under some 5 keV.
     Source: ICRU Report 37 (1984), eq. 2.2 (as M. J. Berger, S. M. Seltzer), constant
     0.153536 MeV cm2/mol.
     """
