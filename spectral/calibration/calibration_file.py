@@ -153,8 +153,10 @@ def read_calibration(path: str | Path) -> Calibration:
 
 
 def _read(file: h5py.File) -> Calibration:
-    texts = {name: plain(file.attrs[name]) for name in TEXTS}
-    lists = {name: tuple(json.loads(file.attrs[name])) for name in LISTS}
+    texts: dict[str, Any] = {name: plain(file.attrs[name]) for name in TEXTS}
+    lists: dict[str, Any] = {
+        name: tuple(json.loads(file.attrs[name])) for name in LISTS
+    }
     promise = Promise(**_get(file["promise"], PROMISE)) if "promise" in file else None
     return Calibration(
         materials=tuple(

@@ -104,6 +104,7 @@ def fit_pixels(
     ratio = np.ones(counts.shape[1:])
     lost = 2.0 * dead_time_ns * NS / data.count_time_s
     covariance = np.empty((0, 0, 0))
+    parts: list[_Summary] = []
     for turn in range(rounds + 1):
         parts = []
         for first in range(0, counts.shape[0], CHUNK):
@@ -207,12 +208,11 @@ def learned_spread(
     information, pull = information[sample], pull[sample]
     for _ in range(rounds):
         mean, covariance = posterior(information, pull, spread)
-        total = covariance + np.eye(size) * 0.0
         within = spread - covariance
         inverse = np.linalg.pinv(within.mean(axis=0), hermitian=True, rcond=1e-6)
         distance = np.einsum("pi,ij,pj->p", mean, inverse, mean)
         keep = distance < np.quantile(distance, 0.99) * 2.0
-        second = mean[keep, :, None] * mean[keep, None, :] + total[keep]
+        second = mean[keep, :, None] * mean[keep, None, :] + covariance[keep]
         new = second.mean(axis=0)
         new = 0.5 * (new + new.T) + np.eye(size) * floor**2
         change = np.abs(new - spread).max() / np.abs(spread).max()

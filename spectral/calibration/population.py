@@ -251,7 +251,8 @@ def _gauss_newton(
     information = (jacobian.T * weight) @ jacobian + np.diag(1.0 / spread**2)
     score = jacobian.T @ (weight * (counts_to_bins(observed) - expected).ravel())
     score -= np.concatenate([values - prior, drift]) / spread**2
-    move = np.linalg.solve(information, score)
+    inverse = np.asarray(np.linalg.inv(information))
+    move = inverse @ score
     limit = np.array([10.0 * n.spread for n in problem.nuisances])
     step = np.clip(move[: values.size], -limit, limit)
     # logarithms move by at most a factor of two in one round
@@ -260,7 +261,8 @@ def _gauss_newton(
             step[i] = np.clip(step[i], -np.log(2.0), np.log(2.0))
         if nuisance.name == "trapping":
             step[i] = max(step[i], -values[i] - 0.02)
-    return values + step, drift + move[values.size :], np.linalg.inv(information)
+    moved = np.asarray(values + step)
+    return moved, np.asarray(drift + move[values.size :]), inverse
 
 
 def _result(

@@ -37,6 +37,7 @@ if TYPE_CHECKING:
 
 THRESHOLD_TOLERANCE_KEV = 0.01
 OUTPUT_STEP = 2e-4
+TABLE_STEP = 0.05
 ENDED_WELL = (SolveOutcome.CONVERGED, SolveOutcome.FEW_COUNTS)
 
 
@@ -45,6 +46,7 @@ class Conditions:
     """What one exposure shares with others: current, output and count time."""
 
     tables: NodeTables
+    output: float
     responses: Responses
     start: StartRegression
     rate_limit: NDArray[np.float64]
@@ -89,6 +91,7 @@ class MaterialDecomposer:
         self.nonnegative = nonnegative
         self.threads = threads
         self._conditions: dict[tuple[float, float, float], Conditions] = {}
+        self._nodes: dict[tuple[float, float], NodeTables] = {}
 
     def fit(self, scan: Scan) -> MaterialDecomposer:
         """Read the session off a scan's dark and open exposures.
@@ -109,27 +112,38 @@ class MaterialDecomposer:
         self.current_ = current_of(scan, self.calibration)
         self.count_time_ = scan.count_time_s
         self._conditions.clear()
+        self._nodes.clear()
         return self
 
     def conditions(self, exposure: int) -> Conditions:
         """Responses at an exposure's current, output and count time."""
-        output = OUTPUT_STEP * round(self.session_.output[exposure] / OUTPUT_STEP)
-        key = (
-            float(self.current_[exposure]),
-            float(output),
-            float(self.count_time_[exposure]),
-        )
+        output = self.session_.output[exposure]
+        current = float(self.current_[exposure])
+        time = float(self.count_time_[exposure])
+        step = round(np.log(output) / OUTPUT_STEP)
+        key = (current, float(step), time)
         if key not in self._conditions:
-            current, output, time = key
-            tables = self.calibration.nodes(current, output)
-            ready = responses(self.calibration, tables, self.flat_, count_time_s=time)
+            # tables serve a range of outputs; within it pixels count as brighter
+            coarse = np.exp(TABLE_STEP * round(np.log(output) / TABLE_STEP))
+            fine = float(np.exp(OUTPUT_STEP * step) / coarse)
+            tables = self._tables(current, float(coarse))
+            ready = responses(
+                self.calibration, tables, self.flat_, count_time_s=time, output=fine
+            )
             self._conditions[key] = Conditions(
                 tables=tables,
+                output=fine,
                 responses=ready,
                 start=start_regression(self.calibration, ready),
                 rate_limit=self._rate_limit(time),
             )
         return self._conditions[key]
+
+    def _tables(self, current: float, output: float) -> NodeTables:
+        key = (current, output)
+        if key not in self._nodes:
+            self._nodes[key] = self.calibration.nodes(current, output)
+        return self._nodes[key]
 
     def _rate_limit(self, count_time_s: float) -> NDArray[np.float64]:
         """Counts above the lowest threshold at the highest calibrated rate."""
@@ -234,6 +248,7 @@ class MaterialDecomposer:
             np.where(np.isfinite(found.areal_density), found.areal_density, 0.0),
             np.where(np.isfinite(full), full, 0.0),
             count_time_s=float(self.count_time_[exposure]),
+            output=where.output,
         )
         materials = full.shape[1]
         flags = judge(

@@ -43,7 +43,7 @@ class Responses:
 
 
 def lost_fraction(dead_time_ns: float, count_time_s: float) -> float:
-    """c of the counts' covariance, for dead time much shorter than the exposure.
+    """Dead time's coefficient c in the counts' covariance, for dead time much shorter than the exposure.
 
     Notes
     -----
@@ -60,16 +60,19 @@ def responses(
     flat: NDArray[np.int64],
     *,
     count_time_s: float,
+    output: float = 1.0,
 ) -> Responses:
-    """Node weights of pixels, from node tables at the exposure's photon rate.
+    """Node weights of pixels, from node tables near the exposure's photon rate.
 
     Parameters
     ----------
     calibration : Calibration
     tables : NodeTables
-        As `Calibration.nodes` gives for the current and output.
+        As `Calibration.nodes` gives for the current.
     flat : array of int64, shape (pixel,)
     count_time_s : float
+    output : float
+        Photon rate over the tables' own; within a few percent of 1.
     """
     weight = np.empty(
         (flat.size, calibration.levels_kev.size, tables.attenuation.shape[0])
@@ -77,7 +80,9 @@ def responses(
     for first in range(0, flat.size, BLOCK):
         part = slice(first, first + BLOCK)
         weight[part], _ = pixel_weights(
-            tables, calibration.levels_kev, calibration.pixels(flat[part])
+            tables,
+            calibration.levels_kev,
+            calibration.pixels(flat[part]).brightened(output),
         )
     weight *= count_time_s
     return Responses(
@@ -97,6 +102,7 @@ def calibration_spread(
     covariance: NDArray[np.float64],
     *,
     count_time_s: float,
+    output: float = 1.0,
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """What the calibration's own errors add to estimates.
 
@@ -108,7 +114,8 @@ def calibration_spread(
     estimate : array, shape (pixel, material), in g/cm2
     covariance : array, shape (pixel, material, material)
         Of the estimates, by counting statistics.
-    count_time_s : float
+    count_time_s, output : float
+        As `responses`.
 
     Returns
     -------
@@ -134,7 +141,7 @@ def calibration_spread(
         weight, change = pixel_weights(
             tables,
             calibration.levels_kev,
-            calibration.pixels(flat[part]),
+            calibration.pixels(flat[part]).brightened(output),
             derivatives=True,
         )
         passed = np.exp(-estimate[part] @ tables.attenuation.T)

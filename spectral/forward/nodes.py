@@ -138,14 +138,6 @@ def choose_nodes(
     return NodeBasis(attenuation=attenuation, points=points, projection=projection)
 
 
-def _left_over(
-    columns: NDArray[np.float64], wanted: NDArray[np.float64]
-) -> NDArray[np.float64]:
-    """Part of the targets that the columns do not reach."""
-    basis, _ = np.linalg.qr(columns)
-    return np.asarray(wanted - basis @ (basis.T @ wanted))
-
-
 def _pursue(
     columns: NDArray[np.float64], wanted: NDArray[np.float64], count: int
 ) -> list[int]:
@@ -171,28 +163,38 @@ def _exchange(
     wanted: NDArray[np.float64],
     chosen: list[int],
     *,
-    rounds: int = 2,
+    rounds: int = 3,
 ) -> list[int]:
     """Replace one chosen column at a time where another one leaves less."""
-
-    def worst(members: list[int]) -> float:
-        return float(np.abs(_left_over(columns[:, members], wanted)).max())
-
-    best = worst(chosen)
+    best = np.inf
     for _ in range(rounds):
         before = best
         for place in range(len(chosen)):
             rest = chosen[:place] + chosen[place + 1 :]
-            for other in range(columns.shape[1]):
-                if other in rest:
-                    continue
-                error = worst([*rest, other])
-                if error < best:
-                    best = error
-                    chosen = [*rest[:place], other, *rest[place:]]
+            worst = _worst_with(columns, wanted, rest)
+            worst[rest] = np.inf
+            chosen = [*rest[:place], int(np.argmin(worst)), *rest[place:]]
+            best = float(worst.min())
         if best > 0.7 * before:
             break
     return chosen
+
+
+def _worst_with(
+    columns: NDArray[np.float64], wanted: NDArray[np.float64], rest: list[int]
+) -> NDArray[np.float64]:
+    """Largest error left when each column joins the rest, shape (column,)."""
+    basis, _ = np.linalg.qr(columns[:, rest])
+    left = wanted - basis @ (basis.T @ wanted)
+    free = columns - basis @ (basis.T @ columns)
+    size = np.linalg.norm(free, axis=0)
+    free /= np.maximum(size, 1e-9)
+    share = free.T @ left
+    worst = np.empty(columns.shape[1])
+    for j in range(columns.shape[1]):
+        worst[j] = np.abs(left - free[:, j, None] * share[j]).max()
+    worst[size < 1e-9] = np.abs(left).max()
+    return worst
 
 
 def pair_candidates(

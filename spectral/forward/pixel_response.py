@@ -131,6 +131,12 @@ class PixelDepartures:
         """Shape (pixel,)."""
         return self.values[:, -1]
 
+    def brightened(self, output: float) -> PixelDepartures:
+        """The same pixels in a beam ``output`` times as strong."""
+        values = self.values.copy()
+        values[:, 0] += np.log(output)
+        return PixelDepartures(values=values)
+
 
 def departure_names(thresholds: int) -> tuple[str, ...]:
     """Names of the parameters of `PixelDepartures`, in order."""

@@ -90,7 +90,7 @@ def mean_counts_per_photon(
         return np.asarray(ndtr((half - u) / sigma_um) - ndtr((-half - u) / sigma_um))
 
     width = (half + reach) / steps
-    x = (np.arange(steps) + 0.5) * width
+    x = np.asarray((np.arange(steps) + 0.5) * width, np.float64)
     needed = threshold_fraction / np.maximum(profile(x), 1e-300)
     low = np.zeros(steps)
     high = np.full(steps, half + reach)
