@@ -28,8 +28,8 @@ class SolveOutcome(enum.IntEnum):
 
     CONVERGED = fisher_scoring.CONVERGED
     STEPS_SPENT = fisher_scoring.STEPS_SPENT
-    SINGULAR = fisher_scoring.SINGULAR
     FEW_COUNTS = fisher_scoring.FEW_COUNTS
+    SINGULAR = fisher_scoring.SINGULAR
     UNUSABLE = fisher_scoring.UNUSABLE
 
 
@@ -79,7 +79,7 @@ def solve(
     bias_correction: bool = True,
     nonnegative: bool = False,
     max_steps: int = 50,
-    tolerance: float = 1e-6,
+    tolerance: float = 1e-5,
     threads: int = 1,
 ) -> Solution:
     """Areal densities that make the counts of each pixel most likely.

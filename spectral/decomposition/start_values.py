@@ -172,14 +172,11 @@ def _features(counts: Array, opened: Array) -> Array:
 def _standard_errors(
     points: Array, expected: Array, weight: Array, attenuation: Array, span: Array
 ) -> Array:
-    """Standard error at each point plus a floor, the domain if it is unbounded."""
+    """Standard error at each point plus a floor, the domain at most."""
     floor = 0.01 * np.where(span > 0.0, span, 1.0)
     derivative = count_derivatives(points, weight, attenuation)[0]
-    error = np.empty_like(points)
-    for k in range(len(points)):
-        try:
-            bound = cramer_rao_bound(fisher_information(expected[k], derivative[k]))
-            error[k] = np.minimum(np.sqrt(np.diag(bound)), 100.0 * floor)
-        except InputError:
-            error[k] = 100.0 * floor
-    return error + floor
+    information = fisher_information(expected, derivative)
+    information += np.diag((0.01 / floor) ** 2)  # no error is above the domain
+    return np.asarray(
+        np.sqrt(np.einsum("...jj->...j", cramer_rao_bound(information))) + floor
+    )

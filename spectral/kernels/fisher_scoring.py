@@ -31,8 +31,10 @@ from spectral.kernels.pixel_lanes import (
     invert,
     misfit,
     observe,
+    project,
     regress,
     score,
+    step,
 )
 
 if TYPE_CHECKING:
@@ -45,7 +47,7 @@ if TYPE_CHECKING:
 HALVINGS = 12
 NEAR = 1.0  # standard errors squared, within which Newton's step is tried
 SLOWEST_NEWTON = 1e-3  # of the squared error may outlast a Newton step (q was held)
-CONVERGED, STEPS_SPENT, SINGULAR, FEW_COUNTS, UNUSABLE = range(5)
+CONVERGED, STEPS_SPENT, FEW_COUNTS, SINGULAR, UNUSABLE = range(5)
 _RUNNING = -1
 _HUGE = 1e290
 
@@ -131,8 +133,12 @@ def _advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
     u: Array,
     v: Array,
     sound: Array,
-    newton: Array,
     regular: Array,
+    along: Array,
+    scored: Array,
+    decrement: Array,
+    newton: Array,
+    straight: Array,
     a: Array,
     base: Array,
     move: Array,
@@ -153,11 +159,8 @@ def _advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
         if outcome[lane] != _RUNNING:
             continue
         steps[lane] += 1
-        along = 0.0
-        for j in range(materials):
-            along += u[j, lane] * move[j, lane]
         good = sound[lane] > 0.0
-        if not (good and along >= -slope[lane]) and halved[lane] < HALVINGS:
+        if not (good and along[lane] >= -slope[lane]) and halved[lane] < HALVINGS:
             spent = steps[lane] >= max_steps
             outcome[lane] = STEPS_SPENT if spent else _RUNNING
             halved[lane] += 1
@@ -170,27 +173,21 @@ def _advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
         if not good:
             outcome[lane] = SINGULAR
             continue
-        decrement, straight = 0.0, 0.0
+        near = regular[lane] > 0.0 and not nonnegative
+        distance = decrement[lane]
         for j in range(materials):
             base[j, lane] = a[j, lane]
-            move[j, lane] = 0.0
-            for i in range(materials):
-                move[j, lane] += v[j, i, lane] * u[i, lane]
-                straight += u[j, lane] * newton[j, i, lane] * u[i, lane]
-            decrement += move[j, lane] * u[j, lane]
+            move[j, lane] = scored[j, lane]
         if nonnegative:
-            decrement = _hold_back(lane, a, u, v, move)
-        shrink = min(1.0, decrement / last[lane]) if last[lane] > 0.0 else 1.0
-        near = not nonnegative and decrement < NEAR and regular[lane] > 0.0
-        if near and 0.0 < straight < 4.0 * decrement:
-            shrink = min(shrink, max(decrement, SLOWEST_NEWTON))
+            distance = _hold_back(lane, a, u, v, move)
+        shrink = min(1.0, distance / last[lane]) if last[lane] > 0.0 else 1.0
+        if near and distance < NEAR and 0.0 < straight[lane] < 4.0 * distance:
+            shrink = min(shrink, max(distance, SLOWEST_NEWTON))
             for j in range(materials):
-                move[j, lane] = 0.0
-                for i in range(materials):
-                    move[j, lane] += newton[j, i, lane] * u[i, lane]
-        last[lane] = slope[lane] = decrement
+                move[j, lane] = newton[j, lane]
+        last[lane] = slope[lane] = distance
         halved[lane] = 0
-        if decrement * shrink <= tolerance:
+        if distance * shrink <= tolerance:
             outcome[lane] = CONVERGED
         elif steps[lane] >= max_steps:
             outcome[lane] = STEPS_SPENT
@@ -229,9 +226,9 @@ def _store(
         for b in range(n.shape[0]):
             filled += n[b, lane] > 0.0
         few = filled < materials or share[lane] > LARGEST_INFLATION
-        if word in {CONVERGED, STEPS_SPENT} and few:
+        none = word > FEW_COUNTS
+        if few and not none:
             word = FEW_COUNTS
-        none = word in {SINGULAR, UNUSABLE}
         t = 0
         for j in range(materials):
             value = base[j, lane] + move[j, lane]
@@ -284,7 +281,10 @@ def fit_pixels(
         np.empty((materials, materials, LANES)),
         np.empty((materials, materials, LANES)),
     )
-    observed, newton, regular = np.empty_like(f), np.empty_like(f), np.empty(LANES)
+    observed, observed_inverse = np.empty_like(f), np.empty_like(f)
+    scored, newton = np.empty((materials, LANES)), np.empty((materials, LANES))
+    along, decrement, straight = np.empty(LANES), np.empty(LANES), np.empty(LANES)
+    regular = np.empty(LANES)
     u, a = np.empty((materials, LANES)), np.empty((materials, LANES))
     base, move = np.empty((materials, LANES)), np.empty((materials, LANES))
     sound, slope, last = np.empty(LANES), np.empty(LANES), np.empty(LANES)
@@ -314,7 +314,10 @@ def fit_pixels(
             score(corrected, n, moment, scale, v, residual, u)
             observe(moment, scale, residual, observed)
             regular[:] = 1.0
-            invert(observed, newton, regular)
+            invert(observed, observed_inverse, regular)
+            project(u, move, along)
+            step(v, u, scored, decrement)
+            step(observed_inverse, u, newton, straight)
             moved = _advance(
                 tolerance,
                 max_steps,
@@ -322,8 +325,12 @@ def fit_pixels(
                 u,
                 v,
                 sound,
-                newton,
                 regular,
+                along,
+                scored,
+                decrement,
+                newton,
+                straight,
                 a,
                 base,
                 move,

@@ -209,6 +209,29 @@ def observe(moment: Array, scale: Array, residual: Array, observed: Array) -> No
 
 
 @njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def project(u: Array, move: Array, along: Array) -> None:
+    """Slope of the likelihood along a move."""
+    for lane in range(LANES):
+        along[lane] = 0.0
+    for j in range(u.shape[0]):
+        for lane in range(LANES):
+            along[lane] += u[j, lane] * move[j, lane]
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+def step(v: Array, u: Array, move: Array, decrement: Array) -> None:
+    """Step v u and the squared length u' v u of it, in standard errors."""
+    materials = u.shape[0]
+    for j in range(materials):
+        for lane in range(LANES):
+            move[j, lane] = v[j, 0, lane] * u[0, lane]
+        for i in range(1, materials):
+            for lane in range(LANES):
+                move[j, lane] += v[j, i, lane] * u[i, lane]
+    project(u, move, decrement)
+
+
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
 def bend(  # noqa: PLR0912 (loops, not decisions)
     moment: Array, scale: Array, v: Array, g: Array, y: Array
 ) -> None:
