@@ -2,17 +2,13 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.forward.counting_model import counts_to_bins
-from spectral.forward.pixel_response import (
-    CurveTables,
-    PixelDepartures,
-    expected_above,
-)
+from spectral.kernels import pixel_likelihood
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -20,6 +16,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from spectral.calibration.wedge_data import WedgeData
+    from spectral.forward.pixel_response import CurveTables
 
 CHUNK = 2048
 NS = 1e-9
@@ -72,6 +69,7 @@ def fit_pixels(
     *,
     dead_time_ns: float,
     rounds: int = 4,
+    threads: int = 2,
     progress: Callable[[float], None] | None = None,
 ) -> PixelFit:
     """Departures of every pixel by penalised likelihood (empirical Bayes).
@@ -87,6 +85,7 @@ def fit_pixels(
         For the covariance of the counts.
     rounds : int
         Gauss-Newton rounds; the spread is learned anew in each.
+    threads : int
     progress : callable, optional
         Called with the finished share.
 
@@ -107,17 +106,20 @@ def fit_pixels(
     parts: list[_Summary] = []
     for turn in range(rounds + 1):
         parts = []
-        for first in range(0, counts.shape[0], CHUNK):
+
+        def block(first: int, now: NDArray[np.float64] = values) -> _Summary:
             rows = slice(first, first + CHUNK)
-            parts.append(
-                _summarise(
-                    counts[rows], tables, levels_kev, values[rows], ratio, lost,
-                    data.count_time_s,
-                )
+            return _summarise(
+                counts[rows], tables, levels_kev, now[rows], ratio, lost,
+                data.count_time_s,
             )  # fmt: skip
-            if progress is not None:
-                share = min(1.0, (first + CHUNK) / counts.shape[0])
-                progress((turn + share) / (rounds + 1))
+
+        with ThreadPoolExecutor(threads) as pool:
+            for done in pool.map(block, range(0, counts.shape[0], CHUNK)):
+                parts.append(done)
+                if progress is not None:
+                    share = min(1.0, len(parts) * CHUNK / counts.shape[0])
+                    progress((turn + share) / (rounds + 1))
         expected = sum((p.expected for p in parts), np.zeros_like(ratio))
         ratio = counts.sum(axis=0) / np.maximum(expected, 1e-9)
         if turn == rounds:
@@ -148,35 +150,19 @@ def _summarise(
     time: NDArray[np.float64],
 ) -> _Summary:
     """Information and score of a block of pixels at their present values."""
-    above, slope = expected_above(tables, levels_kev, PixelDepartures(values=values))
-    above *= time[:, None]
-    slope *= time[:, None, None]
-    plain = np.maximum(counts_to_bins(above), 1e-6)
-    expected = plain * ratio
-    jacobian = counts_to_bins(slope, axis=2) * ratio[..., None]
-    left = counts - expected
-    pixels, exposures, bins = counts.shape
-    total = expected.sum(axis=2)
-    boost = lost / np.maximum(1.0 - lost * total, 0.1)
-    flat = jacobian.reshape(pixels, exposures * bins, -1)
-    scaled = flat / expected.reshape(pixels, -1, 1)
-    together = jacobian.sum(axis=2)
-    information = np.matmul(scaled.transpose(0, 2, 1), flat) + np.matmul(
-        (together * boost[..., None]).transpose(0, 2, 1), together
-    )
-    score = np.matmul(
-        scaled.transpose(0, 2, 1), left.reshape(pixels, -1, 1)
-    ) + np.matmul(together.transpose(0, 2, 1), (boost * left.sum(axis=2))[..., None])
-    with np.errstate(divide="ignore", invalid="ignore"):
-        logs = np.where(counts > 0, counts * np.log(counts / expected), 0.0)
-    deviance = 2.0 * (logs - left).sum(axis=(1, 2))
-    deviance += (boost * left.sum(axis=2) ** 2).sum(axis=1)
-    pull = score[..., 0] + np.matmul(information, values[..., None])[..., 0]
+    pixels, size = values.shape
+    information = np.empty((pixels, size, size))
+    score = np.empty((pixels, size))
+    deviance = np.empty(pixels)
+    expected = np.zeros(ratio.shape)
+    pixel_likelihood.summarise(
+        counts, tables.curve, tables.by_rate, tables.by_variance,
+        tables.by_dead_time, levels_kev, tables.step_kev, values, ratio, lost, time,
+        information, score, deviance, expected,
+    )  # fmt: skip
+    pull = score + np.matmul(information, values[..., None])[..., 0]
     return _Summary(
-        information=information,
-        pull=pull,
-        deviance=deviance / (exposures * bins),
-        expected=plain.sum(axis=0),
+        information=information, pull=pull, deviance=deviance, expected=expected
     )
 
 
