@@ -7,7 +7,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.scans.repeats import usable_exposures
+
 if TYPE_CHECKING:
+    from collections.abc import Collection
+
     from numpy.typing import NDArray
 
     from spectral.scans.scan import Scan
@@ -38,13 +42,17 @@ class CountingLoss:
     loss: float
 
 
-def counting_loss(scan: Scan, sound: NDArray[np.bool_]) -> CountingLoss | None:
+def counting_loss(
+    scan: Scan, sound: NDArray[np.bool_], *, without: Collection[int] = ()
+) -> CountingLoss | None:
     """Dead time of each pixel from open exposures, None without two currents.
 
     Parameters
     ----------
     scan : Scan
     sound : array of bool, shape (row, column)
+    without : collection of int
+        Exposures to leave out.
 
     Notes
     -----
@@ -57,7 +65,7 @@ def counting_loss(scan: Scan, sound: NDArray[np.bool_]) -> CountingLoss | None:
     """
     if scan.current_ma is None:
         return None
-    opens = scan.exposures("open")
+    opens = usable_exposures(scan, "open", without=without)
     current = scan.current_ma[opens]
     opens, current = opens[current > 0], current[current > 0]
     if len(np.unique(current)) < 2:

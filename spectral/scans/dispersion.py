@@ -11,6 +11,8 @@ from scipy import stats
 from spectral.scans.repeats import settings_with_repeats
 
 if TYPE_CHECKING:
+    from collections.abc import Collection
+
     from numpy.typing import NDArray
 
     from spectral.scans.scan import Scan
@@ -76,7 +78,11 @@ def expected_ratio(
 
 
 def dispersions(
-    scan: Scan, sound: NDArray[np.bool_], *, dead_time_ns: float = 0.0
+    scan: Scan,
+    sound: NDArray[np.bool_],
+    *,
+    dead_time_ns: float = 0.0,
+    without: Collection[int] = (),
 ) -> list[Dispersion]:
     """Dispersion of every setting with a beam that was taken more than once.
 
@@ -89,9 +95,12 @@ def dispersions(
     sound : array of bool, shape (row, column)
     dead_time_ns : float
         Dead time that explains a ratio below 1.
+    without : collection of int
+        Exposures to leave out.
     """
     found = []
-    for group in settings_with_repeats(scan, "open", "wedge", "object"):
+    roles = ("open", "wedge", "object")
+    for group in settings_with_repeats(scan, *roles, without=without):
         chi_square, mean = repeat_scatter(scan, group, sound)
         degrees = len(group) - 1
         if chi_square.shape[1] < 2:

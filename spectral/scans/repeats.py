@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
+    from collections.abc import Collection, Sequence
 
     from numpy.typing import NDArray
 
@@ -51,11 +51,30 @@ def setting(scan: Scan, exposure: int) -> tuple[object, ...]:
     )
 
 
-def settings_with_repeats(
-    scan: Scan, *roles: str, fewest: int = 2
-) -> list[NDArray[np.int64]]:
-    """Exposures of each setting that was taken more than once, in order."""
+def usable_exposures(
+    scan: Scan, *roles: str, without: Collection[int]
+) -> NDArray[np.int64]:
+    """Exposures that have one of the roles, but for those left out, in order."""
     which = scan.exposures(*roles)
+    out: NDArray[np.int64] = which[~np.isin(which, list(without))]
+    return out
+
+
+def settings_with_repeats(
+    scan: Scan, *roles: str, fewest: int = 2, without: Collection[int] = ()
+) -> list[NDArray[np.int64]]:
+    """Exposures of each setting that was taken more than once, in order.
+
+    Parameters
+    ----------
+    scan : Scan
+    *roles : str
+    fewest : int
+        Repeats that make a setting worth returning.
+    without : collection of int
+        Exposures to leave out.
+    """
+    which = usable_exposures(scan, *roles, without=without)
     numbers = setting_numbers(scan, which)
     groups = [which[numbers == g] for g in np.unique(numbers)]
     return [group for group in groups if len(group) >= fewest]

@@ -1,0 +1,186 @@
+"""What a scan's findings mean for its use, in sentences."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from spectral.scans.exposure_problems import ExposureProblem, ProblemKind
+
+if TYPE_CHECKING:
+    from collections.abc import Iterator
+
+    from numpy.typing import NDArray
+
+    from spectral.scans.counting_loss import CountingLoss
+    from spectral.scans.dispersion import Dispersion
+    from spectral.scans.exposure_levels import ExposureLevels
+    from spectral.scans.scan import Scan
+
+_MOST_BAD = 0.2
+_MANY_BAD = 0.02
+_DRIFT_THAT_MATTERS = 0.01
+_LOSS_THAT_MATTERS = 0.2
+_DEVIATIONS = 5.0
+_DISPERSION_TOLERANCE = 0.1
+_DARK_SHARE = 1e-3
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Findings:
+    """What the check found, before it is put into words.
+
+    Attributes
+    ----------
+    drift, drift_error : array, shape (threshold,)
+    bad_share : float
+        Share of pixels with any reason.
+    """
+
+    scan: Scan
+    levels: ExposureLevels
+    problems: tuple[ExposureProblem, ...]
+    loss: CountingLoss | None
+    dispersions: tuple[Dispersion, ...]
+    drift: NDArray[np.float64]
+    drift_error: NDArray[np.float64]
+    bad_share: float
+
+
+def verdict_on(findings: Findings) -> tuple[tuple[str, ...], tuple[str, ...]]:
+    """Why a scan is not fit, and what to mind if it is; one sentence each."""
+    return tuple(_causes(findings)), tuple(_exceptions(findings))
+
+
+def _causes(findings: Findings) -> Iterator[str]:
+    """What rules the scan out as it stands."""
+    scan, levels = findings.scan, findings.levels
+    opens = scan.exposures("open")
+    if len(opens) == 0:
+        yield "there is no open exposure to compare the others with"
+    elif levels.mean[opens, 0].max() < 1.0:
+        yield "no open exposure counts anything"
+    wrong = {
+        p.exposure
+        for p in findings.problems
+        if p.kind in (ProblemKind.SATURATED, ProblemKind.NOT_COUNTS, ProblemKind.ROLE)
+    }
+    if len(opens) and wrong.issuperset(opens.tolist()):
+        yield "every open exposure has a problem of its own"
+    steps = len(set(scan.exposures("wedge").tolist()) - wrong)
+    if "wedge" in scan.role and steps < len(scan.materials):
+        yield (
+            f"{steps} usable wedge exposures are too few for "
+            f"{len(scan.materials)} materials"
+        )
+    if findings.bad_share > _MOST_BAD:
+        yield f"{findings.bad_share:.0%} of the pixels are bad"
+    falls = np.diff(levels.mean[opens].sum(0)) if len(opens) else np.zeros(0)
+    if np.any(falls > 0):
+        k = int(np.argmax(falls > 0))
+        low, high = scan.thresholds_kev[k : k + 2]
+        yield (
+            f"the threshold at {high:g} keV counts more than the one at {low:g} keV: "
+            "are they in the right order?"
+        )
+    worst = _not_counts(findings.dispersions)
+    if worst:
+        yield worst
+
+
+def _not_counts(dispersions: tuple[Dispersion, ...]) -> str:
+    """A sentence if repeats scatter far less than counts can, "" otherwise."""
+    for one in dispersions:
+        short = one.ratio < 0.5 * one.expected - _DEVIATIONS * one.standard_error
+        if np.any(short):
+            k = int(np.argmax(short))
+            return (
+                f"the repeats {_listed(one.exposures)} scatter by {one.ratio[k]:.2f} "
+                f"of what dead time leaves ({one.expected[k]:.2f} of the Poisson "
+                "variance): these are smoothed or averaged images, not counts"
+            )
+    return ""
+
+
+def _exceptions(findings: Findings) -> Iterator[str]:
+    """What the user should mind."""
+    scan = findings.scan
+    if "dark" not in scan.role:
+        yield "there is no dark exposure, so noisy pixels may go unseen"
+    if len(scan.exposures("open")) == 1:
+        yield "there is one open exposure only, so drift and flicker stay unknown"
+    if "wedge" in scan.role and findings.loss is None:
+        yield "no two currents with open beam: the dead time is not measured"
+    if findings.bad_share > 0:
+        share = f"{findings.bad_share:.2%}"
+        many = ", which is many" if findings.bad_share > _MANY_BAD else ""
+        yield f"{share} of the pixels are bad{many}: leave them out"
+    yield from _dark(findings)
+    yield from _drift(findings)
+    if findings.loss is not None and findings.loss.loss > _LOSS_THAT_MATTERS:
+        yield (
+            f"{findings.loss.loss:.0%} of the pulses are lost in the open beam: "
+            "a lower current would be safer"
+        )
+    yield from _dispersion(findings.dispersions)
+    troubled = sorted({p.exposure for p in findings.problems})
+    if troubled:
+        word = "exposure" if len(troubled) == 1 else "exposures"
+        yield f"{word} {_listed(troubled)} should be looked at"
+
+
+def _dark(findings: Findings) -> Iterator[str]:
+    scan, levels = findings.scan, findings.levels
+    dark, opens = scan.exposures("dark"), scan.exposures("open")
+    if len(dark) == 0 or len(opens) == 0:
+        return
+    without = levels.mean[dark].sum(0) / scan.count_time_s[dark].sum()
+    with_beam = levels.mean[opens].sum(0) / scan.count_time_s[opens].sum()
+    much = without > _DARK_SHARE * with_beam
+    if much.any():
+        k = int(np.argmax(without / np.maximum(with_beam, 1e-9)))
+        yield (
+            f"sound pixels count {without[k]:.3g} /s in the dark above "
+            f"{scan.thresholds_kev[k]:g} keV"
+        )
+
+
+def _drift(findings: Findings) -> Iterator[str]:
+    size = np.abs(findings.drift)
+    certain = size > _DEVIATIONS * findings.drift_error
+    if np.any(certain & (size > _DRIFT_THAT_MATTERS)):
+        k = int(np.nanargmax(np.where(certain, size, -1.0)))
+        yield (
+            f"from the first to the last open exposure the counts above "
+            f"{findings.scan.thresholds_kev[k]:g} keV change by "
+            f"{findings.drift[k]:+.1%}"
+        )
+
+
+def _dispersion(dispersions: tuple[Dispersion, ...]) -> Iterator[str]:
+    """Say for the worst setting if repeats scatter unlike counts."""
+    worst, text = 0.0, ""
+    for one in dispersions:
+        off = np.nan_to_num(one.ratio - one.expected)
+        certain = np.abs(off) > np.maximum(
+            _DISPERSION_TOLERANCE, _DEVIATIONS * np.nan_to_num(one.standard_error)
+        )
+        size = np.where(certain, np.abs(off), 0.0)
+        if size.max() > worst:
+            worst, k = float(size.max()), int(np.argmax(size))
+            text = (
+                f"the repeats {_listed(one.exposures)} have {one.ratio[k]:.2f} times "
+                f"the Poisson variance, {one.expected[k]:.2f} is expected"
+            )
+    if text:
+        yield text
+
+
+def _listed(numbers: tuple[int, ...] | list[int]) -> str:
+    """Return a few numbers as text, the middle of a long list left out."""
+    if len(numbers) > 6:
+        head = ", ".join(str(n) for n in numbers[:3])
+        return f"{head}, ..., {numbers[-1]}"
+    return ", ".join(str(n) for n in numbers)
