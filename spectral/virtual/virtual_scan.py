@@ -11,21 +11,22 @@ from spectral.errors import InputError
 from spectral.physics.cross_sections import k_edge_kev
 from spectral.physics.materials import find_material
 from spectral.scans.scan import CountsInMemory
-from spectral.virtual.exposure import Beam, VirtualBench
+from spectral.virtual.exposure import VirtualBench
 from spectral.virtual.pixels import TruePixels, draw_pixels
 from spectral.virtual.pulse_library import (
     build_library,
     energy_borders,
     recorded_photons,
 )
+from spectral.virtual.simulated_counts import SimulatedCounts
 from spectral.virtual.tube import open_spectrum
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterator
+    from collections.abc import Callable
 
     from numpy.typing import NDArray
 
-    from spectral.scans.scan import Scan
+    from spectral.scans.scan import CountSource, Scan
     from spectral.virtual.detector import VirtualDetector
     from spectral.virtual.pulse_library import PulseLibrary
     from spectral.virtual.tube import VirtualTube
@@ -67,6 +68,7 @@ def simulate_scan(
     true_current_ma: NDArray[np.float64] | None = None,
     true_thickness_mm: NDArray[np.float64] | None = None,
     library: PulseLibrary | None = None,
+    on_demand: bool = False,
     threads: int = 2,
     progress: Callable[[int, int], None] | None = None,
 ) -> VirtualScan:
@@ -91,9 +93,12 @@ def simulate_scan(
         What truly was, where the scan says otherwise.
     library : PulseLibrary
         Of this sensor, to spare building it again.
+    on_demand : bool
+        Simulate exposures when they are read, and keep none: for writing a scan larger
+        than memory.
     threads : int
     progress : callable, optional
-        Called with the pixels done, over all exposures, and their number.
+        Called with the pixels done, over all exposures being read, and their number.
 
     Returns
     -------
@@ -106,23 +111,13 @@ def simulate_scan(
     """
     run = _prepare(
         template, detector, tube, seed, object_areal_density, true_current_ma,
-        true_thickness_mm, library, threads, correlated_neighbours,
+        true_thickness_mm, threshold_drift_kev, library, threads,
+        correlated_neighbours, progress,
     )  # fmt: skip
-    drift = _offsets(threshold_drift_kev, template)
-    counts = np.empty(template.shape, np.uint32)
-    for i, beam in enumerate(run.beams()):
-        counts[i] = run.bench.expose(
-            i,
-            beam,
-            threshold_offset_kev=drift[i],
-            progress=_counted_on(progress, i, counts.shape),
-        )
-    scan = replace(
-        template,
-        counts=CountsInMemory(counts),
-        count_limit=detector.count_limit,
-        digest="",
-    )
+    counts: CountSource = run
+    if not on_demand:
+        counts = CountsInMemory(run.read(np.arange(run.shape[0])))
+    scan = replace(template, counts=counts, count_limit=detector.count_limit, digest="")
     return VirtualScan(
         scan=scan,
         pixels=run.bench.pixels,
@@ -133,47 +128,6 @@ def simulate_scan(
     )
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Run:
-    """A scan ready to be exposed."""
-
-    bench: VirtualBench
-    template: Scan
-    tube: VirtualTube
-    current_ma: NDArray[np.float64]
-    areal_density: NDArray[np.float64]
-    object_areal_density: NDArray[np.float64] | None
-    output: NDArray[np.float64]
-
-    def beams(self) -> Iterator[Beam]:
-        """The beam of each exposure, in order."""
-        n, _, rows, columns = self.template.shape
-        over_rows = self.tube.over_rows(rows)[:, None]
-        anode = np.broadcast_to(
-            self.tube.anode_path_g_cm2(rows)[None, :, None], (1, rows, columns)
-        )
-        for i in range(n):
-            dark = self.template.role[i] == "dark"
-            rate = 0.0 if dark else self.tube.photons_per_mas * self.current_ma[i]
-            if (
-                self.template.role[i] == "object"
-                and self.object_areal_density is not None
-            ):
-                crossed = self.object_areal_density
-            else:
-                crossed = np.broadcast_to(
-                    self.areal_density[i][:, None, None],
-                    (self.areal_density.shape[1], rows, columns),
-                )
-            yield Beam(
-                duration_s=float(self.template.count_time_s[i]),
-                photons_per_s=np.broadcast_to(
-                    rate * self.output[i] * over_rows, (rows, columns)
-                ),
-                areal_density=np.concatenate([crossed, anode]),
-            )
-
-
 def _prepare(
     template: Scan,
     detector: VirtualDetector,
@@ -182,10 +136,12 @@ def _prepare(
     object_areal_density: NDArray[np.float64] | None,
     true_current_ma: NDArray[np.float64] | None,
     true_thickness_mm: NDArray[np.float64] | None,
+    threshold_drift_kev: NDArray[np.float64] | None,
     library: PulseLibrary | None,
     threads: int,
     correlated_neighbours: bool,
-) -> _Run:
+    progress: Callable[[int, int], None] | None,
+) -> SimulatedCounts:
     """Check the arguments and make all that the exposures share."""
     n, _, rows, columns = template.shape
     current = template.current_ma if true_current_ma is None else true_current_ma
@@ -225,25 +181,17 @@ def _prepare(
         threads=threads,
         recorded=recorded_photons(library) if correlated_neighbours else None,
     )
-    return _Run(
+    return SimulatedCounts(
         bench=bench,
         template=template,
         tube=tube,
         current_ma=np.asarray(current, dtype=np.float64),
         areal_density=areal,
         object_areal_density=object_areal_density,
+        threshold_drift_kev=_offsets(threshold_drift_kev, template),
         output=tube.output(n, rng),
+        progress=progress,
     )
-
-
-def _counted_on(
-    progress: Callable[[int, int], None] | None, exposure: int, shape: tuple[int, ...]
-) -> Callable[[int], None] | None:
-    """Progress within one exposure, counted on from those before."""
-    if progress is None:
-        return None
-    pixels = shape[2] * shape[3]
-    return lambda done: progress(exposure * pixels + done, shape[0] * pixels)
 
 
 def _check_shapes(

@@ -251,6 +251,26 @@ def test_progress_is_told_to_its_end(template: Scan, library: PulseLibrary) -> N
     assert len(told) > len(ROLES)
 
 
+def test_exposures_on_demand_are_those_of_the_whole_scan(
+    template: Scan, library: PulseLibrary
+) -> None:
+    whole, single = (
+        simulate_scan(
+            template,
+            DETECTOR,
+            TUBE,
+            seed=4,
+            object_areal_density=thing(),
+            library=library,
+            on_demand=on_demand,
+        ).scan.counts
+        for on_demand in (False, True)
+    )
+    assert single.shape == whole.shape
+    for i in (3, 1, 1):
+        assert np.array_equal(single.read([i]), whole.read([i]))
+
+
 def test_a_scan_builds_its_own_library(template: Scan) -> None:
     small = replace(
         template,
