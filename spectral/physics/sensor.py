@@ -112,8 +112,9 @@ def sample_points(samples: int) -> NDArray[np.float64]:
     Source: I. M. Sobol, USSR Comput. Math. Math. Phys. 7 (1967) 86, scrambled.
     """
     points = qmc.Sobol(5, rng=np.random.default_rng(20)).random(samples)
+    points = np.asarray(np.clip(points, 0.0, 1.0 - 1e-12))
     points.flags.writeable = False
-    return np.asarray(np.clip(points, 0.0, 1.0 - 1e-12))
+    return points
 
 
 @cache
