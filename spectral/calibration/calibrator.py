@@ -10,6 +10,7 @@ import numpy as np
 import spectral
 from spectral.calibration.pixel_fit import PixelFit, fit_pixels
 from spectral.calibration.population import Population, fit_population
+from spectral.calibration.promise import with_promise
 from spectral.calibration.residual import ResidualCorrection, fit_residual
 from spectral.calibration.result import Calibration, StepTable
 from spectral.calibration.wedge_data import WedgeData, wedge_data
@@ -26,7 +27,6 @@ if TYPE_CHECKING:
 
     from spectral.scans.scan import Scan
 
-Progress = "Callable[[str, float], None]"
 FIRST_SPREAD_KEV = 1.5
 MISFIT_SIGMAS = 6.0
 

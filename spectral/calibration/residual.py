@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import product
 from typing import TYPE_CHECKING
 
@@ -163,6 +163,21 @@ def fit_residual(
         drift=drift,
         degree=degree,
     )
+
+
+def refit_residual(
+    model: ResidualCorrection,
+    log_ratio: NDArray[np.float64],
+    error: NDArray[np.float64],
+    areal_density: NDArray[np.float64],
+    current_ma: NDArray[np.float64],
+) -> ResidualCorrection:
+    """The same form of correction, fitted to other exposures (as `fit_residual`)."""
+    terms = model.terms(areal_density, current_ma)
+    coefficient, covariance, drift = _solve(
+        log_ratio, error, terms, model.size, model.drift_spread
+    )
+    return replace(model, coefficient=coefficient, covariance=covariance, drift=drift)
 
 
 def _prior(terms: int, bins: int, size: float) -> NDArray[np.float64]:
