@@ -1,0 +1,304 @@
+"""Pictures of maps."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+from scipy.stats import chi2
+
+from spectral.decomposition.flags import MEANING
+from spectral.reporting import panels
+from spectral.reporting.drawing import Picture, Sheet
+from spectral.reporting.maps_summary import DEVIANCE_EDGES, median
+from spectral.reporting.palette import (
+    ACCENT,
+    INK,
+    MUTED,
+    STANDBY,
+    amount_scale,
+    error_scale,
+    marker,
+    rank_colours,
+)
+from spectral.reporting.wording import GRAMS, count, listed, number, percent
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from numpy.typing import NDArray
+
+    from spectral.reporting.maps_summary import MapsSummary
+
+FLAG_NAMES = {flag: str(flag.name).replace("_", " ").lower() for flag in MEANING}
+FLAG_REASONS = tuple(
+    panels.Reason(bit=int(flag), name=FLAG_NAMES[flag], meaning=meaning)
+    for flag, meaning in MEANING.items()
+)
+_DEVIANCE_RANGE = 5.0
+_TALLEST = 6.0
+
+
+def map_height(shape: tuple[int, ...], columns: int) -> float:
+    """Height in inches of a row of maps of this shape."""
+    y, x = shape
+    wide = x >= 2 * y
+    each = 11.0 / columns - (0.75 if wide else 1.3)
+    return min(_TALLEST, max(1.6, each * y / x + (1.35 if wide else 0.95)))
+
+
+def material_picture(summary: MapsSummary, index: int) -> Picture:
+    """Areal density of a material, beside its errors."""
+    name = summary.material[index]
+    shape = summary.flags.shape
+    many = len(summary.exposure) > 1
+    sheet = Sheet(map_height(shape, 3), columns=3)
+    density = summary.density[index]
+    panels.draw_map(
+        sheet.axes[0],
+        density,
+        scale=amount_scale(),
+        limits=panels.robust_limits(density),
+        label=GRAMS,
+        title=f"{name}, {'mean of the exposures' if many else 'areal density'}",
+    )
+    for axes, values, title in (
+        (sheet.axes[1], summary.single_error[index], "error of a single exposure"),
+        (sheet.axes[2], summary.calibration_error[index], "error from the calibration"),
+    ):
+        panels.draw_map(
+            axes,
+            values,
+            scale=error_scale(),
+            limits=panels.robust_limits(values),
+            label=GRAMS,
+            title=title,
+        )
+    low, high = np.nanpercentile(density, [5, 95]) if np.isfinite(density).any() else (
+        np.nan, np.nan,
+    )  # fmt: skip
+    return sheet.picture(
+        alt=(
+            f"Three maps of {name}. Areal density: median {number(median(density))} "
+            f"{GRAMS}, 5th to 95th percentile {number(low)} to {number(high)}. "
+            "Error of a single exposure: median "
+            f"{number(median(summary.single_error[index]))} {GRAMS}. Error from the "
+            "calibration: median "
+            f"{number(median(summary.calibration_error[index]))} {GRAMS}."
+        ),
+        caption=(
+            f"{name}. Errors are one standard deviation, each with a scale of its "
+            f"own. {panels.LIMITS_NOTE}{panels.block_note(shape)}"
+        ),
+    )
+
+
+def flags_picture(summary: MapsSummary) -> Picture:
+    """Map of the flags, and how much of each exposure they take."""
+    shape = summary.flags.shape
+    many = len(summary.exposure) > 1
+    title = "flagged in any exposure" if many else "flags"
+    sheet = Sheet(map_height(shape, 3) + 0.1, width=7.4)
+    panels.draw_reasons(sheet.axes[0], summary.flags, FLAG_REASONS, title=title)
+    found = [
+        f"{r.name} {np.count_nonzero(summary.flags & r.bit)}"
+        for r in FLAG_REASONS
+        if np.any(summary.flags & r.bit)
+    ]
+    return sheet.picture(
+        alt=(
+            f"Map of the flags: {percent(summary.sound_share)} of the pixels have "
+            f"none. Pixels by flag: {listed(found) if found else 'none'}."
+        ),
+        caption=(
+            "Pixels by flag. A pixel with several flags shows the rarest of them."
+            + (
+                f" A point of the picture stands for {panels.block_size(shape)} by "
+                f"{panels.block_size(shape)} pixels and shows the rarest flag in it."
+                if panels.block_size(shape) > 1
+                else ""
+            )
+        ),
+    )
+
+
+def deviance_picture(summary: MapsSummary, freedom: int | None) -> Picture:
+    """Deviances against what counting statistics alone gives, and their map."""
+    shape = summary.flags.shape
+    sheet = Sheet(max(3.2, map_height(shape, 3)), columns=2, column_widths=(1.35, 1.0))
+    axes = sheet.axes[0]
+    total = int(summary.deviance_counts.sum())
+    edges, heights = _histogram(summary.deviance_counts)
+    axes.stairs(
+        heights, edges, fill=True, color=STANDBY, label=f"{total} unflagged estimates"
+    )
+    expected = ""
+    if freedom:
+        x = np.linspace(1e-3, edges[-1], 400)
+        axes.plot(
+            x,
+            chi2.pdf(x * freedom, freedom) * freedom,
+            color=ACCENT,
+            label=f"counting statistics alone: chi-square, {freedom} degrees of freedom",
+        )
+        expected = (
+            f" Counting statistics alone would give a median of "
+            f"{number(float(chi2.median(freedom)) / freedom)}."
+        )
+        top = 1.25 * max(float(heights.max(initial=0.0)), _peak(freedom))
+        axes.set_ylim(0.0, top)
+    axes.set_xlim(0.0, edges[-1])
+    axes.set_xlabel("deviance per degree of freedom")
+    axes.set_ylabel("share of the estimates per unit")
+    axes.set_title("how well the counts are met")
+    axes.legend(loc="upper right")
+    beyond = int(summary.deviance_counts[DEVIANCE_EDGES[1:] > edges[-1] + 1e-9].sum())
+    if beyond:
+        axes.text(
+            0.99, 0.62, f"{beyond} beyond this range", transform=axes.transAxes,
+            ha="right", fontsize=7.5,
+        )  # fmt: skip
+    panels.draw_map(
+        sheet.axes[1],
+        summary.deviance,
+        scale=amount_scale(),
+        limits=panels.robust_limits(summary.deviance),
+        label="deviance per degree of freedom",
+        title="mean of the exposures" if len(summary.exposure) > 1 else "its map",
+    )
+    middle = summary.deviance_percentile(50.0)
+    return sheet.picture(
+        alt=(
+            f"Histogram of {total} deviances per degree of freedom, median "
+            f"{number(middle)}.{expected} Beside it the map of the deviance."
+        ),
+        caption=(
+            "A histogram shifted or stretched to the right means that something "
+            "besides counting moves the counts: an object outside the basis, a "
+            "threshold that drifted, the calibration's own error. In the map structure "
+            f"shows where. {panels.LIMITS_NOTE}"
+            f"{panels.block_note(shape)}"
+        ),
+    )
+
+
+def _peak(freedom: int) -> float:
+    """Largest density of chi-square over its freedom, for scaling the axis."""
+    if freedom < 3:
+        return 0.6 if freedom == 2 else 0.8
+    return float(chi2.pdf(freedom - 2.0, freedom) * freedom)
+
+
+def _histogram(
+    counts: NDArray[np.int64],
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """The summary's fine histogram in coarser bins, as a density."""
+    total = max(int(counts.sum()), 1)
+    width = 10
+    keep = int(round(_DEVIANCE_RANGE / (DEVIANCE_EDGES[1] * width))) * width
+    edges = DEVIANCE_EDGES[: keep + 1 : width]
+    heights = counts[:keep].reshape(-1, width).sum(axis=1) / total
+    return edges, heights / np.diff(edges)
+
+
+def profile_picture(summary: MapsSummary, row: int) -> Picture:
+    """Each material along one row, with both errors."""
+    materials = len(summary.material)
+    many = len(summary.exposure) > 1
+    sheet = Sheet(0.5 + 1.9 * materials, rows=materials)
+    column = np.arange(summary.flags.shape[1])
+    words = []
+    for i, (axes, name) in enumerate(zip(sheet.axes, summary.material, strict=True)):
+        value = summary.density[i, row]
+        single = summary.single_error[i, row]
+        common = summary.calibration_error[i, row]
+        _band(axes, column, value, single, STANDBY, "± error of a single exposure")
+        _band(axes, column, value, common, ACCENT, "± error from the calibration")
+        axes.plot(
+            column,
+            value,
+            color=INK,
+            linewidth=1.1,
+            marker=".",
+            markersize=3.5,
+            label="mean of the exposures" if many else "estimate",
+        )
+        axes.set_title(f"{name}, row {row}")
+        axes.set_ylabel(f"{GRAMS}")
+        axes.set_xlim(column[0] - 0.5, column[-1] + 0.5)
+        panels.light_grid(axes)
+        words.append(f"{name}: median {number(median(value))} {GRAMS}")
+    sheet.axes[-1].set_xlabel("column (pixel)")
+    sheet.axes[0].legend(ncols=3, loc="lower right", bbox_to_anchor=(1.0, 1.0))
+    return sheet.picture(
+        alt=f"Profiles along row {row}. {listed(words)}.",
+        caption=(
+            "Bands are one standard deviation to each side. The calibration's part is "
+            "the same in every repeat: averaging does not remove it."
+        ),
+    )
+
+
+def _band(
+    axes: Axes,
+    place: NDArray[np.int64],
+    value: NDArray[np.float64],
+    error: NDArray[np.float64],
+    colour: str,
+    label: str,
+) -> None:
+    axes.fill_between(
+        place,
+        value - error,
+        value + error,
+        color=colour,
+        alpha=0.45,
+        linewidth=0.0,
+        step="mid",
+        label=label,
+    )
+
+
+def course_picture(summary: MapsSummary) -> Picture:
+    """What happens from exposure to exposure."""
+    materials = len(summary.material)
+    sheet = Sheet(1.6 * (materials + 1) + 0.5, rows=materials + 1)
+    quarters = ("lower quartile", "median", "upper quartile")
+    for i, name in enumerate(summary.material):
+        axes = sheet.axes[i]
+        axes.axhline(0.0, color=MUTED, linewidth=0.8)
+        for q, words in enumerate(quarters):
+            values = summary.quartiles[:, i, q]
+            middle = float(np.nanmean(values)) if np.isfinite(values).any() else np.nan
+            axes.plot(
+                summary.exposure,
+                values - middle,
+                color=rank_colours(3)[q],
+                marker=marker(q),
+                label=f"{words} of the pixels, minus {number(middle, 4)}",
+            )
+        axes.set_title(name)
+        axes.set_ylabel(f"change, {GRAMS}")
+        axes.legend(ncols=3, loc="lower right", bbox_to_anchor=(1.0, 1.0))
+        panels.light_grid(axes)
+    axes = sheet.axes[-1]
+    axes.plot(summary.exposure, 100.0 * summary.flagged_share, color=INK, marker=".")
+    axes.set_title("pixels with a flag")
+    axes.set_ylabel("%")
+    axes.set_ylim(0.0, 110.0 * max(float(summary.flagged_share.max()), 0.01))
+    axes.set_xlabel("exposure (index in the scan)")
+    axes.locator_params(axis="x", integer=True)
+    panels.light_grid(axes)
+    worst = int(np.argmax(summary.flagged_share))
+    return sheet.picture(
+        alt=(
+            f"Median areal density of {listed(summary.material)} and share of flagged "
+            f"pixels in {count(len(summary.exposure), 'exposure')}; most flags in "
+            f"exposure {summary.exposure[worst]}: "
+            f"{percent(float(summary.flagged_share[worst]))}."
+        ),
+        caption=(
+            "Each quartile over the pixels, minus its own mean over the exposures. "
+            "Repeats of one object should stay near zero; a slope is a drift of tube, "
+            "thresholds or object."
+        ),
+    )
