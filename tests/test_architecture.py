@@ -34,6 +34,8 @@ LOOKS_AT: dict[str, set[str]] = {
     | {"kernels"},
     "reporting": {"decomposition", "calibration", "forward", "physics", "scans"}
     | {"planning"},
+    "demo": {"reporting", "decomposition", "calibration", "forward", "physics"}
+    | {"virtual", "scans"},
     "virtual": {
         "physics.cross_sections",
         "physics.materials",
