@@ -24,7 +24,7 @@ _NOTHING = 0.05
 _FEWEST_COUNTS = 20.0
 _OUTLIER_DEVIATIONS = 6.0
 _POLISH_ROUNDS = 4
-_MOST_BYTES = 1 << 30
+_MOST_BYTES = 1 << 29
 _REPEATS_AGREE = 1.5
 
 
@@ -65,7 +65,7 @@ def find_bad_pixels(scan: Scan, *, object_repeats: bool = False) -> NDArray[np.u
     Parameters
     ----------
     scan : Scan
-        At most 1 GiB of its counts is read; of a longer scan, exposures spread
+        At most half a GiB of its counts is read; of a longer scan, exposures spread
         evenly over it.
     object_repeats : bool
         Whether to look at repeated exposures of an object too. They count only if
@@ -85,7 +85,9 @@ def find_bad_pixels(scan: Scan, *, object_repeats: bool = False) -> NDArray[np.u
         return reasons.reshape(y, x)
     counts = scan.counts.read(which).reshape(len(which), k, -1)
     beam = np.array([scan.role[i] != "dark" for i in which])
-    faulty = count_faults(counts, count_limit=scan.count_limit) != 0
+    limit = scan.count_limit
+    faulty = np.concatenate([count_faults(c[None], count_limit=limit) for c in counts])
+    faulty = faulty != 0
     _mark(reasons, faulty.mean(0) > _FAULTY_SHARE, PixelReason.COUNT_FAULT)
     _mark(reasons, _stuck(counts, beam), PixelReason.STUCK)
     if not beam.all():
@@ -116,7 +118,7 @@ def _mark(
 
 
 def exposures_to_look_at(scan: Scan) -> NDArray[np.int64]:
-    """Dark, open and wedge exposures, as many as one gibibyte holds."""
+    """Dark, open and wedge exposures, as many as half a gibibyte holds."""
     which = scan.exposures("dark", "open", "wedge")
     _, k, y, x = scan.shape
     most = max(8, _MOST_BYTES // (4 * k * y * x))

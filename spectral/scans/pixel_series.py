@@ -21,6 +21,7 @@ FALSE_ALARM = 1e-4
 
 _FEWEST_FOR_COMPONENTS = 8
 _SAMPLE_PIXELS = 20_000
+_BLOCK_PIXELS = 1 << 16
 _FEWEST_COUNTS = 5.0
 
 
@@ -63,16 +64,22 @@ def scatter(
     level, groups = level[enough], groups[enough]
     if len(level) < 2:
         return np.zeros(usable.shape), 0
-    residual = residuals(counts, valid, level)
     if len(level) >= _FEWEST_FOR_COMPONENTS:
-        directions = shared_directions(residual[:, usable], level)
+        sample = np.flatnonzero(usable)[:: max(1, usable.sum() // _SAMPLE_PIXELS)]
+        residual = residuals(counts[:, sample], valid[:, sample], level)
+        directions = shared_directions(residual, level)
     else:
         directions = _group_directions(level, groups)
     degrees = len(level) - directions.shape[1]
     if degrees < 1:
         return np.zeros(usable.shape), 0
-    left = residual - directions @ (directions.T @ residual)
-    return np.einsum("ep,ep->p", left, left), degrees
+    out = np.empty(usable.shape)
+    for start in range(0, len(out), _BLOCK_PIXELS):
+        block = slice(start, start + _BLOCK_PIXELS)
+        residual = residuals(counts[:, block], valid[:, block], level)
+        left = residual - directions @ (directions.T @ residual)
+        out[block] = np.einsum("ep,ep->p", left, left)
+    return out, degrees
 
 
 def residuals(
@@ -129,11 +136,9 @@ def shared_directions(
         hundred pixels could bring about. At most a third of the exposures.
     """
     n = len(level)
-    step = max(1, residual.shape[1] // _SAMPLE_PIXELS)
-    sample = residual[:, ::step]
     directions: NDArray[np.float64] = np.sqrt(level / level.sum())[:, None]
     while directions.shape[1] < n // 3:
-        left = sample - directions @ (directions.T @ sample)
+        left = residual - directions @ (directions.T @ residual)
         length = np.linalg.norm(left, axis=0)
         left = left[:, length > 0] / length[length > 0]
         if left.shape[1] < n:
