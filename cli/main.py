@@ -12,7 +12,11 @@ from .outcome import SAFETY
 
 #: Name of each command, which is also that of its module, and what it does.
 COMMANDS: dict[str, str] = {
+    "demo": "Run the main job on a built-in scenario, truth known.",
     "check": "Say whether a scan is fit for use, and what is wrong with it.",
+    "calibrate": "Learn every pixel's response from a wedge scan.",
+    "decompose": "Turn counts into maps of g/cm2 with errors and flags.",
+    "report": "Write pictures and tables about a scan, a calibration or maps.",
 }
 
 

@@ -1,0 +1,52 @@
+"""wedgewright calibrate: per-pixel responses from a wedge scan."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+from spectral.calibration.calibration_file import write_calibration
+from spectral.calibration.calibrator import WedgeCalibrator
+from spectral.calibration.summary import calibration_summary, calibration_text
+from spectral.scans.script import open_scan
+
+from ..outcome import SAFETY, ends_well, json_option, scan_argument, show
+from ..stages import stages
+
+
+@click.command(epilog=SAFETY)
+@scan_argument
+@click.option(
+    "-o",
+    "--output",
+    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    required=True,
+    help="Calibration file to write (HDF5).",
+)
+@click.option(
+    "--without",
+    type=int,
+    multiple=True,
+    metavar="N",
+    help="Leave exposure N of the scan out (counted from 0); may be repeated.",
+)
+@json_option
+@ends_well
+def calibrate(
+    scan_path: Path, output: Path, without: tuple[int, ...], as_json: bool
+) -> None:
+    """Learn every pixel's bin response from the wedge scan SCAN.
+
+    The scan needs open exposures and wedge steps; dark exposures and opens at several
+    tube currents make it better. What was learned, how well, and everything that
+    decomposing needs goes into one file.
+    """
+    scan = open_scan(scan_path)
+    with stages() as tell:
+        fitted = WedgeCalibrator(excluded=without).fit(scan, progress=tell)
+    calibration = fitted.calibration_
+    write_calibration(calibration, output)
+    show(
+        calibration_summary(calibration), calibration_text(calibration), as_json=as_json
+    )

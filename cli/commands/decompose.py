@@ -1,0 +1,87 @@
+"""wedgewright decompose: areal-density maps of a scan's object exposures."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import click
+
+from spectral.calibration.calibration_file import read_calibration
+from spectral.decomposition.decomposer import MaterialDecomposer
+from spectral.decomposition.summary import maps_summary, maps_text
+from spectral.scans.maps_file import write_maps
+from spectral.scans.script import open_scan
+
+from ..outcome import SAFETY, ends_well, json_option, scan_argument, show
+from ..stages import stages
+
+
+@click.command(epilog=SAFETY)
+@click.argument(
+    "calibration_path",
+    metavar="CALIBRATION",
+    type=click.Path(exists=True, dir_okay=False, path_type=Path),
+)
+@scan_argument
+@click.option(
+    "-o",
+    "--output",
+    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    required=True,
+    help="Maps file to write (NeXus).",
+)
+@click.option(
+    "--exposure",
+    "exposures",
+    type=int,
+    multiple=True,
+    metavar="N",
+    help="Decompose exposure N (counted from 0) instead of all objects; repeatable.",
+)
+@click.option(
+    "--keep-bias",
+    is_flag=True,
+    help="Leave the first-order bias of maximum likelihood in.",
+)
+@click.option(
+    "--nonnegative",
+    is_flag=True,
+    help="Keep areal densities at or above 0; averages are then biased.",
+)
+@click.option(
+    "--threads", type=click.IntRange(min=1), default=2, show_default=True,
+    help="Threads of the solver.",
+)  # fmt: skip
+@json_option
+@ends_well
+def decompose(
+    calibration_path: Path,
+    scan_path: Path,
+    output: Path,
+    exposures: tuple[int, ...],
+    keep_bias: bool,
+    nonnegative: bool,
+    threads: int,
+    as_json: bool,
+) -> None:
+    """Turn the counts of SCAN into maps of g/cm2 with errors and flags.
+
+    CALIBRATION must come from a wedge scan of the same detector at the same voltage,
+    filters and thresholds. Open exposures in SCAN set the tube's output.
+    """
+    calibration = read_calibration(calibration_path)
+    scan = open_scan(scan_path)
+    decomposer = MaterialDecomposer(
+        calibration,
+        bias_correction=not keep_bias,
+        nonnegative=nonnegative,
+        threads=threads,
+    )
+    with stages() as tell:
+        maps = decomposer.decompose(
+            scan,
+            exposures=exposures or None,
+            progress=lambda share: tell("decompose", share),
+        )
+    write_maps(maps, output)
+    show(maps_summary(maps), maps_text(maps), as_json=as_json)
