@@ -42,14 +42,16 @@ A pattern may hold {exposure}, {threshold}, {threshold_kev}, {frame}, {step} and
 does not tell apart are the pages of one file, in the order that `pages` gives
 (by default exposure, threshold, frame, the last running fastest). With `dataset`, a
 pattern too, the files are HDF5. `[detector]`, `[source]` and a `[[material]]` may say
-``use = "other.toml"`` to take the table, or the list, of that name from another file.
+``use = "other.toml"`` to take the table, or the list, of that name from another file;
+for the detector that may also be a description for the simulator (``[sensor]``,
+``[electronics]``). Paths are those from the script's own folder.
 Everything under `[virtual]` is left to the simulator.
 """
 
 from __future__ import annotations
 
 import hashlib
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -92,7 +94,7 @@ _DETECTOR = (
     "pixel_mask",
     "pixel_mask_dataset",
 )
-_MATERIAL = ("name", "formula", "density_g_cm3")
+_MATERIAL = ("name", "formula", "density_g_cm3", "plates_mm")
 
 
 @dataclass(frozen=True, slots=True)
@@ -242,8 +244,7 @@ def read_script(path: str | Path) -> ScanScript:
     materials = _materials(root)
     source = root.table("source")
     source.known_keys(_SOURCE)
-    detector = root.table("detector")
-    detector.known_keys(_DETECTOR)
+    detector = _detector(root)
     filters = []
     for table in source.tables("filters"):
         table.known_keys(("material", "thickness_mm"))
@@ -271,6 +272,29 @@ def read_script(path: str | Path) -> ScanScript:
         exposures=read_exposures(root, tuple(m.name for m in materials)),
         virtual=dict(root.values.get("virtual", {})),
     )
+
+
+def _detector(root: Table) -> Table:
+    """The detector's table; what it refers to may be a description for the simulator."""
+    own = root.table("detector")
+    own.known_keys(_DETECTOR)
+    if "use" not in own.values or (own.base is not None and own.base.values):
+        return own
+    described = own.used()
+    sensor = described.values.get("sensor", {})
+    electronics = described.values.get("electronics", {})
+    values: dict[str, Any] = {}
+    if "material" in sensor:
+        values["sensor_material"] = sensor["material"]
+    if "thickness_um" in sensor:
+        values["sensor_thickness_mm"] = sensor["thickness_um"] / 1000.0
+    if "pitch_um" in sensor:
+        values["pixel_size_um"] = [sensor["pitch_um"]] * 2
+    if "thresholds_kev" in electronics:
+        values["thresholds_kev"] = electronics["thresholds_kev"]
+    if not values:
+        own.stop("use", f"{described.file} describes no detector")
+    return replace(own, base=replace(described, values=values))
 
 
 def _materials(root: Table) -> tuple[Layer, ...]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 import h5py
@@ -14,6 +15,7 @@ from spectral.errors import InputError, ScanError
 from spectral.scans.scan import Filter, Layer
 from spectral.scans.scan_file import write_scan
 from spectral.scans.script import open_scan, read_script
+from spectral.scans.script_writing import script_text, write_script
 from spectral.scans.stored_counts import NOT_A_COUNT
 from spectral.scans.toml_lines import Lines
 
@@ -21,6 +23,8 @@ if TYPE_CHECKING:
     from pathlib import Path
 
     from numpy.typing import NDArray
+
+    from spectral.scans.script_exposures import ScriptExposure
 
 HEAD = """\
 title = "made for a test"
@@ -248,6 +252,61 @@ def test_tables_of_another_file(tmp_path: Path) -> None:
     assert scan.thresholds_kev.tolist() == [25, 40]
     assert scan.pixel_size_um == (100.0, 110.0)
     assert [m.name for m in scan.materials] == ["PE", "Al"]
+
+
+def test_a_simulators_description_serves_as_detector(tmp_path: Path) -> None:
+    (tmp_path / "described.toml").write_text(
+        "[sensor]\nmaterial = 'GaAs'\nthickness_um = 500\npitch_um = 80\n"
+        "[electronics]\nthresholds_kev = [15, 28, 42]\n"
+    )
+    head, _, tail = HEAD.partition("[detector]")
+    rest = tail.partition("[[material]]")[2]
+    text = (
+        f'{head}[detector]\nuse = "described.toml"\nrows = 3\ncolumns = 2\n'
+        f"[[material]]{rest}{EXPOSURES}"
+    )
+    path = tmp_path / "scan.toml"
+    path.write_text(text)
+    scan = read_script(path).template()
+    assert scan.shape == (5, 3, 3, 2)
+    assert scan.sensor_material == "GaAs"
+    assert scan.sensor_thickness_mm == 0.5
+    assert scan.pixel_size_um == (80.0, 80.0)
+    (tmp_path / "described.toml").write_text("name = 'nothing'")
+    with pytest.raises(ScanError, match=r"line 10: .*described.toml describes no det"):
+        read_script(path)
+
+
+def test_a_script_written_out_reads_the_same(tmp_path: Path) -> None:
+    (tmp_path / "m.tif").touch()
+    extra = "rows = 4\ncolumns = 6\npixel_mask = 'm.tif'\n"
+    text = HEAD.replace("sensor_material", f"{extra}sensor_material")
+    text = text.replace("current_ma", "frames = 3\ncurrent_ma")
+    path = tmp_path / "scan.toml"
+    path.write_text(text + EXPOSURES)
+    script = read_script(path)
+    write_script(script, tmp_path / "again.toml")
+    again = read_script(tmp_path / "again.toml")
+
+    def plain(exposure: ScriptExposure) -> str:
+        # repeats are written out one by one, so they lose their number and name
+        named = "" if exposure.repeat > 1 else exposure.step
+        return str(replace(exposure, line=0, repeat=1, step=named))
+
+    assert [*map(plain, again.exposures)] == [*map(plain, script.exposures)]
+    for name in ("materials", "filters", "pixels", "pixel_size_um", "voltage_kv"):
+        assert getattr(again, name) == getattr(script, name)
+    assert again.thresholds_kev.tolist() == script.thresholds_kev.tolist()
+    assert again.mask_file == script.mask_file
+
+
+def test_a_planned_script_waits_for_its_files(tmp_path: Path) -> None:
+    path = tmp_path / "scan.toml"
+    path.write_text(re.sub(r"files = .*\n", "", HEAD) + EXPOSURES)
+    text = script_text(read_script(path))
+    assert "# files = " in text
+    path.write_text(text.replace("# files", "files"))
+    assert all("images/" in e.files for e in read_script(path).exposures)
 
 
 def line_of(text: str, words: str) -> int:
