@@ -39,7 +39,7 @@ def response_picture(calibration: Calibration) -> Picture:
     sheet = Sheet(3.4, columns=2)
     wanted = np.array(_SHARES) * calibration.voltage_kv
     energy, level, above = response_curves(calibration, wanted)
-    left, right = sheet.axes
+    left = sheet.axes[0]
     for i, (e, curve) in enumerate(zip(energy, above, strict=True)):
         left.plot(
             level, curve, color=rank_colours(energy.size)[i],
@@ -47,31 +47,25 @@ def response_picture(calibration: Calibration) -> Picture:
         )  # fmt: skip
     _mark_levels(left, calibration)
     left.set_xlim(0.0, 1.15 * float(energy.max()))
-    left.set_ylim(0.0, 1.08 * float(above[:, level >= 0.5 * calibration.levels_kev[0]].max()))
-    left.set_xlabel("level (keV)")
-    left.set_ylabel("mean counts above the level, per photon")
-    left.set_title("pulse heights of single photons")
+    left.set_ylim(
+        0.0, 1.08 * float(above[:, level >= 0.5 * calibration.levels_kev[0]].max())
+    )
     left.legend(title="photon energy", title_fontsize=8.0, loc="upper right")
-    bins = bin_responses(calibration)
-    for b, values in enumerate(bins):
-        right.plot(
-            calibration.model.energy_kev, values, color=rank_colours(len(bins))[b],
-            linestyle=_LINES[b % len(_LINES)], label=f"bin {b + 1}",
-        )  # fmt: skip
-    right.set_xlabel("photon energy (keV)")
-    right.set_ylabel("mean counts in the bin, per photon")
-    right.set_title("what each bin sees")
-    right.set_ylim(bottom=0.0)
-    right.legend(loc="upper left")
-    for axes in sheet.axes:
-        panels.light_grid(axes)
+    panels.axis_words(
+        left,
+        x="level (keV)",
+        y="mean counts above the level, per photon",
+        title="pulse heights of single photons",
+    )
+    _draw_bins(sheet.axes[1], calibration)
+    photons = listed([number(float(e)) for e in energy])
+    levels = listed([number(float(v)) for v in calibration.levels_kev])
     return sheet.picture(
         alt=(
-            f"Left: mean counts above each level for photons of "
-            f"{listed([number(float(e)) for e in energy])} keV, falling from low levels "
-            "to the photon energy; vertical lines mark the average pixel's thresholds at "
-            f"{listed([number(float(v)) for v in calibration.levels_kev])} keV. Right: "
-            f"counts in each of {len(bins)} bins per photon, against photon energy."
+            f"Left: mean counts above each level for photons of {photons} keV, falling "
+            "from low levels to the photon energy; vertical lines mark the average "
+            f"pixel's thresholds at {levels} keV. Right: counts in each of "
+            f"{calibration.levels_kev.size} bins per photon, against photon energy."
         ),
         caption=(
             "The average pixel at a vanishing rate, with electronic noise. More than "
@@ -79,6 +73,24 @@ def response_picture(calibration: Calibration) -> Picture:
             "fluorescence. Grey lines: thresholds. A bin that sees nearly what its "
             "neighbour sees adds little."
         ),
+    )
+
+
+def _draw_bins(axes: Axes, calibration: Calibration) -> None:
+    """What each bin counts per photon, against photon energy."""
+    bins = bin_responses(calibration)
+    for b, values in enumerate(bins):
+        axes.plot(
+            calibration.model.energy_kev, values, color=rank_colours(len(bins))[b],
+            linestyle=_LINES[b % len(_LINES)], label=f"bin {b + 1}",
+        )  # fmt: skip
+    axes.set_ylim(bottom=0.0)
+    axes.legend(loc="upper left")
+    panels.axis_words(
+        axes,
+        x="photon energy (keV)",
+        y="mean counts in the bin, per photon",
+        title="what each bin sees",
     )
 
 
@@ -137,7 +149,14 @@ def unknowns_picture(calibration: Calibration) -> Picture:
     sheet = Sheet(0.9 + 0.24 * len(found), width=8.6)
     axes = sheet.axes[0]
     place = np.arange(len(found))[::-1]
-    axes.axvspan(-1.0, 1.0, color=STANDBY, alpha=0.3, linewidth=0.0, label="prior, one standard deviation")
+    axes.axvspan(
+        -1.0,
+        1.0,
+        color=STANDBY,
+        alpha=0.3,
+        linewidth=0.0,
+        label="prior, one standard deviation",
+    )
     axes.axvline(0.0, color=MUTED, linewidth=0.8)
     axes.errorbar(
         [u.pull for u in found], place, xerr=[u.pull_error for u in found],
@@ -172,7 +191,9 @@ def domain_picture(calibration: Calibration) -> Picture:
     for axes, (i, j) in zip(sheet.axes, pairs, strict=True):
         for c, current in enumerate(currents):
             at = steps.current_ma == current
-            second = steps.areal_density[at, j] if i != j else np.full(at.sum(), current)
+            second = (
+                steps.areal_density[at, j] if i != j else np.full(at.sum(), current)
+            )
             axes.plot(
                 steps.areal_density[at, i], second, linestyle="none",
                 marker=marker(c), markerfacecolor="none", markeredgewidth=1.3,
@@ -206,7 +227,10 @@ def drift_picture(calibration: Calibration) -> Picture:
     sheet = Sheet(2.6)
     axes = sheet.axes[0]
     spread = 100.0 * calibration.residual.drift_spread
-    axes.axhspan(-spread, spread, color=STANDBY, alpha=0.3, linewidth=0.0, label="spread that fits best")
+    axes.axhspan(
+        -spread, spread, color=STANDBY, alpha=0.3, linewidth=0.0,
+        label="spread that fits best",
+    )  # fmt: skip
     axes.axhline(0.0, color=MUTED, linewidth=0.8)
     is_open = (steps.areal_density == 0.0).all(axis=1)
     for at, words, shape, colour in (
@@ -217,18 +241,21 @@ def drift_picture(calibration: Calibration) -> Picture:
             steps.exposure[at], 100.0 * steps.drift[at], linestyle="none",
             marker=shape, color=colour, label=words,
         )  # fmt: skip
-    axes.set_xlabel("exposure (index in the scan)")
-    axes.set_ylabel("tube output, % from its mean")
-    axes.set_title("output of the tube as found")
     axes.legend(ncols=3, loc="lower right", bbox_to_anchor=(1.0, 1.0))
     axes.locator_params(axis="x", integer=True)
-    panels.light_grid(axes)
+    panels.axis_words(
+        axes,
+        x="exposure (index in the scan)",
+        y="tube output, % from its mean",
+        title="output of the tube as found",
+    )
     worst = int(np.abs(steps.drift).argmax())
+    furthest = fixed(100 * float(steps.drift[worst]), 3, sign=True)
     return sheet.picture(
         alt=(
             f"Tube output of {steps.exposure.size} exposures: spread "
-            f"{number(spread)} %, furthest {fixed(100 * float(steps.drift[worst]), 3, sign=True)} % "
-            f"in exposure {steps.exposure[worst]}."
+            f"{number(spread)} %, furthest {furthest} % in exposure "
+            f"{steps.exposure[worst]}."
         ),
         caption=(
             "Found together with the residuals: what all bins of an exposure share is "
@@ -259,9 +286,10 @@ def promise_picture(calibration: Calibration, promise: Promise) -> Picture:
         panels.light_grid(axes)
     sheet.axes[0].legend(ncols=2, loc="lower right", bbox_to_anchor=(1.0, 1.0))
     sheet.axes[-1].set_xlabel("exposure that was left out (index in the scan)")
+    biases = np.sqrt(np.mean(promise.bias**2, axis=0))
     words = [
-        f"{m.name} {number(float(np.sqrt(np.mean(promise.bias[:, i] ** 2))), 2)} {GRAMS}"
-        for i, m in enumerate(materials)
+        f"{m.name} {number(float(bias), 2)} {GRAMS}"
+        for m, bias in zip(materials, biases, strict=True)
     ]
     return sheet.picture(
         alt=(

@@ -67,7 +67,6 @@ class Unknown:
     vague: bool
     relative: bool
 
-
     @property
     def expected(self) -> str:
         """What was expected beforehand, in words."""
@@ -190,8 +189,7 @@ def of_pixels(calibration: Calibration) -> dict[str, NDArray[np.float64]]:
     values = {
         "area": 100.0 * np.expm1(calibration.departures[..., 0]),
         "noise": np.sqrt(np.maximum(variance, 0.0)),
-        "dead_time": calibration.dead_time_ns
-        * np.exp(calibration.departures[..., -1]),
+        "dead_time": calibration.dead_time_ns * np.exp(calibration.departures[..., -1]),
         "deviance": calibration.deviance.astype(np.float64),
     }
     return {name: np.where(good, value, np.nan) for name, value in values.items()}
@@ -265,13 +263,12 @@ def response_curves(
     model = calibration.model
     nearest = np.abs(model.energy_kev[None] - energies_kev[:, None]).argmin(axis=1)
     nearest = np.unique(nearest)
-    level = model.step_kev * np.arange(model.heights.shape[1])
-    return model.energy_kev[nearest], level, _above(calibration, nearest)
+    level = np.asarray(model.step_kev * np.arange(model.heights.shape[1]), np.float64)
+    energy = np.asarray(model.energy_kev[nearest])
+    return energy, level, _above(calibration, nearest)
 
 
-def _above(
-    calibration: Calibration, which: NDArray[np.int64]
-) -> NDArray[np.float64]:
+def _above(calibration: Calibration, which: NDArray[np.int64]) -> NDArray[np.float64]:
     """Counts above each grid level, shape (energy, grid)."""
     model = calibration.model
     reach = int(np.ceil(4.0 * model.noise_kev / model.step_kev))
@@ -291,5 +288,7 @@ def bin_responses(calibration: Calibration) -> NDArray[np.float64]:
     every = np.arange(model.energy_kev.size)
     above = _above(calibration, every)
     level = model.step_kev * np.arange(above.shape[1])
-    at = np.array([[np.interp(t, level, a) for a in above] for t in calibration.levels_kev])
+    at = np.array(
+        [[np.interp(t, level, a) for a in above] for t in calibration.levels_kev]
+    )
     return np.asarray(at - np.concatenate([at[1:], np.zeros_like(at[:1])]))

@@ -19,12 +19,18 @@ from spectral.reporting.calibration_figures import (
     thresholds,
     unknowns,
 )
+from spectral.reporting.calibration_tables import (
+    promise_table,
+    reasons_table,
+    rms,
+    steps_table,
+    threshold_table,
+    unknowns_table,
+)
 from spectral.reporting.maps_summary import median
-from spectral.reporting.page import KeyFigure, Page, Section, Table
-from spectral.reporting.panels import reason_colour
+from spectral.reporting.page import KeyFigure, Page, Section
 from spectral.reporting.wording import (
     GRAMS,
-    NONE,
     SIGMA,
     count,
     fixed,
@@ -35,8 +41,6 @@ from spectral.reporting.wording import (
 )
 
 if TYPE_CHECKING:
-    from numpy.typing import NDArray
-
     from spectral.calibration.result import Calibration, Promise
 
 _ODD_RESIDUAL = 4.0
@@ -95,36 +99,38 @@ def _said(seen: _Seen) -> list[str]:
     found = seen.thresholds
     low, high = int(found.mean.argmin()), int(found.mean.argmax())
     good, every = int(calibration.good.sum()), calibration.good.size
-    said = [
+    pixels = (
         f"{percent(good / every)} of the pixels can be used ({good} of {every}). Their "
         f"mean counts behind {count(calibration.steps.exposure.size, 'exposure')} are "
-        f"met to {percent(after.share, 3)}, {fixed(after.sigmas, 2)} times the counting "
-        f"error; the physics alone meets them to {percent(before.share, 2)}.",
-        f"On average the thresholds lie {fixed(float(found.mean[low]), 2, sign=True)} keV "
-        f"(threshold {low + 1}) to {fixed(float(found.mean[high]), 2, sign=True)} keV "
-        f"(threshold {high + 1}) from their settings. Pixels spread about that by "
+        f"met to {percent(after.share, 3)}, {fixed(after.sigmas, 2)} times the "
+        f"counting error; the physics alone meets them to {percent(before.share, 2)}."
+    )
+    levels = (
+        f"On average the thresholds lie {fixed(float(found.mean[low]), 2, sign=True)} "
+        f"keV (threshold {low + 1}) to "
+        f"{fixed(float(found.mean[high]), 2, sign=True)} keV (threshold {high + 1}) "
+        "from their settings. Pixels spread about that by "
         f"{fixed(float(np.median(found.spread)), 2)} keV, and each is known to "
-        f"{fixed(float(np.median(found.pixel_error)), 2)} keV.",
+        f"{fixed(float(np.median(found.pixel_error)), 2)} keV."
+    )
+    domain = (
         f"It holds for {domain_words(calibration)}, at up to "
-        f"{calibration.largest_current_ma:g} mA.",
-    ]
+        f"{calibration.largest_current_ma:g} mA."
+    )
+    said = [pixels, levels, domain]
     promise = calibration.promise
     if promise is None:
         said.append("It was not put to the test of steps left out.")
         return said
     parts = [
         f"{m.name} {number(rms, 2)} {GRAMS}"
-        for m, rms in zip(calibration.materials, _rms(promise.bias), strict=True)
+        for m, rms in zip(calibration.materials, rms(promise.bias), strict=True)
     ]
     said.append(
         f"Steps that it had not seen come back with a root-mean-square bias of "
         f"{listed(parts)}."
     )
     return said
-
-
-def _rms(values: NDArray[np.float64]) -> list[float]:
-    return [float(v) for v in np.sqrt(np.mean(values**2, axis=0))]
 
 
 def _look(seen: _Seen) -> list[str]:
@@ -136,7 +142,8 @@ def _look(seen: _Seen) -> list[str]:
     odd = [i for i in np.argsort(-sigmas) if sigmas[i] > _ODD_RESIDUAL]
     if odd:
         said = [
-            f"exposure {steps.exposure[i]} ({names[i]}), {fixed(float(sigmas[i]), 1)} {SIGMA}"
+            f"exposure {steps.exposure[i]} ({names[i]}), "
+            f"{fixed(float(sigmas[i]), 1)} {SIGMA}"
             for i in odd[:_MOST_NAMED]
         ]
         more = f", and {len(odd) - _MOST_NAMED} more" if len(odd) > _MOST_NAMED else ""
@@ -213,19 +220,22 @@ def _promise_figures(calibration: Calibration, promise: Promise) -> list[KeyFigu
             value=bias,
         )
         for m, bias, pattern in zip(
-            calibration.materials, _rms(promise.bias), promise.fixed_pattern, strict=True
+            calibration.materials,
+            rms(promise.bias),
+            promise.fixed_pattern,
+            strict=True,
         )
     ]
 
 
 def _sections(seen: _Seen) -> list[Section]:
     calibration = seen.calibration
-    sections = [
+    return [
         Section(
             title="Thresholds",
             parts=[
                 *pictures.threshold_pictures(seen.thresholds),
-                _threshold_table(seen.thresholds),
+                threshold_table(seen.thresholds),
             ],
         ),
         Section(
@@ -233,15 +243,7 @@ def _sections(seen: _Seen) -> list[Section]:
             parts=[pictures.residual_picture(calibration)],
         ),
         _promise_section(calibration),
-        Section(
-            title="Pixels",
-            parts=[
-                pictures.reasons_picture(calibration.pixel_reasons),
-                reasons_table(calibration.pixel_reasons),
-                pictures.pixels_picture(calibration),
-                pictures.deviance_histogram(calibration),
-            ],
-        ),
+        _pixels_section(calibration),
         Section(
             title="Response and spectrum",
             parts=[
@@ -251,18 +253,29 @@ def _sections(seen: _Seen) -> list[Section]:
         ),
         Section(
             title="Tube and sensor",
-            parts=[curves.unknowns_picture(calibration), _unknowns_table(calibration)],
+            parts=[curves.unknowns_picture(calibration), unknowns_table(calibration)],
         ),
         Section(
             title="Steps and drift",
             parts=[
                 curves.domain_picture(calibration),
                 curves.drift_picture(calibration),
-                _steps_table(calibration),
+                steps_table(calibration),
             ],
         ),
     ]
-    return sections
+
+
+def _pixels_section(calibration: Calibration) -> Section:
+    return Section(
+        title="Pixels",
+        parts=[
+            pictures.reasons_picture(calibration.pixel_reasons),
+            reasons_table(calibration.pixel_reasons),
+            pictures.pixels_picture(calibration),
+            pictures.deviance_histogram(calibration),
+        ],
+    )
 
 
 def _promise_section(calibration: Calibration) -> Section:
@@ -273,120 +286,9 @@ def _promise_section(calibration: Calibration) -> Section:
             title=title,
             parts=["The promise was not worked out for this calibration."],
         )
-    rows = []
-    for i, m in enumerate(calibration.materials):
-        bias, single = promise.bias[:, i], promise.single_error[:, i]
-        worst = int(np.abs(bias).argmax())
-        rows.append(
-            (
-                m.name,
-                number(_rms(promise.bias)[i]),
-                f"{number(float(bias[worst]), sign=True)} (exposure {promise.exposure[worst]})",
-                number(float(np.median(single))),
-                fixed(float(np.sqrt(np.mean((bias / single) ** 2))), 3),
-                fixed(float(promise.fixed_pattern[i]), 3),
-            )
-        )
-    table = Table(
-        caption=f"What the calibration expects of itself, in {GRAMS}",
-        header=(
-            "material",
-            "bias, root mean square",
-            "largest bias",
-            "error of one pixel in one exposure, median",
-            "bias over that error, root mean square",
-            "fixed pattern over that error",
-        ),
-        rows=rows,
-    )
-    return Section(title=title, parts=[curves.promise_picture(calibration, promise), table])
-
-
-def _threshold_table(found: Thresholds) -> Table:
-    rows = [
-        (
-            f"{k + 1}",
-            number(float(found.nominal[k])),
-            with_error(float(found.mean[k]), float(found.mean_error[k]), sign=True),
-            fixed(float(found.spread[k]), 3),
-            fixed(float(found.pixel_error[k]), 3),
-        )
-        for k in range(found.nominal.size)
-    ]
-    return Table(
-        caption="Thresholds of the good pixels, in keV",
-        header=(
-            "threshold",
-            "setting",
-            "true minus setting, mean",
-            "spread between pixels",
-            "error of a single pixel, median",
-        ),
-        rows=rows,
-    )
-
-
-def reasons_table(reasons: NDArray[np.uint16]) -> Table:
-    """How many pixels each reason takes."""
-    every = pictures.PIXEL_REASONS
-    counts = [int(np.count_nonzero(reasons & r.bit)) for r in every]
-    return Table(
-        caption="Reasons not to use a pixel",
-        header=("reason", "what it says", "pixels", "share"),
-        rows=[
-            (r.name, r.meaning, str(n), percent(n / reasons.size, 2))
-            for r, n in zip(every, counts, strict=True)
-        ],
-        words=frozenset({1}),
-        swatches=[reason_colour(every, r) for r in every],
-    )
-
-
-def _unknowns_table(calibration: Calibration) -> Table:
-    return Table(
-        caption="Tube and sensor as fitted, and as expected beforehand",
-        header=("unknown", "unit", "fitted", "expected", "away, in prior spreads"),
-        rows=[
-            (
-                u.words,
-                u.unit or NONE,
-                with_error(u.value, u.error),
-                u.expected,
-                NONE if u.vague else fixed(u.pull, 1, sign=True),
-            )
-            for u in unknowns(calibration)
-        ],
-        words=frozenset({1}),
-    )
-
-
-def _steps_table(calibration: Calibration) -> Table:
-    steps = calibration.steps
-    worst = (steps.residual / steps.error)[
-        np.arange(steps.exposure.size),
-        np.abs(steps.residual / steps.error).argmax(axis=1),
-    ]
-    return Table(
-        caption="Open and wedge exposures that taught the calibration",
-        header=(
-            "exposure",
-            *(f"{m.name} ({GRAMS})" for m in calibration.materials),
-            "current (mA)",
-            "time (s)",
-            "tube output (%)",
-            f"largest residual ({SIGMA})",
-        ),
-        rows=[
-            (
-                str(int(steps.exposure[i])),
-                *(number(float(a), 4) for a in steps.areal_density[i]),
-                f"{steps.current_ma[i]:g}",
-                f"{steps.count_time_s[i]:g}",
-                fixed(100.0 * float(steps.drift[i]), 3, sign=True),
-                fixed(float(worst[i]), 1, sign=True),
-            )
-            for i in range(steps.exposure.size)
-        ],
+    table = promise_table(calibration, promise)
+    return Section(
+        title=title, parts=[curves.promise_picture(calibration, promise), table]
     )
 
 

@@ -23,6 +23,7 @@ from spectral.reporting.palette import (
     rank_colours,
     signed_scale,
 )
+from spectral.reporting.reason_map import Reason, draw_reasons, rarest_note
 from spectral.reporting.wording import SIGMA, fixed, listed, number, percent
 from spectral.scans.bad_pixels import REASON_MEANING
 
@@ -34,7 +35,7 @@ if TYPE_CHECKING:
     from spectral.reporting.calibration_figures import Thresholds
 
 PIXEL_REASONS = tuple(
-    panels.Reason(
+    Reason(
         bit=int(reason),
         name=str(reason.name).replace("_", " ").lower(),
         meaning=meaning,
@@ -67,42 +68,27 @@ def _threshold_sheet(
         2.1 + tall, rows=2, columns=columns, row_heights=(1.6, tall),
         width=min(11.0, 0.8 + wide * columns),
     )  # fmt: skip
-    colours = rank_colours(found.nominal.size)
-    half = max(
-        0.1, float(np.nanpercentile(np.abs(found.departure), 99.8, axis=(1, 2)).max())
-    )
+    half = _half_width(found)
     words = []
-    for place in range(columns):
-        upper, lower = sheet.axes[place], sheet.axes[columns + place]
-        if place >= len(chosen):
-            upper.set_visible(False)
-            lower.set_visible(False)
-            continue
-        k = chosen[place]
+    for spare in range(len(chosen), columns):
+        for axes in (sheet.axes[spare], sheet.axes[columns + spare]):
+            axes.set_visible(False)
+    maps = sheet.axes[columns : columns + len(chosen)]
+    for place, k in enumerate(chosen):
         middle = float(found.mean[k])
-        panels.draw_histogram(
-            upper,
-            found.offset[k],
-            label="true minus nominal (keV)",
-            title=f"{k + 1}: set to {number(found.nominal[k])} keV",
-            colour=colours[k],
-            limits=panels.Limits(middle - 1.15 * half, middle + 1.15 * half),
-            bins=32,
-        )
-        upper.axvline(middle, color=INK, linewidth=1.0)
-        upper.locator_params(nbins=4)
-        last = place == len(chosen) - 1
+        around = panels.Limits(middle - 1.15 * half, middle + 1.15 * half)
+        _draw_offsets(sheet.axes[place], found, k, around)
         panels.draw_signed_map(
-            lower,
+            maps[place],
             found.departure[k],
-            label="keV from the average pixel" if last else "",
+            label="keV from the average pixel",
             title=f"{fixed(middle, 2, sign=True)}, spread {fixed(found.spread[k], 2)}",
             limits=limits,
-            bar_beside=[sheet.axes[columns + p] for p in range(len(chosen))] if last else [],
+            bar_beside=maps if place == len(chosen) - 1 else [],
         )
         if place:
-            upper.set_ylabel("")
-            lower.set_ylabel("")
+            sheet.axes[place].set_ylabel("")
+            maps[place].set_ylabel("")
         words.append(
             f"{number(found.nominal[k])} keV: mean {fixed(middle, 2, sign=True)} keV, "
             f"spread {fixed(found.spread[k], 2)} keV"
@@ -120,6 +106,29 @@ def _threshold_sheet(
     )
 
 
+def _half_width(found: Thresholds) -> float:
+    """Half of a range in keV that holds nearly all departures of any threshold."""
+    size = np.abs(found.departure[np.isfinite(found.departure)])
+    return max(0.1, float(np.percentile(size, 99.8)) if size.size else 0.0)
+
+
+def _draw_offsets(
+    axes: Axes, found: Thresholds, threshold: int, limits: panels.Limits
+) -> None:
+    """Histogram of one threshold's true minus nominal energy."""
+    panels.draw_histogram(
+        axes,
+        found.offset[threshold],
+        label="true minus nominal (keV)",
+        title=f"{threshold + 1}: set to {number(found.nominal[threshold])} keV",
+        colour=rank_colours(found.nominal.size)[threshold],
+        limits=limits,
+        bins=32,
+    )
+    axes.axvline(float(found.mean[threshold]), color=INK, linewidth=1.0)
+    axes.locator_params(nbins=4)
+
+
 def residual_picture(calibration: Calibration) -> Picture:
     """Mean counts over expected counts of every step and bin, before and after."""
     steps = calibration.steps
@@ -130,7 +139,8 @@ def residual_picture(calibration: Calibration) -> Picture:
         column_widths=(1.0, 1.0, 1.0),
     )
     names = [
-        f"{i}: {name}" for i, name in zip(steps.exposure, step_names(calibration), strict=True)
+        f"{i}: {name}"
+        for i, name in zip(steps.exposure, step_names(calibration), strict=True)
     ]
     before = residual_size(calibration, corrected=False)
     after = residual_size(calibration, corrected=True)
@@ -149,7 +159,7 @@ def residual_picture(calibration: Calibration) -> Picture:
         alt=(
             f"Residuals of {rows} exposures in {sigmas.shape[1]} bins. Physics alone: "
             f"{percent(before.share, 2)} root mean square. With the smooth correction: "
-            f"{percent(after.share, 3)}, or {fixed(after.sigmas, 2)} times the counting "
+            f"{percent(after.share, 3)}, {fixed(after.sigmas, 2)} times the counting "
             f"error. Largest: exposure {names[row]}, bin {column + 1}, "
             f"{fixed(float(sigmas[row, column]), 1, sign=True)} {SIGMA}."
         ),
@@ -201,7 +211,7 @@ def reasons_picture(
 ) -> Picture:
     """Which pixels are not used, and why."""
     sheet = Sheet(map_height(reasons.shape, 3) + 0.1, width=7.4)
-    panels.draw_reasons(sheet.axes[0], reasons, PIXEL_REASONS, title=title)
+    draw_reasons(sheet.axes[0], reasons, PIXEL_REASONS, title=title)
     found = [
         f"{r.name} {np.count_nonzero(reasons & r.bit)}"
         for r in PIXEL_REASONS
@@ -212,7 +222,10 @@ def reasons_picture(
             f"Map of unfit pixels: {percent(float(np.mean(reasons == 0)))} are sound. "
             f"By reason: {listed(found) if found else 'none'}."
         ),
-        caption="A pixel with several reasons shows the rarest of them.",
+        caption=(
+            "A pixel with several reasons shows the rarest of them."
+            f"{rarest_note(reasons.shape)}"
+        ),
     )
 
 

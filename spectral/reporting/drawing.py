@@ -7,7 +7,7 @@ import io
 import re
 from contextlib import contextmanager
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 from urllib.parse import quote
 
 import matplotlib as mpl
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 
 PIXELS_PER_INCH = 96
 FULL_WIDTH_INCHES = 11.0
-_STYLE = {
+_STYLE: dict[Any, Any] = {
     "svg.fonttype": "none",
     "svg.hashsalt": "wedgewright",
     "svg.id": None,

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from pathlib import PurePath
 from typing import TYPE_CHECKING
 
@@ -11,12 +10,23 @@ from scipy.stats import chi2
 
 from spectral.errors import InputError
 from spectral.reporting import maps_pictures as pictures
-from spectral.reporting.maps_summary import MapsSummary, median, summarise
+from spectral.reporting.maps_record import (
+    numbers_in,
+    record_table,
+    sources_and_assumptions,
+)
+from spectral.reporting.maps_summary import MapsSummary, median, middle_range, summarise
+from spectral.reporting.maps_tables import (
+    FEWEST_REPEATS,
+    correlation_text,
+    flags_table,
+    numbers_table,
+    scatter_ratio,
+    scatter_table,
+)
 from spectral.reporting.page import KeyFigure, Page, Section, Table
-from spectral.reporting.panels import reason_colour
 from spectral.reporting.wording import (
     GRAMS,
-    NONE,
     beside,
     count,
     fixed,
@@ -30,7 +40,6 @@ if TYPE_CHECKING:
     from spectral.reporting.drawing import Picture
     from spectral.reporting.maps_blocks import MapsBlocks
 
-_REPEATS = 4
 _ODD_SCATTER = 0.1
 _ODD_DEVIANCE = 1.25
 _ODD_OPEN = 0.01
@@ -58,7 +67,7 @@ def maps_page(blocks: MapsBlocks, *, row: int | None = None) -> Page:
         msg = f"row {row} is not in the maps, which have rows 0 to {rows - 1}"
         raise InputError(msg)
     freedom = degrees_of_freedom(summary)
-    record, assumed = _record(summary)
+    record, assumed = sources_and_assumptions(summary)
     return Page(
         kind=(
             f"Areal-density maps, {rows} by {columns} pixels, "
@@ -97,7 +106,7 @@ def _said(summary: MapsSummary) -> list[str]:
         density = summary.density[i]
         single = median(summary.single_error[i])
         share = median(summary.calibration_error[i])
-        low, high = _range(density)
+        low, high = middle_range(density)
         said.append(
             f"{name}: {beside(median(density), single)} {GRAMS} in the median pixel, "
             f"{beside(low, single)} to {beside(high, single)} in nine pixels of ten. "
@@ -117,35 +126,12 @@ def _said(summary: MapsSummary) -> list[str]:
         most = [f"{n} {name}" for n, name in reasons if n][:4]
         said.append(
             f"{percent(summary.sound_share)} of the pixels carry no flag; "
-            f"{count(int(flagged), 'pixel')} of {summary.flags.size} do: {listed(most)}."
+            f"{count(int(flagged), 'pixel')} of {summary.flags.size} do: "
+            f"{listed(most)}."
         )
     else:
         said.append("No pixel carries a flag.")
     return said
-
-
-def _range(
-    density: np.ndarray[tuple[int, ...], np.dtype[np.float64]],
-) -> tuple[float, float]:
-    finite = density[np.isfinite(density)]
-    if finite.size == 0:
-        return float("nan"), float("nan")
-    low, high = np.percentile(finite, [5.0, 95.0])
-    return float(low), float(high)
-
-
-def scatter_ratio(summary: MapsSummary, index: int) -> float:
-    """Scatter between exposures over reported error, pooled over the pixels.
-
-    The mean of the squares of both: with few repeats the median ratio of one pixel
-    is biased low, the ratio of mean squares is not.
-    """
-    scatter, error = summary.scatter[index], summary.single_error[index]
-    good = np.isfinite(scatter) & np.isfinite(error) & (summary.flags == 0)
-    if len(summary.exposure) < _REPEATS or not good.any():
-        return float("nan")
-    ratio = (scatter[good] / error[good]) ** 2
-    return float(np.sqrt(ratio.mean()))
 
 
 def _look(summary: MapsSummary, freedom: int | None) -> list[str]:
@@ -172,7 +158,7 @@ def _look(summary: MapsSummary, freedom: int | None) -> list[str]:
                 "reported error. If these are repeats of one object, the errors are "
                 "off by that factor; if the object moved, it means nothing."
             )
-    opens = _numbers(summary.process.get("open_counts_over_expected", ""))
+    opens = numbers_in(summary.process.get("open_counts_over_expected", ""))
     if opens and max(abs(v - 1.0) for v in opens) > _ODD_OPEN:
         worst = max(range(len(opens)), key=lambda b: abs(opens[b] - 1.0))
         look.append(
@@ -183,27 +169,16 @@ def _look(summary: MapsSummary, freedom: int | None) -> list[str]:
     return look
 
 
-def _numbers(text: str) -> list[float]:
-    try:
-        values = json.loads(text)
-    except json.JSONDecodeError:
-        return []
-    if not isinstance(values, list):
-        return []
-    return [float(v) for v in values if isinstance(v, (int, float))]
-
-
 def _key_figures(summary: MapsSummary, freedom: int | None) -> list[KeyFigure]:
     found = []
     for i, name in enumerate(summary.material):
         value, error = median(summary.density[i]), median(summary.single_error[i])
+        common = median(summary.calibration_error[i])
         found.append(
             KeyFigure(
                 name=f"{name}, median pixel",
                 text=f"{with_error(value, error)} {GRAMS}",
-                remark=(
-                    f"calibration adds ± {number(median(summary.calibration_error[i]), 2)}"
-                ),
+                remark=f"calibration adds ± {number(common, 2)}",
                 value=value,
             )
         )
@@ -237,11 +212,11 @@ def _sections(summary: MapsSummary, row: int, freedom: int | None) -> list[Secti
     sections = [
         Section(title="Maps", parts=maps),
         Section(
-            title="Numbers", parts=[_numbers_table(summary), *_correlation(summary)]
+            title="Numbers", parts=[numbers_table(summary), *correlation_text(summary)]
         ),
         Section(
             title="Flags",
-            parts=[pictures.flags_picture(summary), _flags_table(summary)],
+            parts=[pictures.flags_picture(summary), flags_table(summary)],
         ),
         Section(title="Profile", parts=[pictures.profile_picture(summary, row)]),
         Section(
@@ -249,212 +224,12 @@ def _sections(summary: MapsSummary, row: int, freedom: int | None) -> list[Secti
             parts=[pictures.deviance_picture(summary, freedom)],
         ),
     ]
-    if len(summary.exposure) >= _REPEATS:
+    if len(summary.exposure) >= FEWEST_REPEATS:
         sections.append(
             Section(
                 title="From exposure to exposure",
-                parts=[pictures.course_picture(summary), _scatter_table(summary)],
+                parts=[pictures.course_picture(summary), scatter_table(summary)],
             )
         )
-    sections.append(Section(title="Record of the run", parts=[_record_table(summary)]))
+    sections.append(Section(title="Record of the run", parts=[record_table(summary)]))
     return sections
-
-
-def _numbers_table(summary: MapsSummary) -> Table:
-    rows = []
-    for i, name in enumerate(summary.material):
-        single = median(summary.single_error[i])
-        share = median(summary.calibration_error[i])
-        low, high = _range(summary.density[i])
-        repeats = (single / share) ** 2 if share > 0 else float("inf")
-        rows.append(
-            (
-                name,
-                beside(median(summary.density[i]), single),
-                beside(low, single),
-                beside(high, single),
-                number(single),
-                number(median(summary.mean_error[i])),
-                number(share),
-                number(repeats, 2) if np.isfinite(repeats) else NONE,
-                str(int(np.count_nonzero(summary.estimates[i]))),
-            )
-        )
-    return Table(
-        caption=f"Over the pixels, in {GRAMS}; errors are one standard deviation, medians",
-        header=(
-            "material",
-            "median",
-            "5th percentile",
-            "95th percentile",
-            "error of one exposure",
-            f"error of the mean of {len(summary.exposure)}",
-            "error from the calibration",
-            "exposures at which both are equal",
-            "pixels with a value",
-        ),
-        rows=rows,
-    )
-
-
-def _correlation(summary: MapsSummary) -> list[str]:
-    m = len(summary.material)
-    pairs = [
-        f"{summary.material[i]} and {summary.material[j]} "
-        f"{fixed(float(summary.correlation[i, j]), 2, sign=True)}"
-        for i in range(m)
-        for j in range(i + 1, m)
-    ]
-    if not pairs:
-        return []
-    return [
-        f"Correlation of the errors of two materials in one pixel: {listed(pairs)}. "
-        "An error in one is answered by the other; a sum that the beam sees, like the "
-        "total attenuation, is known better than its parts."
-    ]
-
-
-def _flags_table(summary: MapsSummary) -> Table:
-    estimates = summary.flags.size * len(summary.exposure)
-    rows, colours = [], []
-    for flag, reason in zip(
-        summary.flagged_estimates, pictures.FLAG_REASONS, strict=True
-    ):
-        many = summary.flagged_estimates[flag]
-        pixels = int(np.count_nonzero(summary.flags & reason.bit))
-        colours.append(reason_colour(pictures.FLAG_REASONS, reason))
-        rows.append(
-            (
-                reason.name,
-                reason.meaning,
-                str(pixels),
-                str(many),
-                percent(many / estimates, 2),
-            )
-        )
-    return Table(
-        caption="Flags and their reasons",
-        header=(
-            "flag",
-            "what it says",
-            "pixels, in any exposure",
-            "estimates",
-            "share of the estimates",
-        ),
-        rows=rows,
-        words=frozenset({1}),
-        swatches=colours,
-    )
-
-
-def _scatter_table(summary: MapsSummary) -> Table:
-    rows = [
-        (
-            name,
-            number(median(summary.scatter[i])),
-            number(median(summary.single_error[i])),
-            fixed(scatter_ratio(summary, i), 3),
-        )
-        for i, name in enumerate(summary.material)
-    ]
-    return Table(
-        caption=(
-            "If the exposures are repeats of one object, scatter over error is near 1"
-        ),
-        header=(
-            "material",
-            f"scatter between exposures, median ({GRAMS})",
-            f"reported error, median ({GRAMS})",
-            "scatter over error, unflagged pixels",
-        ),
-        rows=rows,
-    )
-
-
-def plain_entry(text: str) -> str:
-    """An entry of the record without JSON's brackets."""
-    try:
-        value = json.loads(text)
-    except json.JSONDecodeError:
-        return text
-    return _spelled(value)
-
-
-def _spelled(value: object) -> str:
-    if isinstance(value, dict):
-        return "\n".join(
-            f"{str(k).replace('_', ' ')}: {_spelled(v)}" for k, v in value.items()
-        )
-    if isinstance(value, list):
-        return ", ".join(_spelled(v) for v in value) if value else "none"
-    if isinstance(value, bool):
-        return "yes" if value else "no"
-    if isinstance(value, float):
-        return number(value, 6)
-    return str(value)
-
-
-def _record_table(summary: MapsSummary) -> Table:
-    return Table(
-        caption="As written in the maps' file",
-        header=("subject", "entry"),
-        rows=[
-            (k.replace("_", " "), plain_entry(v))
-            for k, v in summary.process.items()
-            if v
-        ],
-        words=frozenset({1}),
-    )
-
-
-def _record(
-    summary: MapsSummary,
-) -> tuple[list[tuple[str, str]], list[str]]:
-    """Sources for the foot, and assumptions as sentences."""
-    process = summary.process
-    record = [
-        (words, process.get(key, ""))
-        for key, words in (
-            ("scan", "scan"),
-            ("scan_digest", "SHA-256 of the scan"),
-            ("calibration_of", "calibrated with"),
-            ("calibration_digest", "SHA-256 of the calibration"),
-            ("program", "program"),
-            ("version", "version"),
-            ("date", "date"),
-        )
-    ]
-    facts = _mapping(process.get("assumed", ""))
-    if "cross_sections" in facts:
-        record.append(("cross sections", str(facts["cross_sections"])))
-    assumed = []
-    if "voltage_kv" in facts:
-        assumed.append(f"tube voltage {facts['voltage_kv']} kV, nominal")
-    filters = facts.get("filters")
-    if isinstance(filters, list):
-        assumed.append(f"beam filters: {listed(filters) if filters else 'none named'}")
-    if "sensor" in facts:
-        assumed.append(f"sensor: {facts['sensor']}")
-    densities = facts.get("densities_g_cm3")
-    if isinstance(densities, dict):
-        assumed += [f"density of {k}: {v} g/cm3" for k, v in densities.items()]
-    for source in (facts.get("assumptions"), _list(process.get("notes", ""))):
-        if isinstance(source, list):
-            assumed += [str(text) for text in source]
-    return record, assumed
-
-
-def _mapping(text: str) -> dict[str, object]:
-    try:
-        found = json.loads(text)
-    except json.JSONDecodeError:
-        return {}
-    return found if isinstance(found, dict) else {}
-
-
-def _list(text: str) -> list[object]:
-    try:
-        found = json.loads(text)
-    except json.JSONDecodeError:
-        return []
-    return found if isinstance(found, list) else []

@@ -10,7 +10,7 @@ from scipy.stats import chi2
 from spectral.decomposition.flags import MEANING
 from spectral.reporting import panels
 from spectral.reporting.drawing import Picture, Sheet
-from spectral.reporting.maps_summary import DEVIANCE_EDGES, median
+from spectral.reporting.maps_summary import DEVIANCE_EDGES, median, middle_range
 from spectral.reporting.palette import (
     ACCENT,
     INK,
@@ -21,6 +21,7 @@ from spectral.reporting.palette import (
     marker,
     rank_colours,
 )
+from spectral.reporting.reason_map import Reason, draw_reasons, rarest_note
 from spectral.reporting.wording import GRAMS, count, listed, number, percent
 
 if TYPE_CHECKING:
@@ -31,7 +32,7 @@ if TYPE_CHECKING:
 
 FLAG_NAMES = {flag: str(flag.name).replace("_", " ").lower() for flag in MEANING}
 FLAG_REASONS = tuple(
-    panels.Reason(bit=int(flag), name=FLAG_NAMES[flag], meaning=meaning)
+    Reason(bit=int(flag), name=FLAG_NAMES[flag], meaning=meaning)
     for flag, meaning in MEANING.items()
 )
 _DEVIANCE_RANGE = 5.0
@@ -65,25 +66,21 @@ def material_picture(summary: MapsSummary, index: int) -> Picture:
         (sheet.axes[1], summary.single_error[index], "error of a single exposure"),
         (sheet.axes[2], summary.calibration_error[index], "error from the calibration"),
     ):
+        limits = panels.robust_limits(values)
         panels.draw_map(
-            axes,
-            values,
-            scale=error_scale(),
-            limits=panels.robust_limits(values),
-            label=GRAMS,
-            title=title,
+            axes, values, scale=error_scale(), limits=limits, label=GRAMS, title=title
         )
-    low, high = np.nanpercentile(density, [5, 95]) if np.isfinite(density).any() else (
-        np.nan, np.nan,
-    )  # fmt: skip
+    low, high = middle_range(density)
+    single, common = (
+        number(median(e[index]))
+        for e in (summary.single_error, summary.calibration_error)
+    )
     return sheet.picture(
         alt=(
             f"Three maps of {name}. Areal density: median {number(median(density))} "
             f"{GRAMS}, 5th to 95th percentile {number(low)} to {number(high)}. "
-            "Error of a single exposure: median "
-            f"{number(median(summary.single_error[index]))} {GRAMS}. Error from the "
-            "calibration: median "
-            f"{number(median(summary.calibration_error[index]))} {GRAMS}."
+            f"Error of a single exposure: median {single} {GRAMS}. Error from the "
+            f"calibration: median {common} {GRAMS}."
         ),
         caption=(
             f"{name}. Errors are one standard deviation, each with a scale of its "
@@ -98,7 +95,7 @@ def flags_picture(summary: MapsSummary) -> Picture:
     many = len(summary.exposure) > 1
     title = "flagged in any exposure" if many else "flags"
     sheet = Sheet(map_height(shape, 3) + 0.1, width=7.4)
-    panels.draw_reasons(sheet.axes[0], summary.flags, FLAG_REASONS, title=title)
+    draw_reasons(sheet.axes[0], summary.flags, FLAG_REASONS, title=title)
     found = [
         f"{r.name} {np.count_nonzero(summary.flags & r.bit)}"
         for r in FLAG_REASONS
@@ -111,12 +108,7 @@ def flags_picture(summary: MapsSummary) -> Picture:
         ),
         caption=(
             "Pixels by flag. A pixel with several flags shows the rarest of them."
-            + (
-                f" A point of the picture stands for {panels.block_size(shape)} by "
-                f"{panels.block_size(shape)} pixels and shows the rarest flag in it."
-                if panels.block_size(shape) > 1
-                else ""
-            )
+            f"{rarest_note(shape)}"
         ),
     )
 
@@ -125,38 +117,7 @@ def deviance_picture(summary: MapsSummary, freedom: int | None) -> Picture:
     """Deviances against what counting statistics alone gives, and their map."""
     shape = summary.flags.shape
     sheet = Sheet(max(3.2, map_height(shape, 3)), columns=2, column_widths=(1.35, 1.0))
-    axes = sheet.axes[0]
-    total = int(summary.deviance_counts.sum())
-    edges, heights = _histogram(summary.deviance_counts)
-    axes.stairs(
-        heights, edges, fill=True, color=STANDBY, label=f"{total} unflagged estimates"
-    )
-    expected = ""
-    if freedom:
-        x = np.linspace(1e-3, edges[-1], 400)
-        axes.plot(
-            x,
-            chi2.pdf(x * freedom, freedom) * freedom,
-            color=ACCENT,
-            label=f"counting statistics alone: chi-square, {freedom} degrees of freedom",
-        )
-        expected = (
-            f" Counting statistics alone would give a median of "
-            f"{number(float(chi2.median(freedom)) / freedom)}."
-        )
-        top = 1.25 * max(float(heights.max(initial=0.0)), _peak(freedom))
-        axes.set_ylim(0.0, top)
-    axes.set_xlim(0.0, edges[-1])
-    axes.set_xlabel("deviance per degree of freedom")
-    axes.set_ylabel("share of the estimates per unit")
-    axes.set_title("how well the counts are met")
-    axes.legend(loc="upper right")
-    beyond = int(summary.deviance_counts[DEVIANCE_EDGES[1:] > edges[-1] + 1e-9].sum())
-    if beyond:
-        axes.text(
-            0.99, 0.62, f"{beyond} beyond this range", transform=axes.transAxes,
-            ha="right", fontsize=7.5,
-        )  # fmt: skip
+    _draw_deviances(sheet.axes[0], summary, freedom)
     panels.draw_map(
         sheet.axes[1],
         summary.deviance,
@@ -165,20 +126,52 @@ def deviance_picture(summary: MapsSummary, freedom: int | None) -> Picture:
         label="deviance per degree of freedom",
         title="mean of the exposures" if len(summary.exposure) > 1 else "its map",
     )
-    middle = summary.deviance_percentile(50.0)
+    expected = ""
+    if freedom:
+        alone = number(float(chi2.median(freedom)) / freedom)
+        expected = f" Counting statistics alone would give a median of {alone}."
     return sheet.picture(
         alt=(
-            f"Histogram of {total} deviances per degree of freedom, median "
-            f"{number(middle)}.{expected} Beside it the map of the deviance."
+            f"Histogram of {summary.deviance_counts.sum()} deviances per degree of "
+            f"freedom, median {number(summary.deviance_percentile(50.0))}.{expected} "
+            "Beside it the map of the deviance."
         ),
         caption=(
             "A histogram shifted or stretched to the right means that something "
             "besides counting moves the counts: an object outside the basis, a "
             "threshold that drifted, the calibration's own error. In the map structure "
-            f"shows where. {panels.LIMITS_NOTE}"
-            f"{panels.block_note(shape)}"
+            f"shows where. {panels.LIMITS_NOTE}{panels.block_note(shape)}"
         ),
     )
+
+
+def _draw_deviances(axes: Axes, summary: MapsSummary, freedom: int | None) -> None:
+    """Histogram of the deviances, under the density that counting alone gives."""
+    total = int(summary.deviance_counts.sum())
+    edges, heights = _histogram(summary.deviance_counts)
+    axes.stairs(
+        heights, edges, fill=True, color=STANDBY, label=f"{total} unflagged estimates"
+    )
+    if freedom:
+        x = np.linspace(1e-3, edges[-1], 400)
+        axes.plot(
+            x,
+            chi2.pdf(x * freedom, freedom) * freedom,
+            color=ACCENT,
+            label=f"counting alone: chi-square, {freedom} degrees of freedom",
+        )
+        axes.set_ylim(0.0, 1.25 * max(float(heights.max()), _peak(freedom)))
+    axes.set_xlim(0.0, edges[-1])
+    axes.legend(loc="upper right")
+    panels.axis_words(
+        axes,
+        x="deviance per degree of freedom",
+        y="share of the estimates per unit",
+        title="how well the counts are met",
+    )
+    beyond = int(summary.deviance_counts[DEVIANCE_EDGES[1:] > edges[-1] + 1e-9].sum())
+    if beyond:
+        panels.note(axes, f"{beyond} beyond this range", height=0.72)
 
 
 def _peak(freedom: int) -> float:
@@ -194,7 +187,7 @@ def _histogram(
     """The summary's fine histogram in coarser bins, as a density."""
     total = max(int(counts.sum()), 1)
     width = 10
-    keep = int(round(_DEVIANCE_RANGE / (DEVIANCE_EDGES[1] * width))) * width
+    keep = round(_DEVIANCE_RANGE / (float(DEVIANCE_EDGES[1]) * width)) * width
     edges = DEVIANCE_EDGES[: keep + 1 : width]
     heights = counts[:keep].reshape(-1, width).sum(axis=1) / total
     return edges, heights / np.diff(edges)
@@ -262,32 +255,15 @@ def course_picture(summary: MapsSummary) -> Picture:
     """What happens from exposure to exposure."""
     materials = len(summary.material)
     sheet = Sheet(1.6 * (materials + 1) + 0.5, rows=materials + 1)
-    quarters = ("lower quartile", "median", "upper quartile")
-    for i, name in enumerate(summary.material):
-        axes = sheet.axes[i]
-        axes.axhline(0.0, color=MUTED, linewidth=0.8)
-        for q, words in enumerate(quarters):
-            values = summary.quartiles[:, i, q]
-            middle = float(np.nanmean(values)) if np.isfinite(values).any() else np.nan
-            axes.plot(
-                summary.exposure,
-                values - middle,
-                color=rank_colours(3)[q],
-                marker=marker(q),
-                label=f"{words} of the pixels, minus {number(middle, 4)}",
-            )
-        axes.set_title(name)
-        axes.set_ylabel(f"change, {GRAMS}")
-        axes.legend(ncols=3, loc="lower right", bbox_to_anchor=(1.0, 1.0))
-        panels.light_grid(axes)
+    for i in range(materials):
+        _draw_course(sheet.axes[i], summary, i)
     axes = sheet.axes[-1]
     axes.plot(summary.exposure, 100.0 * summary.flagged_share, color=INK, marker=".")
-    axes.set_title("pixels with a flag")
-    axes.set_ylabel("%")
     axes.set_ylim(0.0, 110.0 * max(float(summary.flagged_share.max()), 0.01))
-    axes.set_xlabel("exposure (index in the scan)")
     axes.locator_params(axis="x", integer=True)
-    panels.light_grid(axes)
+    panels.axis_words(
+        axes, x="exposure (index in the scan)", y="%", title="pixels with a flag"
+    )
     worst = int(np.argmax(summary.flagged_share))
     return sheet.picture(
         alt=(
@@ -302,3 +278,21 @@ def course_picture(summary: MapsSummary) -> Picture:
             "thresholds or object."
         ),
     )
+
+
+def _draw_course(axes: Axes, summary: MapsSummary, index: int) -> None:
+    """Quartiles of one material in each exposure, minus their own means."""
+    axes.axhline(0.0, color=MUTED, linewidth=0.8)
+    for q, words in enumerate(("lower quartile", "median", "upper quartile")):
+        values = summary.quartiles[:, index, q]
+        middle = float(np.nanmean(values)) if np.isfinite(values).any() else np.nan
+        axes.plot(
+            summary.exposure,
+            values - middle,
+            color=rank_colours(3)[q],
+            marker=marker(q),
+            label=f"{words} of the pixels, minus {number(middle, 4)}",
+        )
+    axes.legend(ncols=3, loc="lower right", bbox_to_anchor=(1.0, 1.0))
+    panels.axis_words(axes, x="", y=f"change, {GRAMS}", title=summary.material[index])
+    axes.locator_params(axis="x", integer=True)

@@ -217,3 +217,12 @@ def median(values: NDArray[np.floating]) -> float:
     """Median of the finite values; NaN if there is none."""
     finite = values[np.isfinite(values)]
     return float(np.median(finite)) if finite.size else float("nan")
+
+
+def middle_range(density: NDArray[np.float64]) -> tuple[float, float]:
+    """The fifth and the ninety-fifth percentile of the finite values."""
+    finite = density[np.isfinite(density)]
+    if finite.size == 0:
+        return float("nan"), float("nan")
+    low, high = np.percentile(finite, [5.0, 95.0])
+    return float(low), float(high)

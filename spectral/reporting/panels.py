@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from matplotlib.colors import BoundaryNorm, ListedColormap, Normalize
+from matplotlib.colors import Normalize
 from matplotlib.patches import Patch
 
 from spectral.reporting.palette import (
@@ -14,8 +14,6 @@ from spectral.reporting.palette import (
     GRID,
     MUTED,
     NO_VALUE,
-    REASON_COLOURS,
-    SOUND,
     signed_scale,
 )
 
@@ -25,7 +23,6 @@ if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.colors import Colormap
     from matplotlib.figure import Figure
-    from matplotlib.legend import Legend
     from numpy.typing import NDArray
 
 LARGEST_SIDE = 192
@@ -86,14 +83,14 @@ def block_median(image: NDArray[np.floating]) -> NDArray[np.float64]:
     values = np.asarray(image, np.float64)
     if size == 1:
         return values
-    blocks = _blocks(values, size)
+    blocks = blocks_of(values, size)
     finite = np.isfinite(blocks)
     enough = 2 * finite.sum(-1) >= blocks.shape[-1]
     blocks[~enough] = 0.0
     return np.where(enough, np.nanmedian(blocks, axis=-1), np.nan)
 
 
-def _blocks(values: NDArray[np.float64], size: int) -> NDArray[np.float64]:
+def blocks_of(values: NDArray[np.float64], size: int) -> NDArray[np.float64]:
     """Blocks of an image, shape (row, column, size * size); edges filled with NaN."""
     y, x = values.shape
     rows, columns = -(-y // size), -(-x // size)
@@ -136,7 +133,7 @@ def draw_map(
         interpolation="none",
         extent=(-0.5, x - 0.5, y - 0.5, -0.5),
     )
-    _frame(axes, title)
+    frame(axes, title)
     figure = _figure(axes)
     if not np.isfinite(image).all() and not figure.legends:
         figure.legend(handles=[no_value_patch()], loc="outside lower left")
@@ -162,7 +159,7 @@ def draw_map(
         aspect=30 if wide else 22,
     )
     bar.set_label(label)
-    bar.outline.set_linewidth(0.6)  # type: ignore[operator]
+    bar.outline.set_linewidth(0.6)
     bar.ax.tick_params(width=0.6)
 
 
@@ -173,7 +170,8 @@ def _figure(axes: Axes) -> Figure:
     return figure
 
 
-def _frame(axes: Axes, title: str) -> None:
+def frame(axes: Axes, title: str) -> None:
+    """Outline and axes of a map."""
     axes.set_title(title)
     for spine in axes.spines.values():
         spine.set_visible(True)
@@ -203,83 +201,6 @@ def draw_signed_map(
         title=title,
         bar_beside=bar_beside,
     )
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Reason:
-    """One reason not to trust pixels.
-
-    Attributes
-    ----------
-    bit : int
-    name : str
-        Short, as a person reads it.
-    meaning : str
-        A full clause.
-    """
-
-    bit: int
-    name: str
-    meaning: str
-
-
-def draw_reasons(
-    axes: Axes, flags: NDArray[np.integer], reasons: Sequence[Reason], *, title: str
-) -> Legend:
-    """Map of the reasons; a pixel with several shows its rarest.
-
-    A rare reason would vanish under a common one, and is what one must not miss.
-    """
-    counts = {r.bit: int(np.count_nonzero(flags & r.bit)) for r in reasons}
-    shown = [r for r in reasons if counts[r.bit]]
-    place = np.zeros(flags.shape, np.int64)
-    for reason in sorted(shown, key=lambda r: -counts[r.bit]):
-        place[flags & reason.bit != 0] = 1 + shown.index(reason)
-    colours = [SOUND, *(reason_colour(reasons, r) for r in shown)]
-    y, x = flags.shape
-    axes.imshow(
-        _block_rarest(place, block_size(flags.shape)),
-        cmap=ListedColormap(colours),
-        norm=BoundaryNorm(np.arange(len(colours) + 1) - 0.5, len(colours)),
-        interpolation="none",
-        extent=(-0.5, x - 0.5, y - 0.5, -0.5),
-    )
-    _frame(axes, title)
-    axes.set_anchor("NW")
-    words = ["sound", *(f"{r.name} ({counts[r.bit]})" for r in shown)]
-    sound = int(np.count_nonzero(flags == 0))
-    words[0] = f"sound ({sound})"
-    patches = [
-        Patch(facecolor=c, edgecolor=MUTED, linewidth=0.6, label=w)
-        for c, w in zip(colours, words, strict=True)
-    ]
-    return axes.legend(
-        handles=patches,
-        loc="upper left",
-        bbox_to_anchor=(1.02, 1.0),
-        borderaxespad=0.0,
-        title="pixels",
-        alignment="left",
-        title_fontsize=8.0,
-    )
-
-
-def reason_colour(reasons: Sequence[Reason], reason: Reason) -> str:
-    """The colour that a reason keeps on every page."""
-    return REASON_COLOURS[list(reasons).index(reason) % len(REASON_COLOURS)]
-
-
-def _block_rarest(place: NDArray[np.int64], size: int) -> NDArray[np.int64]:
-    """In each block the reason that is rarest in the whole map, if any."""
-    if size == 1:
-        return place
-    numbers, counts = np.unique(place, return_counts=True)
-    rank = np.zeros(int(place.max()) + 1)
-    order = numbers[np.argsort(-counts, kind="stable")]
-    order = np.concatenate([[0], order[order != 0]])
-    rank[order] = np.arange(order.size)
-    blocks = np.nan_to_num(_blocks(rank[place], size), nan=0.0)
-    return order[blocks.max(-1).astype(np.int64)]
 
 
 def draw_histogram(
@@ -320,11 +241,11 @@ def _histogram_limits(finite: NDArray[np.float64]) -> Limits:
     return Limits(low - margin, high + margin)
 
 
-def note(axes: Axes, text: str) -> None:
-    """A small remark in the upper right corner of a panel."""
+def note(axes: Axes, text: str, *, height: float = 0.98) -> None:
+    """A small remark at the right side of a panel, in the upper corner by default."""
     axes.text(
         0.99,
-        0.98,
+        height,
         text,
         transform=axes.transAxes,
         ha="right",
@@ -347,6 +268,14 @@ def mark_value(axes: Axes, value: float, text: str) -> None:
         fontsize=7.5,
         color=ACCENT,
     )
+
+
+def axis_words(axes: Axes, *, x: str, y: str, title: str = "") -> None:
+    """Label both axes, name the panel, and draw the grid."""
+    axes.set_xlabel(x)
+    axes.set_ylabel(y)
+    axes.set_title(title)
+    light_grid(axes)
 
 
 def light_grid(axes: Axes) -> None:

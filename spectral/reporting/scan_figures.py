@@ -79,7 +79,7 @@ def brightest_opens(scan: Scan, mean: NDArray[np.float64]) -> NDArray[np.int64]:
     same = scan.count_time_s[opens] == scan.count_time_s[best]
     if scan.current_ma is not None:
         same &= scan.current_ma[opens] == scan.current_ma[best]
-    return opens[same]
+    return np.asarray(opens[same])
 
 
 def _rate(scan: Scan, which: NDArray[np.int64]) -> NDArray[np.float64] | None:

@@ -9,13 +9,14 @@ import numpy as np
 
 from spectral.physics.cross_sections import table_source
 from spectral.reporting import scan_pictures as pictures
-from spectral.reporting.calibration_page import reasons_table
 from spectral.reporting.calibration_pictures import reasons_picture
+from spectral.reporting.calibration_tables import reasons_table
 from spectral.reporting.page import KeyFigure, Page, Section, Table
 from spectral.reporting.scan_figures import ScanFigures, scan_figures
 from spectral.reporting.wording import (
     NONE,
     count,
+    counts,
     fixed,
     listed,
     number,
@@ -28,8 +29,9 @@ if TYPE_CHECKING:
     from collections.abc import Sequence
 
     from spectral.reporting.drawing import Picture
+    from spectral.scans.counting_loss import CountingLoss
     from spectral.scans.scan import Scan
-    from spectral.scans.scan_check import ScanCheck
+    from spectral.scans.scan_check import ScanCheck, ThresholdCheck
 
 _MOST_ROWS = 400
 _VERDICT_WORDS = {
@@ -75,16 +77,16 @@ def _sentence(text: str) -> str:
 def _said(scan: Scan, check: ScanCheck) -> list[str]:
     roles = listed([f"{number} {role}" for role, number in check.roles.items()])
     materials = listed([m.name for m in scan.materials]) or "no named material"
-    said = [
-        _VERDICT_WORDS[check.verdict],
+    content = (
         f"{count(scan.shape[0], 'exposure')} ({roles}) at {scan.voltage_kv:g} kV, with "
         f"{materials}; {percent(1.0 - check.bad_pixels / check.reasons.size)} of the "
-        "pixels are sound.",
-    ]
+        "pixels are sound."
+    )
+    said = [_VERDICT_WORDS[check.verdict], content]
     if check.loss is not None:
         said.append(
-            f"Dead time {with_error(check.loss.median_ns, check.loss.standard_error_ns)} "
-            f"ns: {percent(check.loss.loss)} of the pulses are lost in the brightest "
+            f"Dead time {_dead_time(check.loss)}: {percent(check.loss.loss)} of the "
+            "pulses are lost in the brightest "
             f"open exposure, at {number(check.loss.highest_rate_per_s)} counts per "
             "second and pixel."
         )
@@ -103,7 +105,7 @@ def _key_figures(check: ScanCheck) -> list[KeyFigure]:
         ),
         KeyFigure(
             name="open counts of a pixel, lowest threshold",
-            text=number(lowest.open_counts),
+            text=counts(lowest.open_counts),
             remark=f"spread between pixels {percent(lowest.spread)}",
             value=lowest.open_counts,
         ),
@@ -114,7 +116,7 @@ def _key_figures(check: ScanCheck) -> list[KeyFigure]:
         ),
         KeyFigure(
             name="last open against first",
-            text=f"{with_error(100 * lowest.drift, 100 * lowest.drift_error, sign=True)} %",
+            text=f"{_drift(lowest)} %",
             remark="lowest threshold, brightest setting",
             value=lowest.drift,
         ),
@@ -123,12 +125,20 @@ def _key_figures(check: ScanCheck) -> list[KeyFigure]:
         figures.append(
             KeyFigure(
                 name="dead time",
-                text=f"{with_error(check.loss.median_ns, check.loss.standard_error_ns)} ns",
+                text=_dead_time(check.loss),
                 remark=f"{percent(check.loss.loss)} lost at the brightest",
                 value=check.loss.median_ns,
             )
         )
     return figures
+
+
+def _dead_time(loss: CountingLoss) -> str:
+    return f"{with_error(loss.median_ns, loss.standard_error_ns)} ns"
+
+
+def _drift(threshold: ThresholdCheck) -> str:
+    return with_error(100 * threshold.drift, 100 * threshold.drift_error, sign=True)
 
 
 def _sections(scan: Scan, check: ScanCheck, figures: ScanFigures) -> list[Section]:
@@ -190,7 +200,7 @@ def _exposure_table(scan: Scan, check: ScanCheck, figures: ScanFigures) -> Table
     rest = scan.shape[0] - shown
     more = f"; the first {shown} of {scan.shape[0]}" if rest else ""
     return Table(
-        caption=f"Exposures, with counts of the median sound pixel above each threshold{more}",
+        caption=f"Counts of the median sound pixel above each threshold{more}",
         header=(
             "exposure",
             "role",
@@ -206,7 +216,7 @@ def _exposure_table(scan: Scan, check: ScanCheck, figures: ScanFigures) -> Table
                 *(f"{t:g}" if np.isfinite(t) else NONE for t in scan.thickness_mm[i]),
                 f"{scan.count_time_s[i]:g}",
                 NONE if scan.current_ma is None else f"{scan.current_ma[i]:g}",
-                *(number(float(c), 5) for c in figures.median[i]),
+                *(counts(float(c)) for c in figures.median[i]),
             )
             for i in range(shown)
         ],
@@ -228,9 +238,9 @@ def _threshold_table(check: ScanCheck) -> Table:
             (
                 number(t.threshold_kev),
                 number(t.dark_rate_per_s),
-                number(t.open_counts, 5),
+                counts(t.open_counts),
                 percent(t.spread),
-                with_error(100 * t.drift, 100 * t.drift_error, sign=True),
+                _drift(t),
             )
             for t in check.thresholds
         ],
@@ -242,9 +252,9 @@ def _assumed(scan: Scan) -> list[str]:
     sensor = "not named"
     if scan.sensor_material is not None and scan.sensor_thickness_mm is not None:
         sensor = f"{scan.sensor_material}, {scan.sensor_thickness_mm:g} mm"
+    target = scan.target_material or "not named"
     return [
-        f"tube voltage {scan.voltage_kv:g} kV and target "
-        f"{scan.target_material or 'not named'}, as the scan says",
+        f"tube voltage {scan.voltage_kv:g} kV and target {target}, as the scan says",
         f"beam filters: {listed(filters) if filters else 'none named'}",
         f"sensor: {sensor}",
         *(f"{m.name}: {m.formula}, {m.density_g_cm3:g} g/cm3" for m in scan.materials),

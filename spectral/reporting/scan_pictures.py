@@ -24,6 +24,8 @@ from spectral.reporting.wording import GRAMS, count, fixed, listed, number
 from spectral.scans.scan import ROLES
 
 if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
     from spectral.reporting.scan_figures import ScanFigures
     from spectral.scans.scan import Scan
     from spectral.scans.scan_check import ScanCheck
@@ -50,20 +52,11 @@ def course_picture(scan: Scan, figures: ScanFigures) -> Picture:
             )  # fmt: skip
     axes.set_yscale("log")
     axes.set_xlim(-0.6, n - 0.4)
-    axes.set_xlabel("exposure (index in the scan)")
-    axes.set_ylabel("counts of the median pixel")
     axes.locator_params(axis="x", integer=True)
-    panels.light_grid(axes)
-    lines = [
-        Line2D([], [], color=c, label=f"above {number(float(e))} keV")
-        for c, e in zip(rank_colours(k), scan.thresholds_kev, strict=True)
-    ]
-    roles = [
-        Line2D([], [], color=MUTED, linestyle="none", marker=shape, label=role)
-        for role, shape in _ROLE_MARKERS.items()
-        if role in scan.role
-    ]
-    sheet.figure.legend(handles=[*lines, *roles], loc="outside right upper")
+    panels.axis_words(
+        axes, x="exposure (index in the scan)", y="counts of the median pixel"
+    )
+    sheet.figure.legend(handles=_course_legend(scan), loc="outside right upper")
     lit = [i for i, r in enumerate(scan.role) if r != "dark"]
     low = float(np.nanmin(figures.median[lit, -1])) if lit else 0.0
     high = float(np.nanmax(figures.median[lit, 0])) if lit else 0.0
@@ -78,6 +71,21 @@ def course_picture(scan: Scan, figures: ScanFigures) -> Picture:
             "current, time or step."
         ),
     )
+
+
+def _course_legend(scan: Scan) -> list[Line2D]:
+    """A line for each threshold, a marker for each role."""
+    colours = rank_colours(scan.thresholds_kev.size)
+    lines = [
+        Line2D([], [], color=c, label=f"above {number(float(e))} keV")
+        for c, e in zip(colours, scan.thresholds_kev, strict=True)
+    ]
+    roles = [
+        Line2D([], [], color=MUTED, linestyle="none", marker=shape, label=role)
+        for role, shape in _ROLE_MARKERS.items()
+        if role in scan.role
+    ]
+    return [*lines, *roles]
 
 
 def steps_picture(scan: Scan, figures: ScanFigures) -> Picture | None:
@@ -105,7 +113,7 @@ def steps_picture(scan: Scan, figures: ScanFigures) -> Picture | None:
         axes.set_ylabel("ln (open / step)")
         panels.light_grid(axes)
     if 1 < len(groups) <= _MOST_GROUPS:
-        sheet.axes[0].legend(loc="best")
+        sheet.axes[0].legend(loc="best", title=GRAMS, title_fontsize=8.0)
     return sheet.picture(
         alt=(
             f"Attenuation of {count(int(wedge.size), 'wedge exposure')} against "
@@ -121,14 +129,17 @@ def steps_picture(scan: Scan, figures: ScanFigures) -> Picture | None:
     )
 
 
-def _group_name(scan: Scan, values: np.ndarray[tuple[int, ...], np.dtype[np.float64]], first: int) -> str:
+def _group_name(scan: Scan, values: NDArray[np.float64], first: int) -> str:
+    """The materials that the points of one line share."""
     names = [m.name for i, m in enumerate(scan.materials) if i != first]
     return listed(
         [f"{name} {number(float(v))}" for name, v in zip(names, values, strict=True)]
     )
 
 
-def current_picture(scan: Scan, figures: ScanFigures, check: ScanCheck) -> Picture | None:
+def current_picture(
+    scan: Scan, figures: ScanFigures, check: ScanCheck
+) -> Picture | None:
     """Open counts per mA against the current: the counting loss."""
     if scan.current_ma is None:
         return None
@@ -151,18 +162,14 @@ def current_picture(scan: Scan, figures: ScanFigures, check: ScanCheck) -> Pictu
             label=f"above {number(float(scan.thresholds_kev[t]))} keV",
         )  # fmt: skip
     axes.axhline(0.0, color=MUTED, linewidth=0.8)
-    axes.set_xlabel("tube current (mA)")
-    axes.set_ylabel("counts per mA s, % from the lowest current")
-    axes.set_title("open exposures")
-    panels.light_grid(axes)
+    panels.axis_words(
+        axes,
+        x="tube current (mA)",
+        y="% from the lowest current",
+        title="open exposures: counts per mA s",
+    )
     axes.legend(loc="upper left", bbox_to_anchor=(1.02, 1.0))
-    words = "no dead time was found"
-    if check.loss is not None:
-        words = (
-            f"dead time {fixed(check.loss.median_ns, 0)} ns, "
-            f"{fixed(100 * check.loss.loss, 1)} % of the pulses lost at "
-            f"{number(check.loss.highest_rate_per_s)} counts per second and pixel"
-        )
+    words = _loss_words(check)
     return sheet.picture(
         alt=f"Open counts per current and time against tube current; {words}.",
         caption=(
@@ -170,6 +177,16 @@ def current_picture(scan: Scan, figures: ScanFigures, check: ScanCheck) -> Pictu
             "thresholds down; at high ones two small pulses may pass for a large one "
             "and pull them up."
         ),
+    )
+
+
+def _loss_words(check: ScanCheck) -> str:
+    if check.loss is None:
+        return "no dead time was found"
+    return (
+        f"dead time {fixed(check.loss.median_ns, 0)} ns, "
+        f"{fixed(100 * check.loss.loss, 1)} % of the pulses lost at "
+        f"{number(check.loss.highest_rate_per_s)} counts per second and pixel"
     )
 
 
@@ -214,10 +231,14 @@ def drift_picture(scan: Scan, figures: ScanFigures) -> Picture | None:
 
 def dispersion_picture(scan: Scan, check: ScanCheck) -> Picture | None:
     """Variance over mean across repeats, against what counting leaves."""
-    settings = sorted(check.dispersions, key=lambda d: -len(d.exposures))[:_MOST_SETTINGS]
+    settings = sorted(check.dispersions, key=lambda d: -len(d.exposures))[
+        :_MOST_SETTINGS
+    ]
     if not settings:
         return None
-    sheet = Sheet(2.7, columns=len(settings), width=min(11.0, 0.6 + 2.7 * max(2, len(settings))))
+    sheet = Sheet(
+        2.7, columns=len(settings), width=min(11.0, 0.6 + 2.7 * max(2, len(settings)))
+    )
     place = np.arange(scan.shape[1])
     for i, (axes, one) in enumerate(zip(sheet.axes, settings, strict=True)):
         axes.plot(place, one.expected, color=STANDBY, marker="_", markersize=14.0,
@@ -226,6 +247,7 @@ def dispersion_picture(scan: Scan, check: ScanCheck) -> Picture | None:
                       capsize=2.5, label="measured")  # fmt: skip
         axes.set_xticks(place, [number(float(e), 2) for e in scan.thresholds_kev])
         axes.set_xlabel("threshold (keV)")
+        axes.set_xlim(-0.6, place.size - 0.4)
         axes.set_title(
             f"{len(one.exposures)} exposures, {one.exposures[0]} to {one.exposures[-1]}"
         )
@@ -247,7 +269,9 @@ def dispersion_picture(scan: Scan, check: ScanCheck) -> Picture | None:
     )
 
 
-def images_picture(scan: Scan, figures: ScanFigures, check: ScanCheck) -> Picture | None:
+def images_picture(
+    scan: Scan, figures: ScanFigures, check: ScanCheck
+) -> Picture | None:
     """Open beam, dark counts and dead time of every pixel."""
     parts = [
         (figures.open_rate, "open beam", "counts per second"),
@@ -283,5 +307,3 @@ def images_picture(scan: Scan, figures: ScanFigures, check: ScanCheck) -> Pictur
             f"{panels.LIMITS_NOTE}{panels.block_note(shape)}"
         ),
     )
-
-

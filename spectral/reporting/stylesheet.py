@@ -24,10 +24,11 @@ h1{font-size:1.65rem;line-height:1.2;margin:0 0 .2rem;overflow-wrap:anywhere}
 .kind{margin:0;color:var(--muted)}
 .said{font-size:1.15rem;line-height:1.45;margin:1rem 0 1.1rem;max-width:52rem}
 .said p{margin:.35rem 0}
+.said p:first-child{font-weight:600}
 .look{border-left:.4rem solid var(--accent);padding:.1rem 0 .1rem .9rem;
  margin:.8rem 0;max-width:52rem}
 .look p{margin:.3rem 0}
-dl.key{display:grid;grid-template-columns:repeat(auto-fill,minmax(14.5rem,1fr));
+dl.key{display:grid;grid-template-columns:repeat(auto-fill,minmax(12rem,1fr));
  gap:.9rem 2rem;margin:0 0 1.2rem;padding:.7rem 0;border:solid var(--rule);
  border-width:1px 0}
 dl.key div{display:flex;flex-direction:column}
@@ -57,7 +58,7 @@ tbody th{font-weight:400}
 .swatch{display:inline-block;width:.85em;height:.85em;margin-right:.45em;
  border:1px solid var(--muted);vertical-align:-.06em}
 tbody th{white-space:nowrap}
-td{overflow-wrap:anywhere;white-space:pre-line}
+td{overflow-wrap:break-word;white-space:pre-line}
 footer{border-top:1px solid var(--rule);padding:1rem 0 2.5rem;font-size:.86rem;
  color:var(--muted)}
 footer .safe{color:var(--ink);font-weight:600}

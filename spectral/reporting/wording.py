@@ -14,6 +14,7 @@ NARROW_SPACE = "\N{NARROW NO-BREAK SPACE}"
 TIMES = "\N{MULTIPLICATION SIGN}"
 SIGMA = "\N{GREEK SMALL LETTER SIGMA}"
 GRAMS = "g/cm\N{SUPERSCRIPT TWO}"
+_RAISED = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 _LARGEST_PLAIN = 1e7
 _SMALLEST_PLAIN = 1e-5
 
@@ -90,6 +91,19 @@ def percent(share: float, places: int = 1) -> str:
     return f"{value:.{places}f}{NARROW_SPACE}%"
 
 
+def counts(value: float) -> str:
+    """Counts, or a mean or median of them, with at most one decimal place.
+
+    Examples
+    --------
+    >>> counts(9908.5), counts(716.0)
+    ('9908.5', '716')
+    """
+    return (
+        number(value) if not math.isfinite(value) else f"{value:.1f}".removesuffix(".0")
+    )
+
+
 def count(items: int, one: str, many: str = "") -> str:
     """A whole number and its noun.
 
@@ -123,7 +137,7 @@ def _exponent(size: float, digits: int) -> int:
 
 def _power(value: float, digits: int) -> str:
     mantissa, exponent = f"{value:.{digits - 1}e}".split("e")
-    raised = str(int(exponent)).translate(str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹"))
+    raised = str(int(exponent)).translate(_RAISED)
     return f"{mantissa}{NARROW_SPACE}{TIMES}{NARROW_SPACE}10{raised}"
 
 
