@@ -155,8 +155,9 @@ def _pooled_start(counts: Array, weight: Array, attenuation: Array) -> Array:
     """Fit of the summed counts to the summed weights, or no object at all."""
     share = len(counts) if len(weight) == 1 else 1
     pooled = share * weight.sum(axis=0, keepdims=True)
-    start = solve(counts.sum(axis=0, keepdims=True), pooled, attenuation)
-    return np.nan_to_num(start.areal_density[0])
+    total, zero = counts.sum(axis=0, keepdims=True), np.zeros(attenuation.shape[1])
+    found = solve(total, pooled, attenuation, start=zero)
+    return np.asarray(np.nan_to_num(found.areal_density[0]))
 
 
 def _sums(

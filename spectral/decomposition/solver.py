@@ -122,7 +122,9 @@ def solve(
     Poisson likelihood of independent bins, E. Roessl & R. Proksa 2007, Phys. Med.
     Biol. 52:4679 (from memory); Fisher scoring, C. R. Rao 1948, Proc. Camb. Phil. Soc.
     44:50 (from memory), turning to Newton's step close to the root. With a dead
-    fraction it is the quasi-likelihood of the same mean and covariance.
+    fraction it is the quasi-likelihood of the same mean and covariance. Covariance and
+    deviance are those at the last point evaluated, one last small step before the
+    estimate.
 
     Examples
     --------
@@ -170,7 +172,7 @@ def solve(
             dead[part] if len(dead) > 1 else dead,
             given[part] if len(given) > 1 else given,
             regression.coefficients,
-            regression.lowest,
+            np.maximum(regression.lowest, 0.0) if nonnegative else regression.lowest,
             regression.highest,
             bias_correction,
             nonnegative,

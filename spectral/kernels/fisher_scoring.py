@@ -24,6 +24,7 @@ from numba import njit
 from spectral.kernels.pixel_lanes import (
     LANES,
     LARGEST_INFLATION,
+    ROW,
     bend,
     expect,
     inflate,
@@ -44,7 +45,7 @@ if TYPE_CHECKING:
     Weight = NDArray[np.float64] | NDArray[np.float32]
     Whole = NDArray[np.int64]
 
-HALVINGS = 12
+HALVINGS = 30
 NEAR = 1.0  # standard errors squared, within which Newton's step is tried
 SLOWEST_NEWTON = 1e-3  # of the squared error may outlast a Newton step (q was held)
 CONVERGED, STEPS_SPENT, FEW_COUNTS, SINGULAR, UNUSABLE = range(5)
@@ -272,26 +273,26 @@ def fit_pixels(
     """
     pixels, bins = counts.shape
     nodes, materials = minus_attenuation.shape
-    n, opened = np.empty((bins, LANES)), np.empty((bins, LANES))
-    w, c = np.zeros((bins, nodes, LANES)), np.empty(LANES)
-    t, p = np.empty((nodes, LANES)), np.empty((nodes, LANES))
-    moment = np.empty((bins + 1, factor.shape[0], LANES))
-    scale, residual = np.empty((bins + 1, LANES)), np.empty((bins + 1, LANES))
+    n, opened = np.empty((bins, ROW)), np.empty((bins, ROW))
+    w, c = np.zeros((bins, nodes, ROW)), np.empty(ROW)
+    t, p = np.empty((nodes, ROW)), np.empty((nodes, ROW))
+    moment = np.empty((bins + 1, factor.shape[0], ROW))
+    scale, residual = np.empty((bins + 1, ROW)), np.empty((bins + 1, ROW))
     f, v = (
-        np.empty((materials, materials, LANES)),
-        np.empty((materials, materials, LANES)),
+        np.empty((materials, materials, ROW)),
+        np.empty((materials, materials, ROW)),
     )
     observed, observed_inverse = np.empty_like(f), np.empty_like(f)
-    scored, newton = np.empty((materials, LANES)), np.empty((materials, LANES))
-    along, decrement, straight = np.empty(LANES), np.empty(LANES), np.empty(LANES)
-    regular = np.empty(LANES)
-    u, a = np.empty((materials, LANES)), np.empty((materials, LANES))
-    base, move = np.empty((materials, LANES)), np.empty((materials, LANES))
-    sound, slope, last = np.empty(LANES), np.empty(LANES), np.empty(LANES)
-    chi, share = np.empty(LANES), np.zeros(LANES)
-    halved, steps = np.empty(LANES, np.int64), np.empty(LANES, np.int64)
-    outcome = np.empty(LANES, np.int64)
-    g = np.empty((materials, materials, materials, LANES))
+    scored, newton = np.empty((materials, ROW)), np.empty((materials, ROW))
+    along, decrement, straight = np.empty(ROW), np.empty(ROW), np.empty(ROW)
+    regular = np.empty(ROW)
+    u, a = np.empty((materials, ROW)), np.empty((materials, ROW))
+    base, move = np.empty((materials, ROW)), np.empty((materials, ROW))
+    sound, slope, last = np.empty(ROW), np.empty(ROW), np.empty(ROW)
+    chi, share = np.empty(ROW), np.zeros(ROW)
+    halved, steps = np.empty(ROW, np.int64), np.empty(ROW, np.int64)
+    outcome = np.empty(ROW, np.int64)
+    g = np.empty((materials, materials, materials, ROW))
     y, extra = np.empty_like(g), np.empty_like(f)
     for first in range(0, pixels, LANES):
         _load(first, counts, weight, dead_fraction, n, w, c, opened, outcome)
