@@ -189,6 +189,7 @@ def read_pixels(
     area = np.exp(pixels.ln_area)[:, None, None]
     ln_area = pixels.ln_area[:, None, None]
     variance = pixels.variance_kev2[:, None, None]
+    ln_dead = pixels.ln_dead_time[:, None, None]
     by_rate = read(tables.by_rate, value)
     by_variance = read(tables.by_variance, value)
     by_dead = read(tables.by_dead_time, value)
@@ -198,9 +199,10 @@ def read_pixels(
             read(tables.curve, by)
             + ln_area * read(tables.by_rate, by)
             + variance * read(tables.by_variance, by)
+            + ln_dead * read(tables.by_dead_time, by)
         )
 
-    above = area * (mixed(value) + pixels.ln_dead_time[:, None, None] * by_dead)
+    above = area * mixed(value)
     change = np.stack(
         [
             above + area * by_rate,
