@@ -28,7 +28,8 @@ class CountingLoss:
     dead_time_ns : array, shape (row, column), in ns
         NaN for pixels that were left out. Noise may make it negative.
     median_ns, standard_error_ns : float
-        Of the sound pixels' median.
+        Of the sound pixels' median. The error holds the counting noise and, with
+        three exposures or more, how unsteady the tube was.
     highest_rate_per_s : float
         Median counts per second in the brightest open exposure.
     loss : float
@@ -77,9 +78,8 @@ def counting_loss(
     if not usable.any():
         return None
     lit = counts[:, usable].astype(np.float64)
-    slope, start, variance = _lines(
-        current, np.log(lit / (current * time)[:, None]), lit
-    )
+    height = np.log(lit / (current * time)[:, None])
+    slope, start, variance = _lines(current, height, lit)
     per_current = np.exp(start)
     dead = np.full(sound.size, np.nan)
     dead[usable] = -slope / per_current * 1e9
@@ -87,7 +87,10 @@ def counting_loss(
     brightest = int(np.argmax(np.median(lit, axis=1) / time))
     rate = np.median(lit[brightest]) / time[brightest]
     true_rate = np.median(per_current) * current[brightest]
-    error = 1.253 * np.sqrt(np.mean(variance / per_current**2) / usable.sum()) * 1e9
+    noise = 1.253**2 * np.mean(variance / per_current**2) / usable.sum()
+    common = (height - start - current[:, None] * slope).mean(axis=1)
+    unsteady = _slope_variance(current, common) / np.median(per_current) ** 2
+    error = 1e9 * np.sqrt(noise + unsteady)
     return CountingLoss(
         dead_time_ns=dead.reshape(sound.shape),
         median_ns=median,
@@ -95,6 +98,14 @@ def counting_loss(
         highest_rate_per_s=float(rate),
         loss=float(1.0 - rate / true_rate),
     )
+
+
+def _slope_variance(x: NDArray[np.float64], residual: NDArray[np.float64]) -> float:
+    """Variance of a line's slope from the scatter of its residuals; 0 of two points."""
+    if len(x) < 3:
+        return 0.0
+    scatter = (residual**2).sum() / (len(x) - 2)
+    return float(scatter / ((x - x.mean()) ** 2).sum())
 
 
 def _lines(

@@ -260,6 +260,21 @@ def test_dead_time_from_two_currents(make_scan: Callable[..., Scan]) -> None:
     assert counting_loss(steady, ~nothing) is None
 
 
+def test_an_unsteady_tube_widens_the_dead_times_error(
+    make_scan: Callable[..., Scan],
+) -> None:
+    scan = make_scan(loss=0.1, pixels=(20, 20))
+    everything = np.ones((20, 20), bool)
+    steady = counting_loss(scan, everything)
+    brighter = np.ones(scan.shape[0])
+    brighter[[HALF, OPEN]] = 1.02
+    counts = np.rint(counts_of(scan) * brighter[:, None, None, None]).astype(np.uint32)
+    unsteady = counting_loss(scan.with_counts(counts), everything)
+    assert steady is not None
+    assert unsteady is not None
+    assert unsteady.standard_error_ns > 3 * steady.standard_error_ns
+
+
 def test_dispersion_of_counts_is_one(make_scan: Callable[..., Scan]) -> None:
     scan = make_scan(wedge=False, opens=8, pixels=(60, 60))
     (found,) = dispersions(scan, np.ones((60, 60), bool))
