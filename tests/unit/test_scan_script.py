@@ -240,10 +240,10 @@ def test_tables_of_another_file(tmp_path: Path) -> None:
     head, _, tail = HEAD.partition("[detector]")
     detector, _, rest = tail.partition("[[material]]")
     materials, _, defaults = rest.partition("[defaults]")
-    (tmp_path / "parts/bench.toml").write_text(
+    (tmp_path / "parts/detector.toml").write_text(
         f"[detector]{detector}rows = 4\ncolumns = 6\n[[material]]{materials}"
     )
-    use = 'use = "parts/bench.toml"\n'
+    use = 'use = "parts/detector.toml"\n'
     text = (
         f"{head}[detector]\n{use}thresholds_kev = [25, 40]\n"
         f"[[material]]\n{use}\n[defaults]{defaults}{EXPOSURES}"
