@@ -103,6 +103,8 @@ def simulate_scan(
     Returns
     -------
     VirtualScan
+        Its scan keeps what the template says, and takes sensor and pixel size from the
+        detector where the template is silent.
 
     Raises
     ------
@@ -117,7 +119,19 @@ def simulate_scan(
     counts: CountSource = run
     if not on_demand:
         counts = CountsInMemory(run.read(np.arange(run.shape[0])))
-    scan = replace(template, counts=counts, count_limit=detector.count_limit, digest="")
+    sensor = detector.sensor
+    told = {
+        "sensor_material": sensor.material,
+        "sensor_thickness_mm": sensor.thickness_um / 1000.0,
+        "pixel_size_um": (sensor.pitch_um, sensor.pitch_um),
+    }
+    scan = replace(
+        template,
+        counts=counts,
+        count_limit=detector.count_limit,
+        digest="",
+        **{k: v for k, v in told.items() if getattr(template, k) is None},  # type: ignore[arg-type]
+    )
     return VirtualScan(
         scan=scan,
         pixels=run.bench.pixels,

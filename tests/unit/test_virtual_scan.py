@@ -150,6 +150,8 @@ def test_counts_fall_with_threshold_and_with_what_stands_in_the_beam(
     # half the current, less pile-up
     assert 0.49 < mean[2, 0] / mean[1, 0] < 0.52
     assert result.scan.digest == ""
+    assert result.scan.sensor_material == "CdTe"
+    assert result.scan.pixel_size_um == (110.0, 110.0)
     assert result.areal_density[3].tolist() == pytest.approx([2.38, 0.27])
     assert np.all(np.isnan(result.areal_density[4]))
 
