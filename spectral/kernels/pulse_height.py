@@ -1,4 +1,4 @@
-"""Compiled sum over sampled two-site events: energies collected by square pixels.
+"""Compiled sum over sampled events of up to three sites: energies collected by square pixels.
 
 Flat arrays in, an ``out`` array filled; no validation. `spectral.physics.sensor`
 prepares the arguments and says what they mean; the NumPy twin stands in
@@ -15,6 +15,9 @@ from numba import njit
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
+
+LEAST_KEV = 0.01
+"""A pixel's smaller share of a deposit is dropped."""
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
@@ -58,6 +61,55 @@ def _deposit(row: NDArray[np.float64], energy: float, step: float, w: float) -> 
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
+def _add_site(
+    held: int,
+    x: float,
+    y: float,
+    drift: float,
+    energy: float,
+    variance: float,
+    diffusion_um: float,
+    thickness_um: float,
+    pitch_um: float,
+    trapping: float,
+    table: NDArray[np.float64],
+    share_x: NDArray[np.float64],
+    share_y: NDArray[np.float64],
+    pixel: NDArray[np.int64],
+    collected: NDArray[np.float64],
+) -> int:
+    """Divide one deposit between pixels; entries of one pixel add up.
+
+    Returns the number of entries held.
+    """
+    shift_x = int(math.floor(x / pitch_um))
+    shift_y = int(math.floor(y / pitch_um))
+    sigma = math.sqrt(variance + diffusion_um * drift)
+    _shares(x - shift_x * pitch_um, sigma, pitch_um, table, share_x)
+    _shares(y - shift_y * pitch_um, sigma, pitch_um, table, share_y)
+    energy *= 1.0 - trapping * drift / thickness_um
+    before = held
+    for i in range(3):
+        for j in range(3):
+            part = energy * share_x[i] * share_y[j]
+            if part < LEAST_KEV:
+                continue
+            row = shift_x + i
+            column = shift_y + j
+            place = held
+            for k in range(before):
+                if pixel[k, 0] == row and pixel[k, 1] == column:
+                    place = k
+            if place == held:
+                pixel[held, 0] = row
+                pixel[held, 1] = column
+                collected[held] = 0.0
+                held += 1
+            collected[place] += part
+    return held
+
+
+@njit(nogil=True, cache=True, error_model="numpy")
 def collect(
     out: NDArray[np.float64],
     weight: NDArray[np.float64],
@@ -67,6 +119,8 @@ def collect(
     second_kev: NDArray[np.float64],
     mu_second: NDArray[np.float64],
     cosine: NDArray[np.float64],
+    third_kev: float,
+    mu_third: float,
     variance0: NDArray[np.float64],
     diffusion_um: float,
     thickness_um: float,
@@ -80,16 +134,17 @@ def collect(
 
     A photon interacts at a depth drawn from its attenuation, leaves ``first_kev``
     there and sends a photon of ``second_kev`` (0 for none) at ``cosine`` to the
-    beam. Both clouds are Gaussian; variances add ``variance0`` (per energy) and
+    beam. Where that one is absorbed it sends ``third_kev`` (0 for none) anywhere.
+    Clouds are Gaussian; variances add ``variance0`` (per energy) and
     ``diffusion_um`` per um of drift to the far side.
 
-    weight (energy,), points (sample, 5) in [0, 1), mu_in (energy,) in 1/um,
-    first_kev, second_kev, mu_second (1/um), cosine: (energy, sample).
+    weight (energy,), points (sample, 8) in [0, 1), mu_in (energy,) and mu_third in
+    1/um, first_kev, second_kev, mu_second (1/um), cosine: (energy, sample).
     """
     share_x = np.zeros(3)
     share_y = np.zeros(3)
-    other_x = np.zeros(3)
-    other_y = np.zeros(3)
+    pixel = np.zeros((27, 2), np.int64)
+    collected = np.zeros(27)
     samples = points.shape[0]
     for e in range(out.shape[0]):
         if weight[e] == 0.0:
@@ -101,48 +156,39 @@ def collect(
             x = points[s, 0] * pitch_um
             y = points[s, 1] * pitch_um
             z = -math.log(1.0 - points[s, 2] * stopped) / mu_in[e]
-            drift = thickness_um - z
-            sigma = math.sqrt(variance0[e] + diffusion_um * drift)
-            _shares(x, sigma, pitch_um, table, share_x)
-            _shares(y, sigma, pitch_um, table, share_y)
-            first = first_kev[e, s] * (1.0 - trapping * drift / thickness_um)
+            held = _add_site(
+                0, x, y, thickness_um - z, first_kev[e, s], variance0[e],
+                diffusion_um, thickness_um, pitch_um, trapping, table, share_x,
+                share_y, pixel, collected,
+            )  # fmt: skip
             second = second_kev[e, s]
-            shift_x = 100
-            shift_y = 100
             if second > 0.0:
                 path = -math.log(1.0 - points[s, 4]) / mu_second[e, s]
-                depth = z + path * cosine[e, s]
-                if 0.0 < depth < thickness_um:
+                z += path * cosine[e, s]
+                if 0.0 < z < thickness_um:
                     side = path * math.sqrt(max(0.0, 1.0 - cosine[e, s] ** 2))
                     turn = 2.0 * math.pi * points[s, 3]
-                    x2 = x + side * math.cos(turn)
-                    y2 = y + side * math.sin(turn)
-                    shift_x = int(math.floor(x2 / pitch_um))
-                    shift_y = int(math.floor(y2 / pitch_um))
-                    drift = thickness_um - depth
-                    sigma = math.sqrt(variance0[0] + diffusion_um * drift)
-                    _shares(x2 - shift_x * pitch_um, sigma, pitch_um, table, other_x)
-                    _shares(y2 - shift_y * pitch_um, sigma, pitch_um, table, other_y)
-                    second *= 1.0 - trapping * drift / thickness_um
-                else:
-                    second = 0.0
-            for i in range(3):
-                for j in range(3):
-                    energy = first * share_x[i] * share_y[j]
-                    if second > 0.0:
-                        a = i - shift_x
-                        b = j - shift_y
-                        if 0 <= a < 3 and 0 <= b < 3:
-                            energy += second * other_x[a] * other_y[b]
-                    if energy > floor_kev:
-                        _deposit(row, energy, step_kev, w)
-            if second > 0.0:
-                for a in range(3):
-                    for b in range(3):
-                        i = a + shift_x
-                        j = b + shift_y
-                        if 0 <= i < 3 and 0 <= j < 3:
-                            continue
-                        energy = second * other_x[a] * other_y[b]
-                        if energy > floor_kev:
-                            _deposit(row, energy, step_kev, w)
+                    x += side * math.cos(turn)
+                    y += side * math.sin(turn)
+                    held = _add_site(
+                        held, x, y, thickness_um - z, second - third_kev,
+                        variance0[0], diffusion_um, thickness_um, pitch_um, trapping,
+                        table, share_x, share_y, pixel, collected,
+                    )  # fmt: skip
+                    if third_kev > 0.0:
+                        path = -math.log(1.0 - points[s, 7]) / mu_third
+                        up = 2.0 * points[s, 5] - 1.0
+                        z += path * up
+                        if 0.0 < z < thickness_um:
+                            side = path * math.sqrt(max(0.0, 1.0 - up * up))
+                            turn = 2.0 * math.pi * points[s, 6]
+                            held = _add_site(
+                                held, x + side * math.cos(turn),
+                                y + side * math.sin(turn), thickness_um - z,
+                                third_kev, variance0[0], diffusion_um, thickness_um,
+                                pitch_um, trapping, table, share_x, share_y, pixel,
+                                collected,
+                            )  # fmt: skip
+            for k in range(held):
+                if collected[k] > floor_kev:
+                    _deposit(row, collected[k], step_kev, w)

@@ -15,6 +15,7 @@ if TYPE_CHECKING:
 
     Floats = NDArray[np.float64]
 
+LEAST_KEV = 0.01
 TABLE_REACH = 5.0
 TABLE_PER_UNIT = 200.0
 ROW = np.arange(3)
@@ -30,6 +31,8 @@ def collect(
     second_kev: Floats,
     mu_second: Floats,
     cosine: Floats,
+    third_kev: float,
+    mu_third: float,
     variance0: Floats,
     diffusion_um: float,
     thickness_um: float,
@@ -41,38 +44,64 @@ def collect(
 ) -> None:
     """Add to ``out`` (energy, grid) the events of one interaction channel.
 
-    Parameters
-    ----------
-    out, weight, points, mu_in, first_kev, second_kev, mu_second, cosine, variance0,
-    diffusion_um, thickness_um, pitch_um, trapping, floor_kev, step_kev, table
-        As in `spectral.kernels.pulse_height.collect`.
+    Arguments as in `spectral.kernels.pulse_height.collect`.
     """
-    place = points[:, :2] * pitch_um
-    turn = 2.0 * np.pi * points[:, 3]
-    direction = np.stack([np.cos(turn), np.sin(turn)], axis=1)
+    everyone = np.arange(points.shape[0])
+
+    def site(
+        sample: NDArray[np.int64], spot: Floats, energy: Floats, variance: float
+    ) -> tuple[NDArray[np.int64], Floats]:
+        """Keys (sample, row, column) and energies of a deposit's nine pixels."""
+        drift = thickness_um - spot[:, 2]
+        shift = np.floor(spot[:, :2] / pitch_um).astype(np.int64)
+        parts = _sites(
+            spot[:, :2] - shift * pitch_um, spot[:, 2], variance, diffusion_um,
+            thickness_um, pitch_um, table,
+        )  # fmt: skip
+        parts = (energy * (1.0 - trapping * drift / thickness_um))[
+            :, None, None
+        ] * parts
+        i, j = np.broadcast_arrays(
+            shift[:, 0, None, None] + ROW[:, None], shift[:, 1, None, None] + ROW
+        )
+        keys = np.stack(
+            [np.broadcast_to(sample[:, None, None], i.shape), i, j], axis=-1
+        )
+        kept = parts >= LEAST_KEV
+        return keys[kept], parts[kept]
+
     for e in np.flatnonzero(weight):
         reach = -np.expm1(-mu_in[e] * thickness_um)
         depth = -np.log1p(-points[:, 2] * reach) / mu_in[e]
-        own = _sites(place, depth, variance0[e], diffusion_um, thickness_um, pitch_um,
-                     table)  # fmt: skip
-        kept = 1.0 - trapping * (thickness_um - depth) / thickness_um
-        energy = (first_kev[e] * kept)[:, None, None] * own
-        path = -np.log1p(-points[:, 4]) / mu_second[e]
-        other_depth = depth + path * cosine[e]
-        stays = (second_kev[e] > 0.0) & (other_depth > 0.0)
-        stays &= other_depth < thickness_um
-        side = path * np.sqrt(np.maximum(0.0, 1.0 - cosine[e] ** 2))
-        far = (place + side[:, None] * direction)[stays]
-        other_depth = other_depth[stays]
-        shift = np.floor(far / pitch_um).astype(np.int64)
-        parts = _sites(far - shift * pitch_um, other_depth, variance0[0],
-                       diffusion_um, thickness_um, pitch_um, table)  # fmt: skip
-        kept = 1.0 - trapping * (thickness_um - other_depth) / thickness_um
-        parts = (second_kev[e, stays] * kept)[:, None, None] * parts
-        apart = _join(energy, np.flatnonzero(stays), parts, shift)
-        heights = np.concatenate([energy.ravel(), apart])
+        spot = np.column_stack([points[:, :2] * pitch_um, depth])
+        sites = [site(everyone, spot, first_kev[e], variance0[e])]
+        sent = everyone[second_kev[e] > 0.0]
+        path = -np.log1p(-points[sent, 4]) / mu_second[e, sent]
+        spot = _flown(spot[sent], path, cosine[e, sent], points[sent, 3])
+        inside = (spot[:, 2] > 0.0) & (spot[:, 2] < thickness_um)
+        sent, spot = sent[inside], spot[inside]
+        sites.append(site(sent, spot, second_kev[e, sent] - third_kev, variance0[0]))
+        if third_kev > 0.0:
+            path = -np.log1p(-points[sent, 7]) / mu_third
+            spot = _flown(spot, path, 2.0 * points[sent, 5] - 1.0, points[sent, 6])
+            inside = (spot[:, 2] > 0.0) & (spot[:, 2] < thickness_um)
+            sent, spot = sent[inside], spot[inside]
+            sites.append(site(sent, spot, np.full(sent.size, third_kev), variance0[0]))
+        keys = np.concatenate([k for k, _ in sites])
+        parts = np.concatenate([p for _, p in sites])
+        _, same = np.unique(keys, axis=0, return_inverse=True)
+        heights = np.bincount(same.ravel(), weights=parts)
         heights = heights[heights > floor_kev]
         _deposit(out[e], heights / step_kev, weight[e] / points.shape[0])
+
+
+def _flown(spot: Floats, path: Floats, cosine: Floats, turn: Floats) -> Floats:
+    """Where photons from ``spot`` (sample, 3) are after ``path`` um."""
+    side = path * np.sqrt(np.maximum(0.0, 1.0 - cosine**2))
+    angle = 2.0 * np.pi * turn
+    return spot + np.column_stack(
+        [side * np.cos(angle), side * np.sin(angle), path * cosine]
+    )
 
 
 def _sites(
@@ -97,20 +126,6 @@ def _normal_cdf(value: Floats, table: Floats) -> Floats:
     place = (value + TABLE_REACH) * TABLE_PER_UNIT
     known = np.interp(place, np.arange(table.size), table)
     return np.where(place <= 0.0, 0.0, np.where(place >= table.size - 1, 1.0, known))
-
-
-def _join(
-    energy: Floats, sample: NDArray[np.int64], parts: Floats, shift: NDArray[np.int64]
-) -> Floats:
-    """Add second sites where they share pixels with the first; return the others."""
-    apart = []
-    for a in ROW:
-        for b in ROW:
-            i, j = a + shift[:, 0], b + shift[:, 1]
-            shared = (i >= 0) & (i < 3) & (j >= 0) & (j < 3)
-            energy[sample[shared], i[shared], j[shared]] += parts[shared, a, b]
-            apart.append(parts[~shared, a, b])
-    return np.concatenate(apart)
 
 
 def _deposit(row: Floats, place: Floats, weight: float) -> None:

@@ -106,12 +106,13 @@ def electron_range_um(
 
 @cache
 def sample_points(samples: int) -> NDArray[np.float64]:
-    """Evenly spread points in [0, 1)^5, shape (sample, 5); always the same.
+    """Evenly spread points in [0, 1)^9, shape (sample, 9); always the same.
 
-    Columns: place across and along the pixel, depth, turn, path.
+    Columns: place across and along the pixel, depth; turn and path of a second
+    photon; cosine, turn and path of a third; cosine of the second.
     Source: I. M. Sobol, USSR Comput. Math. Math. Phys. 7 (1967) 86, scrambled.
     """
-    points = qmc.Sobol(5, rng=np.random.default_rng(20)).random(samples)
+    points = qmc.Sobol(9, rng=np.random.default_rng(20)).random(samples)
     points = np.asarray(np.clip(points, 0.0, 1.0 - 1e-12))
     points.flags.writeable = False
     return points
@@ -158,7 +159,8 @@ def pulse_heights(
     Notes
     -----
     Channels: photoelectric absorption without and with each K line (isotropic,
-    absorbed in this pixel, in another one, or gone), Compton recoil with the
+    absorbed in this pixel, in another one, or gone), followed by the K lines that a
+    line itself can raise (Te K in CdTe raises Cd K), Compton recoil with the
     scattered photon followed once. Coherent scattering is left out. Fano noise is
     included, electronic noise is not (`spectral.physics.pileup` adds it).
     """
@@ -173,12 +175,7 @@ def pulse_heights(
     silent = 1.0 - sum(emitted, np.zeros_like(energy_kev))
     shape = (energy_kev.size, samples)
     full = np.ascontiguousarray(np.broadcast_to(energy_kev[:, None], shape))
-    even = np.ascontiguousarray(np.broadcast_to(2.0 * points[None, :, 3] - 1.0, shape))
-    # the turn must not follow the cosine: take it from the path's column, folded
-    turned = points.copy()
-    turned[:, 3] = (points[:, 4] * 7919.0) % 1.0
-    nothing = np.zeros(shape)
-    ones = np.ones(shape)
+    even = np.ascontiguousarray(np.broadcast_to(2.0 * points[None, :, 8] - 1.0, shape))
     spread = (
         charge.initial_um**2
         + (charge.range_share * electron_range_um(sensor, energy_kev)) ** 2
@@ -190,20 +187,26 @@ def pulse_heights(
         second: NDArray[np.float64],
         mu_second: NDArray[np.float64],
         cosine: NDArray[np.float64],
+        third_kev: float = 0.0,
     ) -> None:
+        mu_third = float(_linear(sensor, np.array([third_kev or 1.0]), "total")[0])
         collect(
-            out, weight, turned, active, first, second, mu_second, cosine, spread,
-            charge.diffusion_um, sensor.thickness_um, sensor.pitch_um,
-            charge.trapping, floor_kev, step_kev, _normal_table(),
+            out, weight, points, active, first, second, mu_second, cosine, third_kev,
+            mu_third, spread, charge.diffusion_um, sensor.thickness_um,
+            sensor.pitch_um, charge.trapping, floor_kev, step_kev, _normal_table(),
         )  # fmt: skip
 
     absorbed = stopped * photo / active
-    add(absorbed * silent, full, nothing, ones, even)
+    add(absorbed * silent, full, np.zeros(shape), np.ones(shape), even)
     for line, share in zip(lines, emitted, strict=True):
         second = np.full(shape, line.energy_kev)
-        line_mu = _linear(sensor, np.array([line.energy_kev]), "total")[0]
-        add(absorbed * share, full - second, second, np.full(shape, line_mu), even)
-    cosine = compton.scattering_cosine(energy_kev, points[:, 3])
+        mu_second = np.full(
+            shape, _linear(sensor, np.array([line.energy_kev]), "total")[0]
+        )
+        weight = absorbed * share
+        for third, part in _raised(sensor, line.energy_kev, charge.fluorescence):
+            add(weight * part, full - second, second, mu_second, even, third)
+    cosine = compton.scattering_cosine(energy_kev, points[:, 8])
     left = compton.scattered_energy_kev(energy_kev[:, None], cosine)
     add(
         stopped * scatter / active,
@@ -213,6 +216,23 @@ def pulse_heights(
         cosine,
     )
     return _with_fano(out, sensor, step_kev)
+
+
+def _raised(
+    sensor: Sensor, line_kev: float, fluorescence_factor: float
+) -> tuple[tuple[float, float], ...]:
+    """K lines that a K photon raises where it is absorbed: (energy or 0, share).
+
+    The sensor's photons of a few tens of keV are absorbed photoelectrically.
+    """
+    raised = tuple(
+        (line.energy_kev, fluorescence_factor * float(line.per_photoabsorption[0]))
+        for line in fluorescence.fluorescence_lines(
+            sensor.weight_fractions, np.array([line_kev])
+        )
+    )
+    raised = tuple((energy, share) for energy, share in raised if share > 0.0)
+    return ((0.0, 1.0 - sum(share for _, share in raised)), *raised)
 
 
 def _linear(

@@ -38,8 +38,9 @@ def sensor(
 
 @pytest.mark.parametrize("pitch_um", [30.0, 100.0, 500.0])
 @pytest.mark.parametrize("trapping", [0.0, 0.05])
+@pytest.mark.parametrize("third_kev", [0.0, 4.0])
 def test_compiled_collection_equals_the_numpy_twin(
-    pitch_um: float, trapping: float
+    pitch_um: float, trapping: float, third_kev: float
 ) -> None:
     rng = np.random.default_rng(5)
     energies, samples = 4, 1500
@@ -48,12 +49,14 @@ def test_compiled_collection_equals_the_numpy_twin(
     second = np.where(rng.random(shape) < 0.8, rng.uniform(5, 15, shape), 0.0)
     arguments = (
         np.array([0.7, 0.0, 1.3, 0.2]),
-        rng.random((samples, 5)),
+        rng.random((samples, 8)),
         np.array([0.03, 0.02, 0.004, 0.002]),
         energy[:, None] - second,
         second,
         rng.uniform(0.002, 0.05, shape),
         rng.uniform(-1.0, 1.0, shape),
+        third_kev,
+        0.02,
         np.array([9.0, 10.0, 20.0, 40.0]),
         0.1, 1000.0, pitch_um, trapping, 0.25, 0.5, sensor_module._normal_table(),
     )  # fmt: skip
@@ -83,7 +86,7 @@ def test_same_arguments_give_the_same_heights() -> None:
 
 def test_sample_points_cover_the_cube_and_cannot_be_changed() -> None:
     points = sample_points(1024)
-    assert points.shape == (1024, 5)
+    assert points.shape == (1024, 9)
     assert points.min() >= 0.0
     assert points.max() < 1.0
     # scrambled Sobol points in base 2: 64 equal slices of each axis get 16 points each
