@@ -42,6 +42,10 @@ PIXEL_REASONS = tuple(
     )
     for reason, meaning in REASON_MEANING.items()
 )
+_THRESHOLDS_NOTE = (
+    "All histograms have the same width in keV, all maps the same colours. Stripes or "
+    "blocks follow the readout; a lone bright pixel is one whose threshold is off."
+)
 _MOST_NAMED_ROWS = 60
 _MOST_IN_ROW = 6
 
@@ -95,14 +99,10 @@ def _threshold_sheet(
         )
     return sheet.picture(
         alt=(
-            "Histograms of true minus nominal threshold, and maps of each pixel's "
+            "Histograms of true minus nominal threshold, above maps of each pixel's "
             f"departure from the average pixel. {listed(words)}."
         ),
-        caption=(
-            "All histograms have the same width in keV, all maps the same colours. "
-            f"{panels.SIGNED_NOTE} Stripes or blocks follow the readout; a lone bright "
-            f"pixel is one whose threshold is off.{panels.block_note(shape)}"
-        ),
+        caption=(f"{_THRESHOLDS_NOTE} {panels.SIGNED_NOTE}{panels.block_note(shape)}"),
     )
 
 

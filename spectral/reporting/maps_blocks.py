@@ -18,6 +18,7 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
+IN_MEMORY = "maps in memory"
 _BLOCK_BYTES = 64 << 20
 
 
@@ -43,7 +44,7 @@ class MapsBlocks:
     ) -> None:
         self._source = source
         if isinstance(source, Maps):
-            self.name = "maps in memory"
+            self.name = IN_MEMORY
             listed = source.exposure
             self._bytes_each = source.areal_density[:1].nbytes
         else:

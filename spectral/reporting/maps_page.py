@@ -10,6 +10,7 @@ from scipy.stats import chi2
 
 from spectral.errors import InputError
 from spectral.reporting import maps_pictures as pictures
+from spectral.reporting.maps_blocks import IN_MEMORY
 from spectral.reporting.maps_record import (
     numbers_in,
     record_table,
@@ -95,6 +96,8 @@ def _title(summary: MapsSummary, name: str) -> str:
     scan = summary.process.get("scan", "")
     of = listed(summary.material)
     where = PurePath(scan or name).name
+    if not scan and name == IN_MEMORY:
+        return of
     if len(summary.exposure) == 1:
         return f"{of} in exposure {summary.exposure[0]} of {where}"
     return f"{of} in {where}"
@@ -107,6 +110,9 @@ def _said(summary: MapsSummary) -> list[str]:
         single = median(summary.single_error[i])
         share = median(summary.calibration_error[i])
         low, high = middle_range(density)
+        if not np.isfinite(low):
+            said.append(f"{name}: no pixel has a value.")
+            continue
         said.append(
             f"{name}: {beside(median(density), single)} {GRAMS} in the median pixel, "
             f"{beside(low, single)} to {beside(high, single)} in nine pixels of ten. "

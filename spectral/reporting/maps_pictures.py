@@ -37,6 +37,9 @@ FLAG_REASONS = tuple(
 )
 _DEVIANCE_RANGE = 5.0
 _TALLEST = 6.0
+_FLAT_HEIGHT = 1.1
+_MOST_PROFILE_POINTS = 480
+_MOST_MARKED_POINTS = 160
 
 
 def map_height(shape: tuple[int, ...], columns: int) -> float:
@@ -44,7 +47,8 @@ def map_height(shape: tuple[int, ...], columns: int) -> float:
     y, x = shape
     wide = x >= 2 * y
     each = 11.0 / columns - (0.75 if wide else 1.3)
-    return min(_TALLEST, max(1.6, each * y / x + (1.35 if wide else 0.95)))
+    around = 1.35 if wide else 0.95
+    return min(_TALLEST, max(_FLAT_HEIGHT, each * y / x) + around)
 
 
 def material_picture(summary: MapsSummary, index: int) -> Picture:
@@ -196,44 +200,72 @@ def _histogram(
 def profile_picture(summary: MapsSummary, row: int) -> Picture:
     """Each material along one row, with both errors."""
     materials = len(summary.material)
-    many = len(summary.exposure) > 1
     sheet = Sheet(0.5 + 1.9 * materials, rows=materials)
-    column = np.arange(summary.flags.shape[1])
-    words = []
-    for i, (axes, name) in enumerate(zip(sheet.axes, summary.material, strict=True)):
-        value = summary.density[i, row]
-        single = summary.single_error[i, row]
-        common = summary.calibration_error[i, row]
-        _band(axes, column, value, single, STANDBY, "± error of a single exposure")
-        _band(axes, column, value, common, ACCENT, "± error from the calibration")
-        axes.plot(
-            column,
-            value,
-            color=INK,
-            linewidth=1.1,
-            marker=".",
-            markersize=3.5,
-            label="mean of the exposures" if many else "estimate",
-        )
-        axes.set_title(f"{name}, row {row}")
-        axes.set_ylabel(f"{GRAMS}")
-        axes.set_xlim(column[0] - 0.5, column[-1] + 0.5)
-        panels.light_grid(axes)
-        words.append(f"{name}: median {number(median(value))} {GRAMS}")
+    for i, axes in enumerate(sheet.axes):
+        _draw_profile(axes, summary, i, row)
     sheet.axes[-1].set_xlabel("column (pixel)")
     sheet.axes[0].legend(ncols=3, loc="lower right", bbox_to_anchor=(1.0, 1.0))
+    words = [
+        f"{name}: median {number(median(summary.density[i, row]))} {GRAMS}"
+        for i, name in enumerate(summary.material)
+    ]
+    together = _together(summary)
+    thinned = f" Each point is the median of {together} columns." * (together > 1)
     return sheet.picture(
         alt=f"Profiles along row {row}. {listed(words)}.",
         caption=(
             "Bands are one standard deviation to each side. The calibration's part is "
-            "the same in every repeat: averaging does not remove it."
+            f"the same in every repeat: averaging does not remove it.{thinned}"
         ),
     )
 
 
+def _together(summary: MapsSummary) -> int:
+    """Columns that one point of a profile stands for."""
+    columns = int(summary.flags.shape[1])
+    return -(-columns // _MOST_PROFILE_POINTS)
+
+
+def _draw_profile(axes: Axes, summary: MapsSummary, index: int, row: int) -> None:
+    together = _together(summary)
+    value, single, common = (
+        thinned(field[index, row], together)
+        for field in (summary.density, summary.single_error, summary.calibration_error)
+    )
+    columns = summary.flags.shape[1]
+    place = np.arange(0.5 * (together - 1), columns, together, dtype=np.float64)
+    _band(axes, place, value, single, STANDBY, "± error of a single exposure")
+    _band(axes, place, value, common, ACCENT, "± error from the calibration")
+    many = len(summary.exposure) > 1
+    axes.plot(
+        place,
+        value,
+        color=INK,
+        linewidth=1.1,
+        marker="." if value.size <= _MOST_MARKED_POINTS else "",
+        markersize=3.5,
+        label="mean of the exposures" if many else "estimate",
+    )
+    axes.set_xlim(-0.5, columns - 0.5)
+    title = f"{summary.material[index]}, row {row}"
+    panels.axis_words(axes, x="", y=GRAMS, title=title)
+
+
+def thinned(values: NDArray[np.float64], together: int) -> NDArray[np.float64]:
+    """Medians of the finite values of neighbours; NaN where there is none."""
+    if together == 1:
+        return values
+    full = np.full(-(-values.size // together) * together, np.nan)
+    full[: values.size] = values
+    groups = full.reshape(-1, together)
+    some = np.isfinite(groups).any(axis=1)
+    groups[~some] = 0.0
+    return np.where(some, np.nanmedian(groups, axis=1), np.nan)
+
+
 def _band(
     axes: Axes,
-    place: NDArray[np.int64],
+    place: NDArray[np.float64],
     value: NDArray[np.float64],
     error: NDArray[np.float64],
     colour: str,
@@ -246,7 +278,7 @@ def _band(
         color=colour,
         alpha=0.45,
         linewidth=0.0,
-        step="mid",
+        step="mid" if place.size <= _MOST_MARKED_POINTS else None,
         label=label,
     )
 

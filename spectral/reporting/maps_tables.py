@@ -42,6 +42,7 @@ def scatter_ratio(summary: MapsSummary, index: int) -> float:
 
 def numbers_table(summary: MapsSummary) -> Table:
     """Areal densities and their errors, a row for each material."""
+    repeats_there = len(summary.exposure) > 1
     rows = []
     for i, name in enumerate(summary.material):
         single = median(summary.single_error[i])
@@ -55,7 +56,7 @@ def numbers_table(summary: MapsSummary) -> Table:
                 beside(low, single),
                 beside(high, single),
                 number(single),
-                number(median(summary.mean_error[i])),
+                *([number(median(summary.mean_error[i]))] if repeats_there else []),
                 number(share),
                 number(repeats, 2) if np.isfinite(repeats) else NONE,
                 str(int(np.count_nonzero(summary.estimates[i]))),
@@ -69,7 +70,11 @@ def numbers_table(summary: MapsSummary) -> Table:
             "5th percentile",
             "95th percentile",
             "error of one exposure",
-            f"error of the mean of {len(summary.exposure)}",
+            *(
+                [f"error of the mean of {len(summary.exposure)}"]
+                if repeats_there
+                else []
+            ),
             "error from the calibration",
             "exposures at which both are equal",
             "pixels with a value",

@@ -87,9 +87,7 @@ def signed_scale() -> Colormap:
 
 
 def _with_no_value(scale: Colormap) -> Colormap:
-    copy = scale.copy()
-    copy.set_bad(NO_VALUE)
-    return copy
+    return scale.with_extremes(bad=NO_VALUE)
 
 
 def rank_colours(count: int) -> tuple[str, ...]:

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+import textwrap
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -25,7 +27,9 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
     from numpy.typing import NDArray
 
-LARGEST_SIDE = 192
+MOST_POINTS = 192 * 192
+_FLAT = 8
+_NARROW_TITLE = 18
 _LOW_PERCENT, _HIGH_PERCENT = 1.0, 99.0
 LIMITS_NOTE = (
     "Colours span the 1st to the 99th percentile of the pixels; arrowed ends of the "
@@ -66,7 +70,7 @@ def signed_limits(values: NDArray[np.floating]) -> Limits:
 
 def block_size(shape: tuple[int, ...]) -> int:
     """Pixels along each side of the blocks that a picture can show."""
-    return max(1, -(-max(shape) // LARGEST_SIDE))
+    return max(1, math.ceil(math.sqrt(math.prod(shape) / MOST_POINTS)))
 
 
 def block_note(shape: tuple[int, ...]) -> str:
@@ -126,16 +130,17 @@ def draw_map(
         Maps that share the bar; none for no bar here.
     """
     y, x = image.shape
+    picture = block_median(image)
     shown = axes.imshow(
-        block_median(image),
+        picture,
         cmap=scale,
         norm=Normalize(limits.low, limits.high),
         interpolation="none",
         extent=(-0.5, x - 0.5, y - 0.5, -0.5),
     )
-    frame(axes, title)
+    frame(axes, textwrap.fill(title, _NARROW_TITLE) if y > 2 * x else title)
     figure = _figure(axes)
-    if not np.isfinite(image).all() and not figure.legends:
+    if not np.isfinite(picture).all() and not figure.legends:
         figure.legend(handles=[no_value_patch()], loc="outside lower left")
     if bar_beside is not None and len(bar_beside) == 0:
         return
@@ -156,7 +161,7 @@ def draw_map(
         location="bottom" if wide else "right",
         fraction=0.05,
         pad=0.03,
-        aspect=30 if wide else 22,
+        aspect=30 if wide else 22 * min(max(1.0, y / x), 2.0),
     )
     bar.set_label(label)
     bar.outline.set_linewidth(0.6)
@@ -179,7 +184,16 @@ def frame(axes: Axes, title: str) -> None:
         spine.set_linewidth(0.6)
     axes.set_xlabel("column (pixel)")
     axes.set_ylabel("row (pixel)")
-    axes.locator_params(nbins=4, integer=True)
+    axes.locator_params(nbins=4, integer=True, min_n_ticks=1)
+    if is_flat(axes):
+        axes.set_aspect("auto")
+    axes.set_anchor("W")
+
+
+def is_flat(axes: Axes) -> bool:
+    """Whether a map is a line rather than a field: pixels are then not square."""
+    wide, high = abs(np.diff(axes.get_xlim())[0]), abs(np.diff(axes.get_ylim())[0])
+    return bool(wide > _FLAT * high or high > _FLAT * wide)
 
 
 def draw_signed_map(

@@ -71,7 +71,8 @@ def draw_reasons(
         extent=(-0.5, x - 0.5, y - 0.5, -0.5),
     )
     panels.frame(axes, title)
-    axes.set_anchor("NW")
+    if not panels.is_flat(axes):
+        axes.set_anchor("NW")
     words = ["sound", *(f"{r.name} ({counts[r.bit]})" for r in shown)]
     sound = int(np.count_nonzero(flags == 0))
     words[0] = f"sound ({sound})"

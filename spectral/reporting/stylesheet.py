@@ -24,7 +24,6 @@ h1{font-size:1.65rem;line-height:1.2;margin:0 0 .2rem;overflow-wrap:anywhere}
 .kind{margin:0;color:var(--muted)}
 .said{font-size:1.15rem;line-height:1.45;margin:1rem 0 1.1rem;max-width:52rem}
 .said p{margin:.35rem 0}
-.said p:first-child{font-weight:600}
 .look{border-left:.4rem solid var(--accent);padding:.1rem 0 .1rem .9rem;
  margin:.8rem 0;max-width:52rem}
 .look p{margin:.3rem 0}
