@@ -71,7 +71,7 @@ def test_output_of_the_tube_is_told_from_the_residual() -> None:
     shape = bend(areal)
     shape -= shape.mean(axis=1, keepdims=True)
     found = fit(shape + drift[:, None], 1e-4, areal, current, rng)
-    assert np.asarray(np.corrcoef(found.drift, drift))[0, 1] > 0.9
+    assert np.std(found.drift - drift) < 0.4 * np.std(drift)
     assert 1e-3 <= found.drift_spread <= 3e-3
 
 
