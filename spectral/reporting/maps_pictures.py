@@ -233,7 +233,8 @@ def _draw_profile(axes: Axes, summary: MapsSummary, index: int, row: int) -> Non
         for field in (summary.density, summary.single_error, summary.calibration_error)
     )
     columns = summary.flags.shape[1]
-    place = np.arange(0.5 * (together - 1), columns, together, dtype=np.float64)
+    first = 0.5 * (together - 1)
+    place = first + together * np.arange(value.size, dtype=np.float64)
     _band(axes, place, value, single, STANDBY, "± error of a single exposure")
     _band(axes, place, value, common, ACCENT, "± error from the calibration")
     many = len(summary.exposure) > 1

@@ -39,8 +39,8 @@ REASON_COLOURS = (
     "#3f8fc4",
     "#e8c33c",
     "#7c2f8a",
-    "#1f7a5c",
-    "#d98bb5",
+    "#58bd98",
+    "#b0306a",
     "#8a5a2b",
     "#6b7fd1",
 )
