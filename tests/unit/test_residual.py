@@ -67,7 +67,7 @@ def test_noise_alone_leaves_no_correction() -> None:
 def test_output_of_the_tube_is_told_from_the_residual() -> None:
     # what all bins of one exposure share is the tube; what one bin does is the model
     areal, current, rng = wedge(3)
-    drift = rng.normal(0.0, 2e-3, areal.shape[0])
+    drift = np.asarray(rng.normal(0.0, 2e-3, areal.shape[0]))
     shape = bend(areal)
     shape -= shape.mean(axis=1, keepdims=True)
     found = fit(shape + drift[:, None], 1e-4, areal, current, rng)
