@@ -73,12 +73,12 @@ def beside(value: float, error: float) -> str:
 
 
 def percent(share: float, places: int = 1) -> str:
-    """A share in per cent; never 0 or 100 unless it is exactly that.
+    r"""A share in per cent; never 0 or 100 unless it is exactly that.
 
     Examples
     --------
     >>> percent(0.99999), percent(0.5), percent(0.00001)
-    ('> 99.9 %', '50.0 %', '< 0.1 %')
+    ('> 99.9\u202f%', '50.0\u202f%', '< 0.1\u202f%')
     """
     if not math.isfinite(share):
         return NONE

@@ -23,13 +23,15 @@ from spectral.reporting.calibration_figures import (
     thresholds,
     unknowns,
 )
-from spectral.reporting.report import report, report_page
+from spectral.reporting.report import report_page
 from spectral.reporting.wording import SIGMA
 from spectral.scans.bad_pixels import PixelReason
 from spectral.scans.scan import Layer
 
 if TYPE_CHECKING:
     from pathlib import Path
+
+    from spectral.reporting.page import Page
 
 THRESHOLDS_KEV = np.array([20.0, 35.0, 50.0])
 OFFSET_KEV = np.array([-1.5, 0.25, 0.75])
@@ -95,7 +97,7 @@ def residual_correction(exposures: int) -> ResidualCorrection:
     )
 
 
-@pytest.fixture
+@pytest.fixture(scope="module")
 def calibration() -> Calibration:
     rng = np.random.default_rng(5)
     y, x, q = 14, 20, 6
@@ -140,6 +142,11 @@ def calibration() -> Calibration:
         cross_sections="a table with a name",
         digest="cd" * 32,
     )
+
+
+@pytest.fixture(scope="module")
+def page(calibration: Calibration) -> Page:
+    return report_page(calibration)
 
 
 def test_thresholds_are_those_of_the_good_pixels(calibration: Calibration) -> None:
@@ -210,8 +217,7 @@ def test_residuals_before_and_after(calibration: Calibration) -> None:
     assert before.share > after.share
 
 
-def test_the_page_says_the_figures(calibration: Calibration) -> None:
-    page = report_page(calibration)
+def test_the_page_says_the_figures(page: Page) -> None:
     figures = {f.name: f for f in page.figures}
     assert figures["pixels that can be used"].value == pytest.approx(278 / 280)
     assert figures["pixels that can be used"].text.startswith("99.3")
@@ -227,8 +233,8 @@ def test_the_page_says_the_figures(calibration: Calibration) -> None:
     assert "tube voltage over its nominal value came out at 1.0300 ± 0.0021" in look
 
 
-def test_the_text_of_the_page(calibration: Calibration) -> None:
-    text = report(calibration)
+def test_the_text_of_the_page(page: Page) -> None:
+    text = page.html()
     assert "Al &lt;6061&gt;" in text
     assert "<6061>" not in text
     plain = unescape(text)
