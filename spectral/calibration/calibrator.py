@@ -58,8 +58,8 @@ class WedgeCalibrator:
     def __init__(
         self,
         *,
-        rounds: int = 5,
-        samples: int = 2048,
+        rounds: int = 12,
+        samples: int = 1024,
         excluded: tuple[int, ...] = (),
         leave_out: bool = True,
     ) -> None:
@@ -113,7 +113,7 @@ class WedgeCalibrator:
             setup,
             spread_kev=spread,
             start=population.values,
-            rounds=2,
+            rounds=4,
             samples=self.samples,
             progress=tell("average pixel, again"),
         )

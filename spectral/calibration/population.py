@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
@@ -22,7 +23,11 @@ if TYPE_CHECKING:
 
 MODEL_ERROR = 2e-3
 """Relative error of the mean model that the fit allows for in each bin."""
-DRIFT_SPREAD = 3e-3
+ENOUGH_GAIN = 0.05
+"""Relative fall of the penalised chi-square below which the fit is at rest."""
+THREADS = 2
+LARGEST_LOG_STEP = 1.0
+DRIFT_SPREAD = 1e-3
 """Prior spread of the tube's output from exposure to exposure."""
 
 
@@ -138,7 +143,7 @@ def fit_population(
     spread_kev: NDArray[np.float64],
     start: dict[str, float] | None = None,
     rounds: int = 6,
-    samples: int = 2048,
+    samples: int = 1024,
     progress: Callable[[float], None] | None = None,
 ) -> Population:
     """Fit the unknowns to the mean counts of the good pixels.
@@ -152,7 +157,7 @@ def fit_population(
     start : dict, optional
         Values to start from; the prior means otherwise.
     rounds : int
-        Gauss-Newton rounds.
+        At most so many damped Gauss-Newton rounds.
     samples : int
         Interactions per energy for the pulse heights.
     progress : callable, optional
@@ -165,8 +170,9 @@ def fit_population(
 
     Notes
     -----
-    Gauss-Newton with normal priors on unknowns and on each exposure's drift;
-    variance of a mean bin = Poisson / pixels + (MODEL_ERROR x counts)^2.
+    Least squares with normal priors on unknowns and on each exposure's drift;
+    variance of a mean bin = Poisson / pixels + (MODEL_ERROR x counts)^2. Source: D.
+    W. Marquardt, J. SIAM 11 (1963) 431 (damped Gauss-Newton steps).
     """
     nuisances = population_nuisances(data.thresholds_kev.size)
     problem = _Problem(
@@ -186,19 +192,115 @@ def fit_population(
         if start is not None and nuisance.name in start:
             values[i] = start[nuisance.name]
     drift = np.zeros(observed.shape[0])
-    heights = problem.heights(values)
     if start is None:
-        values[0] = _first_flux(problem, values, heights, observed)
+        values[0] = _first_flux(problem, values, problem.heights(values), observed)
         prior[0] = values[0]
-    covariance = np.empty((0, 0))
+    fit = _Fit(problem, prior, observed, data.above.shape[0])
+    point = fit.at(values, drift)
+    information = np.eye(1)
+    damping = 0.0
     for turn in range(rounds):
-        values, drift, covariance = _gauss_newton(
-            problem, values, drift, prior, observed, data.above.shape[0]
-        )
+        score, information = fit.slope(point)
+        moved, damping = fit.advanced(point, score, information, damping)
+        gained = point.loss - moved.loss
+        point = moved
         if progress is not None:
             progress((turn + 1) / rounds)
-    heights = problem.heights(values)
-    return _result(problem, values, drift, covariance, heights, data)
+        if gained < ENOUGH_GAIN * point.loss:
+            break
+    return _result(problem, point, np.linalg.inv(information), data)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Point:
+    """Values of the unknowns, with what they predict."""
+
+    values: NDArray[np.float64]
+    drift: NDArray[np.float64]
+    heights: NDArray[np.float64]
+    expected: NDArray[np.float64]
+    loss: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Fit:
+    """Penalised least squares on mean bins, with a way downhill."""
+
+    problem: _Problem
+    prior: NDArray[np.float64]
+    observed: NDArray[np.float64]
+    pixels: int
+
+    @property
+    def spread(self) -> NDArray[np.float64]:
+        """Prior standard deviations of unknowns and drifts."""
+        unknowns = [n.spread for n in self.problem.nuisances]
+        return np.concatenate([unknowns, np.full(self.observed.shape[0], DRIFT_SPREAD)])
+
+    def weight(self, expected: NDArray[np.float64]) -> NDArray[np.float64]:
+        """Inverse variance of each mean bin."""
+        floor = np.maximum(expected, 1e-3)
+        return np.asarray(1.0 / (floor / self.pixels + (MODEL_ERROR * floor) ** 2))
+
+    def at(self, values: NDArray[np.float64], drift: NDArray[np.float64]) -> _Point:
+        heights = self.problem.heights(values)
+        expected = counts_to_bins(self.problem.predict(values, drift, heights))
+        seen = counts_to_bins(self.observed)
+        # observed counts set the weights: an expected zero must not win
+        loss = (self.weight(seen) * (seen - expected) ** 2).sum()
+        away = np.concatenate([values - self.prior, drift]) / self.spread
+        return _Point(values, drift, heights, expected, float(loss + away @ away))
+
+    def slope(self, point: _Point) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Score and information of unknowns and drifts."""
+        problem, values, drift = self.problem, point.values, point.drift
+        at = problem.predict(values, drift, point.heights)
+
+        def column(i: int) -> NDArray[np.float64]:
+            nuisance = problem.nuisances[i]
+            moved = values.copy()
+            moved[i] += nuisance.step
+            other = point.heights
+            if nuisance.changes_heights:
+                other = problem.heights(moved)
+            change = problem.predict(moved, drift, other) - at
+            return counts_to_bins(change / nuisance.step).ravel()
+
+        with ThreadPoolExecutor(THREADS) as pool:
+            columns = list(pool.map(column, range(values.size)))
+        for e in range(at.shape[0]):
+            one = np.zeros_like(point.expected)
+            one[e] = point.expected[e]
+            columns.append(one.ravel())
+        jacobian = np.stack(columns, axis=1)
+        weight = self.weight(counts_to_bins(self.observed)).ravel()
+        information = (jacobian.T * weight) @ jacobian + np.diag(self.spread**-2)
+        left = (counts_to_bins(self.observed) - point.expected).ravel()
+        score = jacobian.T @ (weight * left)
+        score -= np.concatenate([values - self.prior, drift]) / self.spread**2
+        return score, information
+
+    def advanced(
+        self,
+        point: _Point,
+        score: NDArray[np.float64],
+        information: NDArray[np.float64],
+        damping: float,
+    ) -> tuple[_Point, float]:
+        """The point after a damped step that gains, and the next damping."""
+        size = point.values.size
+        for _ in range(8):
+            damped = information + damping * np.diag(np.diag(information))
+            move = np.linalg.solve(damped, score)
+            step = move[:size]
+            for i, nuisance in enumerate(self.problem.nuisances):
+                if nuisance.name.startswith("ln_") and i > 0:
+                    step[i] = np.clip(step[i], -LARGEST_LOG_STEP, LARGEST_LOG_STEP)
+            tried = self.at(point.values + step, point.drift + move[size:])
+            if np.isfinite(tried.loss) and tried.loss < point.loss:
+                return tried, damping / 10.0
+            damping = max(10.0 * damping, 1e-4)
+        return point, damping
 
 
 def _first_flux(
@@ -219,63 +321,15 @@ def _first_flux(
     return float(low + np.log(ratio))
 
 
-def _gauss_newton(
-    problem: _Problem,
-    values: NDArray[np.float64],
-    drift: NDArray[np.float64],
-    prior: NDArray[np.float64],
-    observed: NDArray[np.float64],
-    pixels: int,
-) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
-    """One round: new values, new drift, covariance of both."""
-    heights = problem.heights(values)
-    at = problem.predict(values, drift, heights)
-    columns = []
-    for i, nuisance in enumerate(problem.nuisances):
-        moved = values.copy()
-        moved[i] += nuisance.step
-        other = problem.heights(moved) if nuisance.changes_heights else heights
-        change = problem.predict(moved, drift, other) - at
-        columns.append(counts_to_bins(change / nuisance.step).ravel())
-    expected = counts_to_bins(at)
-    for e in range(at.shape[0]):
-        one = np.zeros_like(expected)
-        one[e] = expected[e]
-        columns.append(one.ravel())
-    jacobian = np.stack(columns, axis=1)
-    floor = np.maximum(expected, 1e-3)
-    weight = 1.0 / (floor / pixels + (MODEL_ERROR * floor) ** 2).ravel()
-    spread = np.concatenate(
-        [[n.spread for n in problem.nuisances], np.full(drift.size, DRIFT_SPREAD)]
-    )
-    information = (jacobian.T * weight) @ jacobian + np.diag(1.0 / spread**2)
-    score = jacobian.T @ (weight * (counts_to_bins(observed) - expected).ravel())
-    score -= np.concatenate([values - prior, drift]) / spread**2
-    inverse = np.asarray(np.linalg.inv(information))
-    move = inverse @ score
-    limit = np.array([10.0 * n.spread for n in problem.nuisances])
-    step = np.clip(move[: values.size], -limit, limit)
-    # logarithms move by at most a factor of two in one round
-    for i, nuisance in enumerate(problem.nuisances):
-        if nuisance.name.startswith("ln_"):
-            step[i] = np.clip(step[i], -np.log(2.0), np.log(2.0))
-        if nuisance.name == "trapping":
-            step[i] = max(step[i], -values[i] - 0.02)
-    moved = np.asarray(values + step)
-    return moved, np.asarray(drift + move[values.size :]), inverse
-
-
 def _result(
     problem: _Problem,
-    values: NDArray[np.float64],
-    drift: NDArray[np.float64],
+    point: _Point,
     covariance: NDArray[np.float64],
-    heights: NDArray[np.float64],
     data: WedgeData,
 ) -> Population:
     """Collect a fit, and refuse one that does not come near the data."""
-    named = as_mapping(problem.nuisances, values)
-    expected = counts_to_bins(problem.predict(values, drift, heights))
+    named = as_mapping(problem.nuisances, point.values)
+    expected = point.expected
     observed = counts_to_bins(data.above.mean(axis=0))
     residual = observed / expected - 1.0
     error = 1.0 / np.sqrt(np.maximum(expected, 1e-3) * data.above.shape[0])
@@ -288,14 +342,14 @@ def _result(
         raise CalibrationError(msg)
     deviation = np.sqrt(np.diag(covariance))
     return Population(
-        model=problem.setup.model(named, heights=heights),
+        model=problem.setup.model(named, heights=point.heights),
         values=named,
         errors={
             n.name: float(d) for n, d in zip(problem.nuisances, deviation, strict=False)
         },
         photons_per_mas=float(np.exp(named["ln_flux"])),
         shift_kev=_shifts(named, problem.nominal.size),
-        drift=drift,
+        drift=point.drift,
         residual=residual,
         residual_error=error,
     )
