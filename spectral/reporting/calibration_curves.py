@@ -50,7 +50,7 @@ def response_picture(calibration: Calibration) -> Picture:
     left.set_ylim(
         0.0, 1.08 * float(above[:, level >= 0.5 * calibration.levels_kev[0]].max())
     )
-    left.legend(title="photon energy", title_fontsize=8.0, loc="upper right")
+    left.legend(title="photon energy", title_fontsize=8.0, loc="right")
     panels.axis_words(
         left,
         x="level (keV)",
@@ -85,7 +85,7 @@ def _draw_bins(axes: Axes, calibration: Calibration) -> None:
             linestyle=_LINES[b % len(_LINES)], label=f"bin {b + 1}",
         )  # fmt: skip
     axes.set_ylim(bottom=0.0)
-    axes.legend(loc="upper left")
+    axes.legend(loc="upper left", bbox_to_anchor=(1.0, 1.0))
     panels.axis_words(
         axes,
         x="photon energy (keV)",
@@ -207,7 +207,7 @@ def domain_picture(calibration: Calibration) -> Picture:
         axes.margins(0.06)
         panels.light_grid(axes)
     sheet.axes[0].set_title("stacks of the wedge scan")
-    sheet.axes[0].legend(loc="upper right")
+    sheet.axes[-1].legend(loc="upper left", bbox_to_anchor=(1.0, 1.0))
     tops = [
         f"{m.name} up to {number(float(a))} {GRAMS}"
         for m, a in zip(materials, calibration.largest, strict=True)

@@ -200,10 +200,11 @@ def _residual_panel(
     for r in range(rows):
         for b in range(columns):
             light = abs(values[r, b]) > 0.62 * top
-            axes.text(
+            words = axes.text(
                 b, r, fixed(float(values[r, b]), places, sign=True), ha="center",
                 va="center", fontsize=7.0, color="#101418" if light else "#f4f4f0",
             )  # fmt: skip
+            words.set_in_layout(False)
 
 
 def reasons_picture(

@@ -31,11 +31,12 @@ MATERIAL_NAMES: tuple[tuple[str, str], ...] = (
     ("#4c6b12", "#b5d46a"),
 )
 MARKERS = ("o", "s", "^", "D", "v", "P", "X", "<")
-#: Reasons not to trust a pixel; `SOUND` where there is none.
+#: Reasons not to trust a pixel, and `SOUND` where there is none. A map's colours
+#: stay as they are on dark paper, so none of them may be a colour that changes.
 SOUND = "#dfe4e7"
 REASON_COLOURS = (
-    "#1d2733",
-    "#c2610c",
+    "#1b2530",
+    "#c4600a",
     "#3f8fc4",
     "#e8c33c",
     "#7c2f8a",

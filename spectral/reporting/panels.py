@@ -241,9 +241,10 @@ def draw_histogram(
     axes.set_xlabel(label)
     axes.set_ylabel("pixels")
     axes.set_xlim(limits.low, limits.high)
-    axes.set_ylim(bottom=0.0)
+    axes.set_ylim(0.0, 1.06 * max(float(heights.max()), 1.0))
     outside = int(np.count_nonzero((finite < limits.low) | (finite > limits.high)))
     if outside:
+        axes.set_ylim(0.0, 1.25 * max(float(heights.max()), 1.0))
         note(axes, f"{outside} outside this range")
 
 

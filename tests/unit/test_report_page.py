@@ -15,6 +15,9 @@ from spectral.reporting import panels, reason_map, wording
 from spectral.reporting.drawing import FULL_WIDTH_INCHES, Sheet, page_style
 from spectral.reporting.page import SAFETY, KeyFigure, Page, Section, Table
 from spectral.reporting.palette import (
+    NO_VALUE,
+    REASON_COLOURS,
+    SOUND,
     amount_scale,
     dark_variables,
     error_scale,
@@ -160,6 +163,7 @@ def test_colours_of_a_scale_do_not_change_with_the_paper() -> None:
     for scale in (amount_scale(), error_scale(), signed_scale()):
         table = {mpl.colors.to_hex(scale(v)) for v in np.linspace(0.0, 1.0, 256)}
         assert not table & changing
+    assert not {NO_VALUE, SOUND, *REASON_COLOURS} & changing
 
 
 def lightness(
