@@ -51,8 +51,8 @@ def _text(outcome: DemoOutcome) -> str:
         f"thresholds: median error {outcome.threshold_error_kev:.2f} keV per pixel",
         f"scatter between repeats over reported error: {outcome.error_ratio:.3f}",
         "",
-        f"{'region':18s}{'material':10s}{'truth':>8s}{'found':>9s}{'+-':>8s}"
-        f"{'one pixel +-':>14s}{'flagged':>9s}   (g/cm2)",
+        f"{'region':18s}{'material':10s}{'truth':>8s}{'found':>9s}{'+-':>8s}{'':2s}"
+        + f"{'one pixel +-':>12s}{'flagged':>9s}   (g/cm2)",
     ]
     lines.extend(
         f"{r.region:18s}{r.material:10s}{r.truth:8.3f}{r.found:9.3f}{r.error:8.3f}"

@@ -10,7 +10,6 @@ from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-import h5py
 import numpy as np
 
 from spectral.calibration.residual import ResidualCorrection
@@ -23,6 +22,7 @@ from spectral.scans.scan import Layer
 from spectral.scans.scan_file import file_digest
 
 if TYPE_CHECKING:
+    import h5py
     from numpy.typing import NDArray
 
 FORMAT_NAME = "wedgewright calibration"

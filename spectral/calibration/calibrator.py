@@ -121,7 +121,10 @@ class WedgeCalibrator:
         sick = misfits(fit, data)
         if sick.any():
             reasons.reshape(-1)[data.pixel[sick]] |= np.uint16(PixelReason.MISFIT)
-        self.calibration_ = _assemble(scan, setup, data, population, fit, reasons, sick)
+        calibration = _assemble(scan, setup, data, population, fit, reasons, sick)
+        if self.leave_out:
+            calibration = with_promise(calibration)
+        self.calibration_ = calibration
         return self
 
     @staticmethod

@@ -107,10 +107,14 @@ def fit_pixels(
     for turn in range(rounds + 1):
         parts = []
 
-        def block(first: int, now: NDArray[np.float64] = values) -> _Summary:
+        def block(
+            first: int,
+            now: NDArray[np.float64] = values,
+            factor: NDArray[np.float64] = ratio,
+        ) -> _Summary:
             rows = slice(first, first + CHUNK)
             return _summarise(
-                counts[rows], tables, levels_kev, now[rows], ratio, lost,
+                counts[rows], tables, levels_kev, now[rows], factor, lost,
                 data.count_time_s,
             )  # fmt: skip
 

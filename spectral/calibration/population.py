@@ -208,7 +208,8 @@ def fit_population(
             progress((turn + 1) / rounds)
         if gained < ENOUGH_GAIN * point.loss:
             break
-    return _result(problem, point, np.linalg.inv(information), data)
+    covariance = np.asarray(np.linalg.inv(information))
+    return _result(problem, point, covariance, data)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

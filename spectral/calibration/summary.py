@@ -68,7 +68,7 @@ def calibration_text(calibration: Calibration) -> str:
     s = calibration_summary(calibration)
     lines = [
         f"{s['good_pixels']} of {s['pixels']} pixels calibrated with {s['steps']} "
-        f"wedge exposures of {' and '.join(s['materials'])}",
+        + f"wedge exposures of {' and '.join(s['materials'])}",
     ]
     if s["pixels_by_reason"]:
         listed = ", ".join(f"{n} {r.lower()}" for r, n in s["pixels_by_reason"].items())

@@ -50,7 +50,7 @@ def maps_text(maps: Maps) -> str:
     s = maps_summary(maps)
     lines = [
         f"{s['exposures']} exposures of {s['pixels']} pixels decomposed; "
-        f"{100 * s['good_share']:.2f} % of the estimates carry no flag"
+        + f"{100 * s['good_share']:.2f} % of the estimates carry no flag"
     ]
     meanings = {str(flag.name): text for flag, text in MEANING.items()}
     lines.extend(

@@ -22,8 +22,6 @@ if TYPE_CHECKING:
     from collections.abc import Callable
     from pathlib import Path
 
-    from numpy.typing import NDArray
-
     from spectral.calibration.result import Calibration
     from spectral.decomposition.maps import Maps
 
@@ -181,7 +179,7 @@ def _threshold_error(scenario: Scenario, calibration: Calibration) -> float:
 def _error_ratio(maps: Maps) -> float:
     """Root mean square scatter of repeats over root mean square reported error."""
     value = np.where(maps.flags[:, None] == 0, maps.areal_density, np.nan)
-    full: NDArray[np.bool_] = np.isfinite(value).all(axis=(0, 1))
+    full = np.asarray(np.isfinite(value).all(axis=(0, 1)))
     scatter = value[:, :, full].var(axis=0, ddof=1)
     reported = maps.areal_density_errors[:, :, full] ** 2
     return float(np.sqrt((scatter / reported.mean(axis=0)).mean()))

@@ -27,13 +27,13 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 ROWS, COLUMNS = 32, 44
-REPEATS = 6
+REPEATS = 5
 THRESHOLDS_KEV = (20.0, 32.0, 44.0, 56.0, 68.0)
 POLYMER = Layer(name="nylon", formula="C6H11NO", density_g_cm3=1.14)
 ALUMINIUM = Layer(name="Al", formula="Al", density_g_cm3=2.70)
 STEEL = Layer(name="steel", formula="Fe", density_g_cm3=7.87)
 REGIONS = ("air", "housing wall", "housing floor", "aluminium insert", "ramp", "pins")
-PIN_MM = 0.4
+PIN_MM = 1.0
 STACKS_MM = (
     (5.0, 0.0), (15.0, 0.0), (30.0, 0.0), (50.0, 0.0),
     (0.0, 0.5), (0.0, 2.0), (0.0, 5.0), (0.0, 9.0),
@@ -194,7 +194,7 @@ def build_scenario(
     made = simulate_scan(
         template,
         detector(),
-        VirtualTube(photons_per_mas=25000.0, drift_step=5e-4, heel=0.02),
+        VirtualTube(photons_per_mas=16000.0, drift_step=5e-4, heel=0.02),
         seed=seed,
         object_areal_density=areal,
         progress=tell,

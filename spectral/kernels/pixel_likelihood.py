@@ -39,7 +39,7 @@ def _weights(level: float, step: float, grid: int, value: Array, slope: Array) -
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def summarise(
+def summarise(  # noqa: PLR0912, PLR0915 - one loop, kept flat for the compiler
     counts: Array,
     curve: Array,
     by_rate: Array,

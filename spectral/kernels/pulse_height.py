@@ -82,8 +82,8 @@ def _add_site(
 
     Returns the number of entries held.
     """
-    shift_x = int(math.floor(x / pitch_um))
-    shift_y = int(math.floor(y / pitch_um))
+    shift_x = math.floor(x / pitch_um)
+    shift_y = math.floor(y / pitch_um)
     sigma = math.sqrt(variance + diffusion_um * drift)
     _shares(x - shift_x * pitch_um, sigma, pitch_um, table, share_x)
     _shares(y - shift_y * pitch_um, sigma, pitch_um, table, share_y)
