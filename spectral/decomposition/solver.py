@@ -11,8 +11,8 @@ import numpy as np
 
 from spectral.decomposition.start_values import StartRegression
 from spectral.errors import InputError
-from spectral.kernels import fisher_scoring
-from spectral.kernels.pixel_lanes import LANES
+from spectral.kernels import fisher_scoring, step_control
+from spectral.kernels.pixel_lanes import LANES, MOMENTS
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
@@ -26,11 +26,11 @@ _PIXELS_PER_TASK = 64 * LANES
 class SolveOutcome(enum.IntEnum):
     """How the fit of a pixel ended."""
 
-    CONVERGED = fisher_scoring.CONVERGED
-    STEPS_SPENT = fisher_scoring.STEPS_SPENT
-    FEW_COUNTS = fisher_scoring.FEW_COUNTS
-    SINGULAR = fisher_scoring.SINGULAR
-    UNUSABLE = fisher_scoring.UNUSABLE
+    CONVERGED = step_control.CONVERGED
+    STEPS_SPENT = step_control.STEPS_SPENT
+    FEW_COUNTS = step_control.FEW_COUNTS
+    SINGULAR = step_control.SINGULAR
+    UNUSABLE = step_control.UNUSABLE
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -139,7 +139,7 @@ def solve(
     _check_shapes(counts, weight, attenuation)
     if max_steps < 1 or threads < 1 or not tolerance >= 0.0:
         msg = (
-            f"max_steps and threads must be at least 1 and tolerance at least 0, "
+            f"max_steps must be at least 1, threads 1 and tolerance 0, "
             f"got {max_steps}, {threads} and {tolerance}"
         )
         raise InputError(msg)
@@ -154,6 +154,10 @@ def solve(
         raise InputError(msg)
     minus, factor = _node_factors(attenuation)
     given, regression = _resolve_start(start, pixels, weight, attenuation)
+    coefficients = np.array(regression.coefficients)
+    lowest, highest = np.array(regression.lowest), np.array(regression.highest)
+    if nonnegative:
+        lowest = np.maximum(lowest, 0.0)
     found = Solution(
         areal_density=np.empty((pixels, materials)),
         covariance=np.empty((pixels, materials * (materials + 1) // 2)),
@@ -165,15 +169,15 @@ def solve(
     def run(first: int) -> None:
         part = slice(first, first + _PIXELS_PER_TASK)
         fisher_scoring.fit_pixels(
-            counts[part],
-            weight[part] if len(weight) > 1 else weight,
+            _writeable(counts[part]),
+            _writeable(weight[part] if len(weight) > 1 else weight),
             minus,
             factor,
             dead[part] if len(dead) > 1 else dead,
             given[part] if len(given) > 1 else given,
-            regression.coefficients,
-            np.maximum(regression.lowest, 0.0) if nonnegative else regression.lowest,
-            regression.highest,
+            coefficients,
+            lowest,
+            highest,
             bias_correction,
             nonnegative,
             max_steps,
@@ -223,15 +227,23 @@ def _check_shapes(counts: Array, weight: Weight, attenuation: Array) -> None:
         raise InputError(msg)
 
 
+def _writeable(array: Weight) -> Weight:
+    """Array itself or, if it is read-only, a copy: spares compiling another kernel."""
+    return array if array.flags.writeable else array.copy()
+
+
 def _node_factors(attenuation: Array) -> tuple[Array, Array]:
-    """-M, its node axis padded to a multiple of 4, and the factors of the moments."""
+    """-M and the factors of the moments, padded by zeros as the kernel wants."""
     nodes, materials = attenuation.shape
     minus = np.zeros((nodes + -nodes % 4, materials))
     minus[:nodes] = -attenuation
-    one = np.zeros((1, len(minus)))
-    one[0, :nodes] = 1.0
     row, column = np.triu_indices(materials)
-    return minus, np.vstack((one, minus.T, (minus[:, row] * minus[:, column]).T))
+    moments = 1 + materials + len(row)
+    factor = np.zeros((moments + -moments % MOMENTS, len(minus)))
+    factor[0, :nodes] = 1.0
+    factor[1 : 1 + materials] = minus.T
+    factor[1 + materials : moments] = (minus[:, row] * minus[:, column]).T
+    return minus, factor
 
 
 def _resolve_start(

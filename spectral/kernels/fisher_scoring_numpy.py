@@ -11,17 +11,18 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.kernels.fisher_scoring import (
+from spectral.kernels.pixel_lanes import LARGEST_INFLATION, SMALLEST_PIVOT
+from spectral.kernels.step_control import (
     CONVERGED,
     FEW_COUNTS,
     HALVINGS,
     NEAR,
+    RUNNING,
     SINGULAR,
     SLOWEST_NEWTON,
     STEPS_SPENT,
     UNUSABLE,
 )
-from spectral.kernels.pixel_lanes import LARGEST_INFLATION, SMALLEST_PIVOT
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -29,7 +30,6 @@ if TYPE_CHECKING:
     Array = NDArray[np.float64]
     Mask = NDArray[np.bool_]
 
-_RUNNING = -1
 _TINY, _HUGE = 1e-290, 1e290
 
 
@@ -209,13 +209,13 @@ def _pose(
     corrected: bool,
 ) -> _Problem:
     """Every pixel with weights and dead fraction of its own."""
-    pad = len(minus) - weight.shape[2]
+    pad, m = len(minus) - weight.shape[2], minus.shape[1]
     weight = np.pad(weight, ((0, 0), (0, 0), (0, pad)))
     return _Problem(
         counts=counts,
         weight=np.broadcast_to(weight, (len(counts), *weight.shape[1:])),
         minus=minus,
-        factor=factor,
+        factor=factor[: 1 + m + m * (m + 1) // 2],
         dead=np.broadcast_to(dead, len(counts)),
         corrected=corrected,
     )
@@ -242,8 +242,10 @@ def _walk(
     base, move = np.zeros_like(a), a.copy()
     slope, last = np.full(len(a), np.inf), np.zeros(len(a))
     halved = np.zeros(len(a), np.int64)
-    todo = np.flatnonzero(outcome == _RUNNING)
+    todo = np.flatnonzero(outcome == RUNNING)
     while len(todo):
+        outcome[todo[steps[todo] >= max_steps]] = STEPS_SPENT
+        todo = todo[steps[todo] < max_steps]
         at = problem.at(a, todo)
         steps[todo] += 1
         spent = steps[todo] >= max_steps
@@ -254,7 +256,7 @@ def _walk(
         step, decrement, shrink = _next_step(a[todo], at, last[todo], nonnegative)
         done = kept & (decrement * shrink <= tolerance)
         stop = kept & ~done & spent
-        outcome[todo[(back & spent) | stop]] = STEPS_SPENT
+        outcome[todo[stop]] = STEPS_SPENT
         outcome[todo[~back & ~at.sound]] = SINGULAR
         outcome[todo[done]] = CONVERGED
         rejected, accepted = todo[back], todo[kept]
@@ -265,7 +267,7 @@ def _walk(
         last[accepted] = slope[accepted] = decrement[kept]
         move[accepted] = step[kept]
         move[todo[stop]] = 0.0
-        todo = todo[outcome[todo] == _RUNNING]
+        todo = todo[outcome[todo] == RUNNING]
         a[todo] = base[todo] + move[todo]
     return base, move
 
@@ -294,7 +296,7 @@ def fit_pixels(
     problem = _pose(counts, weight, minus_attenuation, factor, dead_fraction, corrected)
     usable = _usable(problem)
     areal_density[:], covariance[:], deviance[:] = np.nan, np.nan, np.nan
-    steps_out[:], outcome_out[:] = 0, np.where(usable, _RUNNING, UNUSABLE)
+    steps_out[:], outcome_out[:] = 0, np.where(usable, RUNNING, UNUSABLE)
     todo = np.flatnonzero(usable)
     a = np.zeros_like(areal_density)
     with np.errstate(all="ignore"):

@@ -42,9 +42,9 @@ def _counts(pixels: int = 3) -> Array:
         ({"attenuation": np.full((3, 2), np.nan)}, "attenuation must be finite"),
         ({"dead_fraction": np.zeros(2)}, "dead_fraction must be a number or 3"),
         ({"start": np.zeros(3)}, r"start must be \(2,\) or \(3, 2\)"),
-        ({"max_steps": 0}, "max_steps and threads must be at least 1"),
-        ({"threads": 0}, "max_steps and threads must be at least 1"),
-        ({"tolerance": -1.0}, "tolerance at least 0"),
+        ({"max_steps": 0}, "max_steps must be at least 1"),
+        ({"threads": 0}, "threads 1 and tolerance 0"),
+        ({"tolerance": -1.0}, "threads 1 and tolerance 0"),
         ({"attenuation": -np.ones((3, 2))}, "attenuation must be positive for some"),
     ],
 )
