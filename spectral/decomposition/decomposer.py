@@ -263,7 +263,7 @@ class MaterialDecomposer:
             converged=np.isin(found.outcome, ENDED_WELL),
             rate_share=picked[:, 0] / where.rate_limit,
         )
-        flags[faults.ravel()[flat]] |= np.uint16(PixelFlag.COUNT_FAULT)
+        flags[faults.ravel()[flat] != 0] |= np.uint16(PixelFlag.COUNT_FAULT)
         lost = ~np.isfinite(found.areal_density).all(axis=1)
         flags[lost & (flags == 0)] |= np.uint16(PixelFlag.NOT_CONVERGED)
         all_flags = np.full(shape, np.uint16(PixelFlag.BAD_PIXEL), np.uint16)
