@@ -5,7 +5,7 @@ from __future__ import annotations
 import enum
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -144,16 +144,14 @@ def solve(
         )
         raise InputError(msg)
     pixels, materials = len(counts), attenuation.shape[1]
-    if weight.dtype == np.float32:
-        weight = np.ascontiguousarray(weight, np.float32)
-    else:
-        weight = np.ascontiguousarray(weight, np.float64)
+    kind = np.float32 if weight.dtype == np.float32 else np.float64
+    own: Any = np.ascontiguousarray(weight, kind)
     dead = np.atleast_1d(np.array(dead_fraction, np.float64))
     if dead.shape not in {(1,), (pixels,)}:
         msg = f"dead_fraction must be a number or {pixels} of them, got {dead.shape}"
         raise InputError(msg)
     minus, factor = _node_factors(attenuation)
-    given, regression = _resolve_start(start, pixels, weight, attenuation)
+    given, regression = _resolve_start(start, pixels, own, attenuation)
     coefficients = np.array(regression.coefficients)
     lowest, highest = np.array(regression.lowest), np.array(regression.highest)
     if nonnegative:
@@ -170,7 +168,7 @@ def solve(
         part = slice(first, first + _PIXELS_PER_TASK)
         fisher_scoring.fit_pixels(
             _writeable(counts[part]),
-            _writeable(weight[part] if len(weight) > 1 else weight),
+            _writeable(own[part] if len(own) > 1 else own),
             minus,
             factor,
             dead[part] if len(dead) > 1 else dead,
@@ -227,7 +225,7 @@ def _check_shapes(counts: Array, weight: Weight, attenuation: Array) -> None:
         raise InputError(msg)
 
 
-def _writeable(array: Weight) -> Weight:
+def _writeable(array: Array) -> Array:
     """Array itself or, if it is read-only, a copy: spares compiling another kernel."""
     return array if array.flags.writeable else array.copy()
 
