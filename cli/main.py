@@ -14,6 +14,7 @@ from .outcome import SAFETY
 COMMANDS: dict[str, str] = {
     "demo": "Run the main job on a built-in scenario, truth known.",
     "check": "Say whether a scan is fit for use, and what is wrong with it.",
+    "thresholds": "Turn threshold settings into keV, pixel by pixel.",
     "calibrate": "Learn every pixel's response from a wedge scan.",
     "decompose": "Turn counts into maps of g/cm2 with errors and flags.",
     "report": "Write pictures and tables about a scan, a calibration or maps.",

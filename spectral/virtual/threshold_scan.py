@@ -89,7 +89,7 @@ def simulate_threshold_scans(
     shape: tuple[int, int],
     *,
     seed: int,
-    photons: float = 4000.0,
+    photons: float | tuple[float, ...] = 4000.0,
     photons_per_s: float = 3.0e4,
     background: float = 0.0,
     nominal: bool = False,
@@ -108,8 +108,8 @@ def simulate_threshold_scans(
     scale : SettingSpread
     shape : (row, column)
     seed : int
-    photons : float
-        Upon each pixel at each setting.
+    photons : float or tuple of float
+        Upon each pixel at each setting, for each source if there are several.
     photons_per_s : float, in 1/s
         Upon each pixel; low enough for little pile-up.
     background : float
@@ -129,6 +129,7 @@ def simulate_threshold_scans(
     if len(sources) != len(settings):
         msg = f"{len(sources)} sources need as many settings, got {len(settings)}"
         raise InputError(msg)
+    many = photons if isinstance(photons, tuple) else (photons,) * len(sources)
     rng = np.random.default_rng(seed)
     offset = scale.offset_kev + scale.offset_spread_kev * rng.standard_normal(shape)
     gain = scale.gain_kev * (1.0 + scale.gain_spread * rng.standard_normal(shape))
@@ -144,7 +145,7 @@ def simulate_threshold_scans(
             replace(detector, spread=spread),
             pixels,
             seed=seed + 1000 * (j + 1),
-            duration_s=photons / photons_per_s,
+            duration_s=many[j] / photons_per_s,
             photons_per_s=photons_per_s,
             background=background,
             threads=threads,
@@ -153,7 +154,7 @@ def simulate_threshold_scans(
             ThresholdScan(
                 settings=np.asarray(setting, dtype=np.float64),
                 counts=counts,
-                count_time_s=np.full(len(setting), photons / photons_per_s),
+                count_time_s=np.full(len(setting), many[j] / photons_per_s),
                 source=source,
                 pixel_mask=np.zeros(shape, np.uint32),
                 sensor_material=detector.sensor.material,
@@ -224,7 +225,7 @@ def _photons(
     """Energy borders in keV, and the share of photons in each bin."""
     if source.kind in {"edge filter", "tube end"}:
         return _tube_photons(float(source.voltage_kv or 0.0), source)
-    lines = AMERICIUM_LINES
+    lines: tuple[tuple[float, float], ...] = AMERICIUM_LINES
     if source.kind == "fluorescence target":
         lines = k_lines(source.emitter)
     half = 0.5 * LINE_WIDTH_KEV

@@ -97,7 +97,7 @@ def threshold_energies(
     scale = coarse_scale([o.settings for o in oriented], means, landmarks, nominal)
     sensor = sensor_of(scans[0])
     found = _find_all(oriented, good, scale, sensor, charge, progress)
-    return _result(oriented, found, scale, sensor)
+    return _result(oriented, found, scale, sensor, charge)
 
 
 def _check(scans: Sequence[ThresholdScan]) -> None:
@@ -164,7 +164,7 @@ def _find_all(
         each = oriented[j]
         mark = each.landmark
         lines = [i for i in found if oriented[i].landmark.order == LINE]
-        expected, noise, cloud = None, NOISE_START_KEV, 0.0
+        expected, noise, cloud = None, NOISE_START_KEV, None
         if lines:
             noise = float(np.median([np.nanmedian(found[i].width_kev) for i in lines]))
             cloud = float(np.mean([found[i].cloud for i in lines]))
@@ -225,6 +225,7 @@ def _result(
     found: list[LandmarkPlaces],
     scale: tuple[float, float],
     sensor: Sensor | None,
+    charge: ChargeTransport | None,
 ) -> ThresholdEnergies:
     """Energy scale through the places found, and the record."""
     offset, gain = scale
@@ -264,7 +265,9 @@ def _result(
         common_error_kev=common,
         cloud=np.array([f.cloud for f in found]),
         scanned=(float(settings.min()), float(settings.max())),
-        assumptions=_assumptions(oriented, sensor),
+        assumptions=_assumptions(
+            oriented, sensor, 0.0 if charge is None else charge.trapping
+        ),
         process={
             "program": "wedgewright",
             "version": spectral.__version__,
@@ -303,9 +306,16 @@ def _noise(
     return np.where(many > 0, total / np.maximum(many, 1), np.nan)
 
 
-def _assumptions(oriented: list[_Oriented], sensor: Sensor | None) -> tuple[str, ...]:
+def _assumptions(
+    oriented: list[_Oriented], sensor: Sensor | None, trapping: float
+) -> tuple[str, ...]:
     """What was taken for granted."""
     said = ["counts are taken as free of pile-up"]
+    if sensor is not None and trapping == 0.0:
+        said.append(
+            "no charge is trapped: keV are those of charge from the depth at which "
+            "the lines are absorbed"
+        )
     if sensor is None:
         said.append(
             "the sensor is not described: charge sharing is not modelled, and "

@@ -20,7 +20,6 @@ SHIFT, LN_WIDTH, LN_HEIGHT, FIRST_TERM = 0, 1, 2, 3
 """Places of the parameters: landmark found minus expected in keV, noise, height."""
 CLOUD = FIRST_TERM
 """Place of the change with ln of the charge clouds' variance."""
-LEAST_SHAPE = 1e-9
 LN_WIDTH_GRID = np.log(0.25) + 0.08 * np.arange(46)
 REACH_KEV = 30.0
 NORM_KEV = 4.0
@@ -162,7 +161,7 @@ def landmark_curve(
     shape, falling, widened = (
         np.matmul(part, weight[:, :, None])[..., 0] for part in parts
     )
-    shape = np.maximum(shape + constant + slope * u, LEAST_SHAPE)
+    shape = shape + constant + slope * u
     height = np.exp(values[:, LN_HEIGHT])[:, None]
     tabulated = [parts[0][..., j] for j in range(1, terms + 1)]
     slopes = np.stack(

@@ -17,6 +17,9 @@ if TYPE_CHECKING:
 
 CHUNK = 4096
 ROUNDS = 40
+PEDESTAL, SUNK = 0.5, 0.4
+"""Counts added to both sides, so that a curve may touch zero; the score keeps its mean
+of zero, and little is lost where counts are many. No curve sinks lower than `SUNK`."""
 ENOUGH = 1e-3
 """Stop when the next step promises less than this in log-likelihood."""
 NEARLY = 0.01
@@ -96,7 +99,7 @@ def fit_curves(
         _fit_block(
             table,
             energy[rows],
-            counts[rows],
+            counts[rows] + PEDESTAL,
             used[rows],
             start[rows],
             mean[rows],
@@ -113,6 +116,16 @@ def fit_curves(
         freedom=np.concatenate([p.freedom for p in parts]),
         converged=np.concatenate([p.converged for p in parts]),
     )
+
+
+def _lifted_curve(
+    table: CurveTable, e_kev: NDArray[np.float64], values: NDArray[np.float64]
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Expected counts on the pedestal, and derivatives, none where they touch 0."""
+    expected, slopes = landmark_curve(table, e_kev, values)
+    below = expected < -SUNK
+    slopes = np.where(below[:, None, :], 0.0, slopes)
+    return np.where(below, -SUNK, expected) + PEDESTAL, slopes
 
 
 def poisson_deviance(
@@ -147,7 +160,7 @@ def _fit_block(
     open_ = np.arange(pixels)
     for _ in range(ROUNDS):
         at = trial[open_]
-        expected, slopes = landmark_curve(table, e_kev[open_], at)
+        expected, slopes = _lifted_curve(table, e_kev[open_], at)
         off = at - mean[open_]
         y, w = counts[open_], used[open_]
         new = np.sum(poisson_deviance(y, expected) * w, axis=1)
@@ -170,7 +183,7 @@ def _fit_block(
             break
     _, promised = _step(information, score, np.zeros(pixels))
     converged |= promised < NEARLY
-    expected, _ = landmark_curve(table, e_kev, values)
+    expected, _ = _lifted_curve(table, e_kev, values)
     deviance = np.sum(poisson_deviance(counts, expected) * used, axis=1)
     own = information - np.diag(precision)
     covariance = np.asarray(np.linalg.inv(information + 1e-12 * np.eye(size)))

@@ -135,7 +135,7 @@ def find_places(
     *,
     expected_kev: NDArray[np.float64] | None = None,
     noise_kev: float = NOISE_START_KEV,
-    cloud: float = 0.0,
+    cloud: float | None = None,
 ) -> LandmarkPlaces:
     """Places of a landmark in all pixels.
 
@@ -152,15 +152,15 @@ def find_places(
         with the average.
     noise_kev : float, in keV
         Noise expected.
-    cloud : float
-        Cloud to begin with.
+    cloud : float, optional
+        What other lines have taught of the clouds (ln of a factor on the variance).
 
     Raises
     ------
     CalibrationError
         If too few settings lie about the landmark.
     """
-    table = build(cloud)
+    table = build(0.0 if cloud is None else cloud)
     totals = counts.sum(axis=1)
     middle = np.median(totals[good])
     sound = good & (totals > 0.3 * middle) & (totals < 3.0 * middle)
@@ -182,7 +182,14 @@ def find_places(
     sample = sample[:: max(1, sample.size // SAMPLE)]
     if table.landmark.order == LINE:
         table, shared = _taught(
-            build, table, e_kev, counts[sample], used[sample], start[sample], noise_kev
+            build,
+            table,
+            e_kev,
+            counts[sample],
+            used[sample],
+            start[sample],
+            noise_kev,
+            cloud is not None,
         )
     else:
         summed = counts[sound].sum(axis=0)
@@ -204,17 +211,22 @@ def _taught(
     used: NDArray[np.bool_],
     start: NDArray[np.float64],
     noise_kev: float,
+    cloud_known: bool,
 ) -> tuple[CurveTable, SharedTerms]:
     """Table of the cloud that the pixels show, and the other terms that they share."""
-    free = free_prior(table, noise_kev)
-    values, mean = start, free.mean
+    free = free_prior(table, noise_kev, cloud_known=cloud_known)
+    values, mean, first_cloud = start, free.mean, table.cloud
     shared = SharedTerms(
         mean=np.empty(0), spread=np.empty(0), covariance=np.empty((0, 0))
     )
     for turn in range(TEACHING_ROUNDS):
         prior = CurvePrior(mean=mean, spread=free.spread)
         fit = fit_curves(table, e_kev, counts, used, values, prior)
-        shared = pooled_terms(table, fit, prior)
+        known = free.mean.copy()
+        known[CLOUD] = first_cloud - table.cloud
+        shared = pooled_terms(
+            table, fit, prior, CurvePrior(mean=known, spread=free.spread)
+        )
         values = fit.values
         mean = learned_prior(table, shared, free).mean
         if turn < TEACHING_ROUNDS - 1 and abs(mean[CLOUD]) > REBUILD:
