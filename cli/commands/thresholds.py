@@ -7,11 +7,11 @@ from pathlib import Path
 import click
 
 from spectral.calibration.threshold_scan.calibrate import threshold_energies
+from spectral.calibration.threshold_scan.energies_file import write_threshold_energies
 from spectral.calibration.threshold_scan.summary import (
     threshold_summary,
     threshold_text,
 )
-from spectral.scans.threshold_energies_file import write_threshold_energies
 from spectral.scans.threshold_scan_file import read_threshold_scan
 
 from ..outcome import SAFETY, ends_well, json_option, show

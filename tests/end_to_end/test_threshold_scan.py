@@ -12,12 +12,12 @@ import pytest
 from click.testing import CliRunner
 
 from spectral.calibration.threshold_scan.calibrate import threshold_energies
+from spectral.calibration.threshold_scan.energies_file import read_threshold_energies
 from spectral.calibration.threshold_scan.result import (
     ThresholdEnergies,
     threshold_levels,
     threshold_prior,
 )
-from spectral.scans.threshold_energies_file import read_threshold_energies
 from spectral.scans.threshold_scan import LineSource
 from spectral.scans.threshold_scan_file import write_threshold_scan
 from spectral.virtual.detector import (

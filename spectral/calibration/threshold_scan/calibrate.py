@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -16,15 +15,21 @@ from spectral.calibration.threshold_scan.energy_scale import (
 )
 from spectral.calibration.threshold_scan.flags import ThresholdFlag
 from spectral.calibration.threshold_scan.landmark_places import (
-    NOISE_START_KEV,
     LandmarkPlaces,
     find_places,
 )
 from spectral.calibration.threshold_scan.landmark_shape import landmark_table
-from spectral.calibration.threshold_scan.landmarks import LINE, Landmark, landmark_of
+from spectral.calibration.threshold_scan.landmark_teaching import NOISE_START_KEV
+from spectral.calibration.threshold_scan.landmarks import LINE, Landmark
+from spectral.calibration.threshold_scan.oriented_scan import (
+    OrientedScan,
+    check_scans,
+    good_pixels,
+    orient,
+)
 from spectral.calibration.threshold_scan.result import ThresholdEnergies
 from spectral.calibration.threshold_scan.source_photons import sensor_of
-from spectral.errors import CalibrationError, InputError
+from spectral.errors import CalibrationError
 from spectral.physics.cross_sections import table_source
 from spectral.physics.sensor import ChargeTransport
 
@@ -39,16 +44,6 @@ if TYPE_CHECKING:
 
 NO_SENSOR_ERROR_KEV = 0.3
 """Common error of a landmark where no sensor is described: typical bias by sharing."""
-
-
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
-class _Oriented:
-    """A scan's settings and counts, in an order in which the energy rises."""
-
-    scan: ThresholdScan
-    landmark: Landmark
-    settings: NDArray[np.float64]
-    counts: NDArray[np.float64]
 
 
 def threshold_energies(
@@ -82,8 +77,8 @@ def threshold_energies(
     a pixel keeps rising with exposure (Sensors 16 (2016) 518), so lines are to be
     preferred, and all scans should follow one another closely.
     """
-    _check(scans)
-    oriented = [_orient(scan) for scan in scans]
+    check_scans(scans)
+    oriented = [orient(scan) for scan in scans]
     landmarks = [o.landmark for o in oriented]
     if len({m.energy_kev for m in landmarks}) < 2:
         msg = (
@@ -91,7 +86,7 @@ def threshold_energies(
             f"{', '.join(m.name for m in landmarks)}"
         )
         raise CalibrationError(msg)
-    good = _good_pixels(oriented)
+    good = good_pixels(oriented)
     nominal = next((s.nominal_scale for s in scans if s.nominal_scale), None)
     means = [o.counts[good].mean(axis=0) for o in oriented]
     scale = coarse_scale([o.settings for o in oriented], means, landmarks, nominal)
@@ -100,56 +95,8 @@ def threshold_energies(
     return _result(oriented, found, scale, sensor, charge)
 
 
-def _check(scans: Sequence[ThresholdScan]) -> None:
-    """Refuse scans that cannot be of one detector."""
-    if not scans:
-        msg = "no threshold scan was given"
-        raise InputError(msg)
-    first = scans[0]
-    for other in scans[1:]:
-        for name in ("sensor_material", "sensor_thickness_mm", "pixel_size_um"):
-            if getattr(other, name) != getattr(first, name):
-                msg = f"{other.file}: {name} differs from that of {first.file}"
-                raise InputError(msg)
-        if other.shape[1:] != first.shape[1:]:
-            msg = (
-                f"{other.file}: comparators and pixels {other.shape[1:]} differ from "
-                f"{first.shape[1:]} of {first.file}"
-            )
-            raise InputError(msg)
-
-
-def _orient(scan: ThresholdScan) -> _Oriented:
-    """Order the settings so that counts fall along them."""
-    n = scan.shape[0]
-    counts = np.moveaxis(scan.counts, 0, -1).reshape(-1, n).astype(np.float64)
-    counts = counts * (scan.count_time_s.mean() / scan.count_time_s)
-    settings = scan.settings
-    quarter = max(1, n // 4)
-    if counts[:, :quarter].sum() < counts[:, -quarter:].sum():
-        settings, counts = settings[::-1], counts[:, ::-1]
-    return _Oriented(
-        scan=scan,
-        landmark=landmark_of(scan.source),
-        settings=np.ascontiguousarray(settings),
-        counts=np.ascontiguousarray(counts),
-    )
-
-
-def _good_pixels(oriented: list[_Oriented]) -> NDArray[np.bool_]:
-    """Pixels that no mask excludes and that count in every scan."""
-    good = np.ones(len(oriented[0].counts), bool)
-    for each in oriented:
-        mask = np.broadcast_to(each.scan.pixel_mask != 0, each.scan.shape[1:])
-        good &= ~mask.ravel() & (each.counts.max(axis=1) > 0.0)
-    if not good.any():
-        msg = f"{oriented[0].scan.file}: no pixel counts in every scan"
-        raise CalibrationError(msg)
-    return good
-
-
 def _find_all(
-    oriented: list[_Oriented],
+    oriented: list[OrientedScan],
     good: NDArray[np.bool_],
     scale: tuple[float, float],
     sensor: Sensor | None,
@@ -174,7 +121,7 @@ def _find_all(
             )
 
         def build(
-            cloud: float, mark: Landmark = mark, each: _Oriented = each
+            cloud: float, mark: Landmark = mark, each: OrientedScan = each
         ) -> CurveTable:
             return landmark_table(
                 mark,
@@ -221,7 +168,7 @@ LANDMARK_UNUSABLE = np.uint16(
 
 
 def _result(
-    oriented: list[_Oriented],
+    oriented: list[OrientedScan],
     found: list[LandmarkPlaces],
     scale: tuple[float, float],
     sensor: Sensor | None,
@@ -292,7 +239,7 @@ def _pixel_flags(
 
 
 def _noise(
-    oriented: list[_Oriented],
+    oriented: list[OrientedScan],
     found: list[LandmarkPlaces],
     usable: NDArray[np.bool_],
 ) -> NDArray[np.float64]:
@@ -307,7 +254,7 @@ def _noise(
 
 
 def _assumptions(
-    oriented: list[_Oriented], sensor: Sensor | None, trapping: float
+    oriented: list[OrientedScan], sensor: Sensor | None, trapping: float
 ) -> tuple[str, ...]:
     """What was taken for granted."""
     said = ["counts are taken as free of pile-up"]
