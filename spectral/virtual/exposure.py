@@ -87,7 +87,7 @@ class VirtualBench:
         number: int,
         beam: Beam,
         *,
-        threshold_offset_kev: float = 0.0,
+        threshold_offset_kev: float | NDArray[np.float64] = 0.0,
         progress: Callable[[int], None] | None = None,
     ) -> NDArray[np.uint32]:
         """Counts above each threshold, shape (threshold, row, column).
@@ -97,7 +97,7 @@ class VirtualBench:
         number : int
             Of the exposure; with the seed it fixes all that is left to chance.
         beam : Beam
-        threshold_offset_kev : float, in keV
+        threshold_offset_kev : float, or array of shape (row, column), in keV
             Added to every threshold.
         progress : callable, optional
             Called with the number of pixels done so far.

@@ -30,7 +30,8 @@ class SimulatedCounts:
     current_ma, areal_density : arrays, shape (exposure,), (exposure, material)
         What truly was, in mA and g/cm2.
     object_areal_density : array, shape (material, row, column), in g/cm2, or None
-    threshold_drift_kev, output : arrays, shape (exposure,)
+    threshold_drift_kev : array, shape (exposure, 1 or row, 1 or column)
+    output : array, shape (exposure,)
     progress : callable or None
     """
 
@@ -56,7 +57,7 @@ class SimulatedCounts:
             counts[place] = self.bench.expose(
                 int(exposure),
                 self.beam(int(exposure)),
-                threshold_offset_kev=float(self.threshold_drift_kev[exposure]),
+                threshold_offset_kev=self.threshold_drift_kev[exposure],
                 progress=self._counted_on(place, len(exposures)),
             )
         return counts

@@ -62,6 +62,7 @@ def simulate_scan(
     tube: VirtualTube,
     *,
     seed: int,
+    detector_seed: int | None = None,
     object_areal_density: NDArray[np.float64] | None = None,
     correlated_neighbours: bool = False,
     threshold_drift_kev: NDArray[np.float64] | None = None,
@@ -82,12 +83,15 @@ def simulate_scan(
     tube : VirtualTube
     seed : int
         The same seed gives the same counts, whatever the number of threads.
+    detector_seed : int, optional
+        Of the pixels and of the sensor's pulses; the same as `seed` by default. Give it
+        to expose one and the same detector with other chance, on another day.
     object_areal_density : array, shape (material, row, column), in g/cm2
         What stands in the beam in exposures whose role is "object".
     correlated_neighbours : bool
         Let neighbours count the same photons, as they do in truth. Without it each
         pixel's counts are right by themselves, but independent of its neighbours'.
-    threshold_drift_kev : array, shape (exposure,), in keV
+    threshold_drift_kev : array, shape (exposure,) or (exposure, row, column), in keV
         Added to all thresholds in each exposure, as by polarisation.
     true_current_ma, true_thickness_mm : arrays, shape (exposure,), (exposure, material)
         What truly was, where the scan says otherwise.
@@ -112,8 +116,8 @@ def simulate_scan(
         If the template lacks currents, an object is missing, or shapes disagree.
     """
     run = _prepare(
-        template, detector, tube, seed, object_areal_density, true_current_ma,
-        true_thickness_mm, threshold_drift_kev, library, threads,
+        template, detector, tube, seed, detector_seed, object_areal_density,
+        true_current_ma, true_thickness_mm, threshold_drift_kev, library, threads,
         correlated_neighbours, progress,
     )  # fmt: skip
     counts: CountSource = run
@@ -147,6 +151,7 @@ def _prepare(
     detector: VirtualDetector,
     tube: VirtualTube,
     seed: int,
+    detector_seed: int | None,
     object_areal_density: NDArray[np.float64] | None,
     true_current_ma: NDArray[np.float64] | None,
     true_thickness_mm: NDArray[np.float64] | None,
@@ -171,21 +176,25 @@ def _prepare(
         density = np.array([m.density_g_cm3 for m in materials])
         areal = np.asarray(true_thickness_mm) * 0.1 * density
     _check_shapes(template, current, areal, object_areal_density)
+    own_seed = seed if detector_seed is None else detector_seed
     if library is None:
         elements = {e for m in materials for e in m.weight_fractions}
         edges = tuple(k_edge_kev(e) for e in sorted(elements))
         library = build_library(
             detector.sensor,
             energy_borders(template.voltage_kv, edges),
-            seed=seed,
+            seed=own_seed,
             keep_events=correlated_neighbours,
             threads=threads,
         )
-    rng = np.random.default_rng(seed)
+    rng = np.random.default_rng(own_seed)
+    pixels = draw_pixels(detector, template.thresholds_kev, (rows, columns), rng)
+    if own_seed != seed:
+        rng = np.random.default_rng(seed)
     tungsten = find_material("W").mass_attenuation(library.energy_kev)
     bench = VirtualBench(
         detector=detector,
-        pixels=draw_pixels(detector, template.thresholds_kev, (rows, columns), rng),
+        pixels=pixels,
         library=library,
         spectrum=open_spectrum(template, tube, library.borders_kev),
         attenuation=np.array(
@@ -243,14 +252,15 @@ def _check_shapes(
 def _offsets(
     threshold_drift_kev: NDArray[np.float64] | None, template: Scan
 ) -> NDArray[np.float64]:
-    """Threshold offset of each exposure, in keV."""
-    n = template.shape[0]
+    """Threshold offset, shape (exposure, 1 or row, 1 or column), in keV."""
+    n, _, rows, columns = template.shape
     if threshold_drift_kev is None:
-        return np.zeros(n)
-    if np.shape(threshold_drift_kev) != (n,):
+        return np.zeros((n, 1, 1))
+    drift = np.asarray(threshold_drift_kev, dtype=np.float64)
+    if drift.shape not in ((n,), (n, rows, columns)):
         msg = (
-            f"threshold_drift_kev has shape {np.shape(threshold_drift_kev)}, the "
-            f"template needs {(n,)}"
+            f"threshold_drift_kev has shape {drift.shape}, the template needs {(n,)} "
+            f"or {(n, rows, columns)}"
         )
         raise InputError(msg)
-    return np.asarray(threshold_drift_kev, dtype=np.float64)
+    return drift.reshape(n, *(drift.shape[1:] or (1, 1)))
