@@ -7,7 +7,7 @@ from pathlib import Path
 import click
 
 from spectral.calibration.calibration_file import write_calibration
-from spectral.calibration.calibrator import WedgeCalibrator
+from spectral.calibration.calibrator import Faults, WedgeCalibrator
 from spectral.calibration.summary import calibration_summary, calibration_text
 from spectral.scans.script import open_scan
 
@@ -31,10 +31,21 @@ from ..stages import stages
     metavar="N",
     help="Leave exposure N of the scan out (counted from 0); may be repeated.",
 )
+@click.option(
+    "--faults",
+    type=click.Choice(["leave out", "refuse", "keep"]),
+    default="leave out",
+    show_default=True,
+    help="What to do with exposures that contradict the others.",
+)
 @json_option
 @ends_well
 def calibrate(
-    scan_path: Path, output: Path, without: tuple[int, ...], as_json: bool
+    scan_path: Path,
+    output: Path,
+    without: tuple[int, ...],
+    faults: Faults,
+    as_json: bool,
 ) -> None:
     """Learn every pixel's bin response from the wedge scan SCAN.
 
@@ -44,7 +55,9 @@ def calibrate(
     """
     scan = open_scan(scan_path)
     with stages() as tell:
-        fitted = WedgeCalibrator(excluded=without).fit(scan, progress=tell)
+        fitted = WedgeCalibrator(excluded=without, faults=faults).fit(
+            scan, progress=tell
+        )
     calibration = fitted.calibration_
     write_calibration(calibration, output)
     show(

@@ -56,7 +56,7 @@ def population_nuisances(thresholds: int) -> tuple[Nuisance, ...]:
             for name, start, sd, step in (
                 ("ln_initial_cloud", np.log(4.0), 0.5, 0.1),
                 ("ln_diffusion", np.log(0.12), 0.5, 0.1),
-                ("trapping", 0.0, 0.02, 0.005),
+                ("trapping", 0.0, 0.03, 0.005),
                 ("ln_fluorescence", 0.0, 0.05, 0.05),
                 ("ln_thickness", 0.0, 0.03, 0.02),
             )

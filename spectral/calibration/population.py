@@ -238,6 +238,12 @@ class _Fit:
         unknowns = [n.spread for n in self.problem.nuisances]
         return np.concatenate([unknowns, np.full(self.observed.shape[0], DRIFT_SPREAD)])
 
+    @property
+    def limits(self) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+        """Lowest and highest values that a step may reach: prior +- 5 spreads."""
+        spread = self.spread[: self.prior.size]
+        return self.prior - 5.0 * spread, self.prior + 5.0 * spread
+
     def weight(self, expected: NDArray[np.float64]) -> NDArray[np.float64]:
         """Inverse variance of each mean bin."""
         floor = np.maximum(expected, 1e-3)
@@ -297,7 +303,8 @@ class _Fit:
             for i, nuisance in enumerate(self.problem.nuisances):
                 if nuisance.name.startswith("ln_") and i > 0:
                     step[i] = np.clip(step[i], -LARGEST_LOG_STEP, LARGEST_LOG_STEP)
-            tried = self.at(point.values + step, point.drift + move[size:])
+            values = np.clip(point.values + step, *self.limits)
+            tried = self.at(values, point.drift + move[size:])
             if np.isfinite(tried.loss) and tried.loss < point.loss:
                 return tried, damping / 10.0
             damping = max(10.0 * damping, 1e-4)
