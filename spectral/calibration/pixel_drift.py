@@ -1,0 +1,289 @@
+"""What each pixel did by itself since a calibration."""
+
+from __future__ import annotations
+
+from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from spectral.calibration.pixel_fit import CHUNK, NS
+from spectral.forward.pixel_response import curve_tables
+from spectral.kernels import pixel_likelihood
+
+if TYPE_CHECKING:
+    from numpy.typing import NDArray
+
+    from spectral.calibration.result import Calibration
+    from spectral.calibration.wedge_data import WedgeData
+    from spectral.forward.pixel_response import CurveTables
+
+CLASSES = ("ln_area", "shift_kev", "variance_kev2", "ln_dead_time")
+"""Kinds of departures; all thresholds of a detector drift alike."""
+SCORING_ROUNDS = 12
+SAMPLE = 8192
+FAR = 5.0
+JITTER = 1e-5
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class PixelDrift:
+    """Departures of pixels after a drift, and how far pixels drift.
+
+    Attributes
+    ----------
+    values : array, shape (pixel, parameter)
+        Posterior means; their mean over the pixels is that of the calibration.
+    covariance : array, shape (pixel, parameter, parameter)
+    spread, spread_error : arrays, shape (4,)
+        Standard deviation of the drift between pixels for each of `CLASSES`, and the
+        standard error of that; an upper bound where the spread is 0.
+    deviance : array, shape (pixel,)
+        Per degree of freedom, of the scan's counts at the new values.
+    """
+
+    values: NDArray[np.float64]
+    covariance: NDArray[np.float64]
+    spread: NDArray[np.float64]
+    spread_error: NDArray[np.float64]
+    deviance: NDArray[np.float64]
+
+
+def pixel_drift(
+    calibration: Calibration,
+    data: WedgeData,
+    output: NDArray[np.float64],
+    *,
+    rounds: int = 3,
+    threads: int = 2,
+) -> PixelDrift:
+    """Departures of each pixel from a scan, with a calibration as the prior.
+
+    Parameters
+    ----------
+    calibration : Calibration
+        Moved already by what all pixels did together.
+    data : WedgeData
+    output : array, shape (exposure,)
+        Of the tube, over the calibration's.
+    rounds : int
+        Gauss-Newton rounds; the spread of the drift is learned anew in each.
+    threads : int
+
+    Notes
+    -----
+    The prior of a pixel is normal about its calibrated departures, with their posterior
+    covariance plus the drift's variance, one number for each of `CLASSES`, which
+    maximises the marginal likelihood of all pixels. A factor for each exposure and bin
+    keeps what all pixels share out of them. Source: empirical Bayes, H. Robbins
+    (1956); variance components by scoring, H. D. Patterson, R. Thompson, Biometrika
+    58 (1971) 545.
+    """
+    size = len(calibration.parameter_names)
+    start = calibration.departures.reshape(-1, size)[data.pixel]
+    own = _stored_covariance(calibration, data.pixel)
+    largest = _by_class(np.diag(calibration.spread))
+    likelihood = _Likelihood.build(calibration, data, output, threads=threads)
+    values, covariance = start, own
+    variance, error = 1e-4 * largest, np.zeros(len(CLASSES))
+    ratio = likelihood.ratio(likelihood.at(values, np.ones(data.bins.shape[1:])))
+    for _ in range(rounds):
+        seen = likelihood.at(values, ratio)
+        variance, error = drift_variance(
+            seen.information, seen.pull, start, own, variance, largest
+        )
+        values, covariance = updated(seen.information, seen.pull, start, own, variance)
+        values = values + (start - values).mean(axis=0)
+        ratio = likelihood.ratio(likelihood.at(values, ratio))
+    spread = np.sqrt(variance)
+    by_first_order = error / np.maximum(2.0 * spread, 1e-12)
+    return PixelDrift(
+        values=values,
+        covariance=covariance,
+        spread=spread,
+        spread_error=np.minimum(by_first_order, np.sqrt(error)),
+        deviance=likelihood.at(values, ratio).deviance,
+    )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Seen:
+    """Quadratic form of each pixel's log-likelihood, and sums over pixels."""
+
+    information: NDArray[np.float64]
+    pull: NDArray[np.float64]
+    deviance: NDArray[np.float64]
+    expected: NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class _Likelihood:
+    """Counts of pixels, with what is needed to expect them."""
+
+    counts: NDArray[np.float64]
+    tables: CurveTables
+    levels_kev: NDArray[np.float64]
+    lost: NDArray[np.float64]
+    time: NDArray[np.float64]
+    threads: int
+
+    @classmethod
+    def build(
+        cls,
+        calibration: Calibration,
+        data: WedgeData,
+        output: NDArray[np.float64],
+        *,
+        threads: int,
+    ) -> _Likelihood:
+        rate = calibration.photons_per_mas * data.current_ma * output
+        return cls(
+            counts=data.bins,
+            tables=curve_tables(calibration.model, data.areal_density, rate),
+            levels_kev=calibration.levels_kev,
+            lost=2.0 * calibration.dead_time_ns * NS / data.count_time_s,
+            time=data.count_time_s,
+            threads=threads,
+        )
+
+    def ratio(self, seen: _Seen) -> NDArray[np.float64]:
+        """Counts over expected counts of all pixels, shape (exposure, bin)."""
+        return np.asarray(self.counts.sum(axis=0) / np.maximum(seen.expected, 1e-9))
+
+    def at(self, values: NDArray[np.float64], ratio: NDArray[np.float64]) -> _Seen:
+        """The likelihood near values of the departures."""
+        pixels, size = values.shape
+        information = np.empty((pixels, size, size))
+        score = np.empty((pixels, size))
+        deviance = np.empty(pixels)
+        tables = self.tables
+
+        def block(first: int) -> NDArray[np.float64]:
+            part = slice(first, first + CHUNK)
+            expected = np.zeros(ratio.shape)
+            pixel_likelihood.summarise(
+                self.counts[part], tables.curve, tables.by_rate, tables.by_variance,
+                tables.by_dead_time, self.levels_kev, tables.step_kev, values[part],
+                ratio, self.lost, self.time, information[part], score[part],
+                deviance[part], expected,
+            )  # fmt: skip
+            return expected
+
+        with ThreadPoolExecutor(self.threads) as pool:
+            expected = sum(
+                pool.map(block, range(0, pixels, CHUNK)), np.zeros(ratio.shape)
+            )
+        pull = score + (information @ values[..., None])[..., 0]
+        return _Seen(
+            information=information, pull=pull, deviance=deviance, expected=expected
+        )
+
+
+def _stored_covariance(
+    calibration: Calibration, pixel: NDArray[np.int64]
+) -> NDArray[np.float64]:
+    """Posterior covariance of pixels, made safe to invert after single precision."""
+    stored = calibration.departure_covariance
+    own = stored.reshape(-1, *stored.shape[2:])[pixel].astype(np.float64)
+    own = 0.5 * (own + own.transpose(0, 2, 1))
+    diagonal = np.diagonal(own, axis1=1, axis2=2)
+    size = np.arange(own.shape[1])
+    own[:, size, size] += JITTER * diagonal
+    return own
+
+
+def class_of(parameters: int) -> NDArray[np.int64]:
+    """Index into `CLASSES` of each departure."""
+    return np.array([0, *[1] * (parameters - 3), 2, 3])
+
+
+def _by_class(values: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Mean of a value of each departure over its class."""
+    which = class_of(values.size)
+    return np.array([values[which == c].mean() for c in range(len(CLASSES))])
+
+
+def updated(
+    information: NDArray[np.float64],
+    pull: NDArray[np.float64],
+    start: NDArray[np.float64],
+    own: NDArray[np.float64],
+    variance: NDArray[np.float64],
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Posterior mean and covariance of departures that drifted.
+
+    Parameters
+    ----------
+    information : array, shape (pixel, parameter, parameter)
+    pull : array, shape (pixel, parameter)
+        Information times the departures that the counts alone would give.
+    start : array, shape (pixel, parameter)
+        Departures before, and
+    own : array, shape (pixel, parameter, parameter)
+        their covariance.
+    variance : array, shape (4,)
+        Of the drift, for each of `CLASSES`.
+    """
+    prior = own + np.diag(variance[class_of(start.shape[1])])
+    # posterior = (1 + prior information)^-1 prior: nothing near singular is inverted
+    inner = np.eye(start.shape[1]) + prior @ information
+    covariance = np.linalg.solve(inner, prior)
+    covariance = 0.5 * (covariance + covariance.transpose(0, 2, 1))
+    news = pull - (information @ start[..., None])[..., 0]
+    return start + (covariance @ news[..., None])[..., 0], covariance
+
+
+def drift_variance(
+    information: NDArray[np.float64],
+    pull: NDArray[np.float64],
+    start: NDArray[np.float64],
+    own: NDArray[np.float64],
+    variance: NDArray[np.float64],
+    largest: NDArray[np.float64],
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Variance of the drift that makes the pixels' counts most probable.
+
+    Parameters are those of `updated`, with
+
+    variance : array, shape (4,)
+        To start from.
+    largest : array, shape (4,)
+        Upper bounds.
+
+    Returns
+    -------
+    variance, error : arrays, shape (4,)
+        The latter is the standard error of the former.
+
+    Notes
+    -----
+    Fisher scoring. With J the information on a pixel's drift once its calibrated
+    departures' error is added, Q = (J^-1 + D)^-1 and w = Q (apparent drift), the score
+    of class c is half the sum over pixels and its departures of w^2 - Q_ii.
+    """
+    sample = slice(None, None, max(1, information.shape[0] // SAMPLE))
+    information, own = information[sample], own[sample]
+    size = start.shape[1]
+    which = np.eye(len(CLASSES))[class_of(size)]
+    inner = np.eye(size) + information @ own
+    known = np.linalg.solve(inner, information)
+    news = pull[sample] - (information @ start[sample][..., None])[..., 0]
+    apparent = np.linalg.solve(inner, news[..., None])[..., 0]
+    scale = which @ largest
+    fisher = np.eye(len(CLASSES))
+    for _ in range(SCORING_ROUNDS):
+        spread = np.eye(size) + known * (which @ variance)
+        weight = np.linalg.solve(spread, known)
+        pulls = np.linalg.solve(spread, apparent[..., None])[..., 0]
+        own_weight = np.maximum(np.diagonal(weight, axis1=1, axis2=2), 0.0)
+        near = (pulls**2 <= FAR**2 * (own_weight + 1e-12 / scale)).all(axis=1)
+        score = 0.5 * (pulls[near] ** 2 - own_weight[near]).sum(axis=0) @ which
+        fisher = 0.5 * which.T @ (weight[near] ** 2).sum(axis=0) @ which
+        fisher = fisher + np.diag(1e-3 / largest**2)
+        new = np.clip(variance + np.linalg.solve(fisher, score), 0.0, largest)
+        still = np.abs(new - variance).max() < 1e-4 * largest.max()
+        variance = new
+        if still:
+            break
+    return variance, np.sqrt(np.diag(np.linalg.inv(fisher)))
