@@ -17,6 +17,7 @@ COMMANDS: dict[str, str] = {
     "thresholds": "Turn threshold settings into keV, pixel by pixel.",
     "calibrate": "Learn every pixel's response from a wedge scan.",
     "decompose": "Turn counts into maps of g/cm2 with errors and flags.",
+    "simulate": "Count the scan that a script describes on a virtual detector.",
     "report": "Write pictures and tables about a scan, a calibration or maps.",
 }
 
