@@ -16,6 +16,8 @@ COMMANDS: dict[str, str] = {
     "check": "Say whether a scan is fit for use, and what is wrong with it.",
     "thresholds": "Turn threshold settings into keV, pixel by pixel.",
     "calibrate": "Learn every pixel's response from a wedge scan.",
+    "refresh": "Bring a calibration up to date with a short scan.",
+    "compare": "Say what changed between two calibrations.",
     "decompose": "Turn counts into maps of g/cm2 with errors and flags.",
     "simulate": "Count the scan that a script describes on a virtual detector.",
     "report": "Write pictures and tables about a scan, a calibration or maps.",

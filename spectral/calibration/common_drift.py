@@ -37,6 +37,8 @@ class CommonDrift:
         Tube output over the calibration's, and its standard deviation.
     shift_kev, shift_error_kev : arrays, shape (threshold,), in keV
         Common shift of each threshold.
+    shift_covariance : array, shape (threshold, threshold), in keV2
+        A shift that all share is nearly one of the output: their errors go together.
     variance_kev2, variance_error_kev2 : float, in keV2
         Change of the noise variance.
     ln_dead_time, ln_dead_time_error : float
@@ -55,6 +57,7 @@ class CommonDrift:
     output_error: NDArray[np.float64]
     shift_kev: NDArray[np.float64]
     shift_error_kev: NDArray[np.float64]
+    shift_covariance: NDArray[np.float64]
     variance_kev2: float
     variance_error_kev2: float
     ln_dead_time: float
@@ -69,6 +72,19 @@ class CommonDrift:
     def chance(self) -> float:
         """Probability of residuals at least so large if the calibration holds."""
         return float(stats.chi2.sf(self.chi_square, self.freedom))
+
+    @property
+    def shift_chance(self) -> float:
+        """Probability of shifts at least so large if no threshold moved."""
+        return chance_of_shift(self.shift_kev, self.shift_covariance)
+
+
+def chance_of_shift(
+    shift_kev: NDArray[np.float64], covariance: NDArray[np.float64]
+) -> float:
+    """Probability of shifts at least so large if no threshold moved (chi-square)."""
+    square = float(shift_kev @ np.linalg.solve(covariance, shift_kev))
+    return float(stats.chi2.sf(square, shift_kev.size))
 
 
 def moved(calibration: Calibration, drift: CommonDrift) -> Calibration:
@@ -237,7 +253,8 @@ class _Problem:
     ) -> CommonDrift:
         """Collect the fit."""
         n, bins = left.shape
-        error = np.sqrt(np.diag(np.linalg.inv(information)))
+        covariance = np.linalg.inv(information)
+        error = np.sqrt(np.diag(covariance))
         square = self._prior() @ values**2
         for b in range(bins):
             square += left[:, b] @ np.linalg.solve(self.covariance[b], left[:, b])
@@ -247,6 +264,7 @@ class _Problem:
             output_error=output * error[:n],
             shift_kev=values[self.shifts],
             shift_error_kev=error[self.shifts],
+            shift_covariance=np.asarray(covariance[self.shifts, self.shifts]),
             variance_kev2=float(values[-2]),
             variance_error_kev2=float(error[-2]),
             ln_dead_time=float(values[-1]),

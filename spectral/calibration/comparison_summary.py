@@ -13,8 +13,6 @@ if TYPE_CHECKING:
 
     from spectral.calibration.comparison import CalibrationComparison
 
-CLEAR = 3.0
-"""A change of this many errors is called clear (common practice, no source)."""
 WIDER = 1.25
 """Pixels moved apart if the spread exceeds the expected one by this factor."""
 
@@ -31,6 +29,7 @@ def comparison_summary(comparison: CalibrationComparison) -> dict[str, Any]:
         "threshold_change_kev": _rounded(c.mean_kev, 4),
         "threshold_change_error_kev": _rounded(c.mean_error_kev, 4),
         "threshold_change_over_error": _rounded(c.mean_pull, 2),
+        "chance_if_no_threshold_moved": float(f"{c.average.shift_chance:.3g}"),
         "spread_of_change_kev": _rounded(c.spread_kev, 4),
         "expected_spread_kev": _rounded(c.expected_spread_kev, 4),
         "spread_over_expected": _rounded(c.spread_ratio, 3),
@@ -77,12 +76,12 @@ def comparison_text(comparison: CalibrationComparison) -> str:
         *comparison_sentences(c),
         "threshold   nominal    change   error    spread   expected (keV)",
     ]
-    for k in range(c.thresholds_kev.size):
-        lines.append(
-            f"{k + 1:9d} {c.thresholds_kev[k]:9.2f} {c.mean_kev[k]:+9.3f} "
-            f"{c.mean_error_kev[k]:7.3f} {c.spread_kev[k]:9.3f} "
-            f"{c.expected_spread_kev[k]:10.3f}"
-        )
+    lines.extend(
+        f"{k + 1:9d} {c.thresholds_kev[k]:9.2f} {c.mean_kev[k]:+9.3f} "
+        f"{c.mean_error_kev[k]:7.3f} {c.spread_kev[k]:9.3f} "
+        f"{c.expected_spread_kev[k]:10.3f}"
+        for k in range(c.thresholds_kev.size)
+    )
     lines.extend(f"note: {note}" for note in c.notes)
     return "\n".join(lines)
 
@@ -99,18 +98,21 @@ def comparison_sentences(comparison: CalibrationComparison) -> tuple[str, ...]:
 
 
 def _thresholds(c: CalibrationComparison) -> str:
-    pull = np.abs(c.mean_pull)
-    k = int(pull.argmax())
-    size = f"{c.mean_kev[k]:+.3f} keV with an error of {c.mean_error_kev[k]:.3f} keV"
-    if pull[k] < CLEAR:
+    k = int(np.abs(c.mean_pull).argmax())
+    chance = c.average.shift_chance
+    size = (
+        f"threshold {k + 1}, {c.mean_kev[k]:+.3f} keV with an error of "
+        f"{c.mean_error_kev[k]:.3f} keV"
+    )
+    if chance < FALSE_ALARM:
         return (
-            f"No threshold clearly moved; the largest change for its error is that of "
-            f"threshold {k + 1}, {size}."
+            f"The thresholds moved on average; the clearest change is that of {size} "
+            f"(chance of all changes together if none moved: {chance:.1g})."
         )
-    count = int(np.count_nonzero(pull >= CLEAR))
     return (
-        f"{count} of {pull.size} thresholds moved clearly; the clearest is threshold "
-        f"{k + 1}, {size}."
+        "The thresholds did not clearly move on average; the largest change for its "
+        f"error is that of {size} (chance of all changes together if none moved: "
+        f"{chance:.2g})."
     )
 
 

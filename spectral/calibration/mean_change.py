@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.calibration.common_drift import CommonDrift, met_by
+from spectral.calibration.common_drift import CommonDrift, chance_of_shift, met_by
 from spectral.calibration.pooled_counts import log_covariance, pooled
 from spectral.calibration.wedge_data import WedgeData
 
@@ -24,6 +24,8 @@ class MeanChange:
     Attributes
     ----------
     shift_kev, shift_error_kev : arrays, shape (threshold,), in keV
+    shift_chance : float
+        Probability of shifts at least so large, all together, if none moved.
     flux_share, flux_error : float
         New over old photons per mA s, minus 1.
     noise_kev, noise_error_kev : float, in keV
@@ -37,6 +39,7 @@ class MeanChange:
 
     shift_kev: NDArray[np.float64]
     shift_error_kev: NDArray[np.float64]
+    shift_chance: float
     flux_share: float
     flux_error: float
     noise_kev: float
@@ -70,9 +73,12 @@ def mean_change(old: Calibration, new: Calibration) -> MeanChange:
     )
     noise = old.model.noise_kev
     moved = np.sqrt(max(noise**2 + variance, 0.25 * noise**2))
+    shift = 0.5 * (there.shift_kev - back.shift_kev)
+    together = there.shift_covariance + back.shift_covariance
     return MeanChange(
-        shift_kev=0.5 * (there.shift_kev - back.shift_kev),
+        shift_kev=shift,
         shift_error_kev=np.hypot(there.shift_error_kev, back.shift_error_kev),
+        shift_chance=chance_of_shift(shift, together),
         flux_share=float(np.expm1(flux)),
         flux_error=flux_error,
         noise_kev=float(moved - noise),

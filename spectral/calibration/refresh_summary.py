@@ -26,6 +26,7 @@ def refresh_summary(refreshed: Refreshed) -> dict[str, Any]:
         "thresholds_kev": refreshed.calibration.thresholds_kev.tolist(),
         "threshold_shift_kev": _rounded(common.shift_kev),
         "threshold_shift_error_kev": _rounded(common.shift_error_kev),
+        "chance_if_no_threshold_moved": float(f"{common.shift_chance:.3g}"),
         "tube_output": _rounded(common.output, 5),
         "tube_output_error": _rounded(common.output_error, 5),
         "noise_variance_change_kev2": round(common.variance_kev2, 4),
@@ -47,7 +48,7 @@ def refresh_summary(refreshed: Refreshed) -> dict[str, Any]:
 
 def refresh_text(refreshed: Refreshed) -> str:
     """One screen of text about a refresh."""
-    common, pixels = refreshed.common, refreshed.pixels
+    common = refreshed.common
     lines = ["threshold   nominal     moved   error (keV)"]
     lines.extend(
         f"{k + 1:9d} {nominal:9.2f} {shift:+9.3f} {error:7.3f}"
@@ -60,19 +61,7 @@ def refresh_text(refreshed: Refreshed) -> str:
             )
         )
     )
-    mean = float(common.output.mean()) - 1.0
-    lines += [
-        f"tube output {100 * mean:+.2f} %, noise variance "
-        f"{common.variance_kev2:+.3f} keV2 (error {common.variance_error_kev2:.3f}), "
-        f"dead time {100 * common.ln_dead_time:+.1f} % "
-        f"(error {100 * common.ln_dead_time_error:.1f} %)",
-        f"pixels drifted apart by {pixels.spread[1]:.3f} keV (error "
-        f"{pixels.spread_error[1]:.3f}) in thresholds, {100 * pixels.spread[0]:.2f} % "
-        "in area",
-        f"mean counts were missed by up to {_largest_percent(common.before):.2f} % and "
-        f"are now met to {_largest_percent(common.residual):.2f} % (chi-square "
-        f"{common.chi_square:.0f} for {common.freedom} degrees of freedom)",
-    ]
+    lines += _movement(refreshed)
     bad = by_reason(refreshed.new_reasons)
     if bad:
         kinds = ", ".join(f"{n} {r.replace('_', ' ').lower()}" for r, n in bad.items())
@@ -84,6 +73,33 @@ def refresh_text(refreshed: Refreshed) -> str:
     else:
         lines.append("No full wedge scan is needed.")
     return "\n".join(lines)
+
+
+def _movement(refreshed: Refreshed) -> tuple[str, ...]:
+    common, pixels = refreshed.common, refreshed.pixels
+    output = 100.0 * (float(common.output.mean()) - 1.0)
+    tube = (
+        f"tube output {output:+.2f} %, noise variance {common.variance_kev2:+.3f} keV2 "
+        f"(error {common.variance_error_kev2:.3f}), dead time "
+        f"{100 * common.ln_dead_time:+.1f} % "
+        f"(error {100 * common.ln_dead_time_error:.1f} %)"
+    )
+    apart = (
+        f"pixels drifted apart by {pixels.spread[1]:.3f} keV (error "
+        f"{pixels.spread_error[1]:.3f}) in thresholds, {100 * pixels.spread[0]:.2f} % "
+        "in area"
+    )
+    met = (
+        f"mean counts were missed by up to {_largest_percent(common.before):.2f} % and "
+        f"are now met to {_largest_percent(common.residual):.2f} % (chi-square "
+        f"{common.chi_square:.0f} for {common.freedom} degrees of freedom)"
+    )
+    shared = (
+        "chance of such shifts, all together, if no threshold moved: "
+        f"{common.shift_chance:.2g}; their errors go together, for a shift that all "
+        "share resembles a change of the tube's output"
+    )
+    return shared, tube, apart, met
 
 
 def _largest_percent(log_ratio: NDArray[np.float64]) -> float:
