@@ -13,6 +13,7 @@ from spectral.decomposition.judging import (
     domain_facets,
     judge,
     misfit_limit,
+    rate_share,
     sigmas_outside,
 )
 from spectral.decomposition.maps import Maps
@@ -261,7 +262,7 @@ class MaterialDecomposer:
             deviance=found.deviance,
             limit=misfit_limit(counts.shape[1] - materials, extra),
             converged=np.isin(found.outcome, ENDED_WELL),
-            rate_share=picked[:, 0] / where.rate_limit,
+            over_rate=rate_share(picked[:, 0], where.rate_limit),
         )
         flags[faults.ravel()[flat] != 0] |= np.uint16(PixelFlag.COUNT_FAULT)
         lost = ~np.isfinite(found.areal_density).all(axis=1)

@@ -18,6 +18,7 @@ LEAST_COUNTS = 20.0
 OUTSIDE_SIGMAS = 4.0
 MISFIT_TAIL = 1e-5
 RATE_MARGIN = 1.05
+RATE_SIGMAS = 5.0
 
 
 def domain_facets(steps: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -94,6 +95,21 @@ def misfit_limit(freedom: int, extra: NDArray[np.float64]) -> NDArray[np.float64
     return np.asarray(chi2.isf(MISFIT_TAIL, freedom) / freedom * (1.0 + extra))
 
 
+def rate_share(
+    counts: NDArray[np.float64], limit: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Count rate over the highest calibrated one, less what counting scatters.
+
+    Parameters
+    ----------
+    counts, limit : arrays, shape (pixel,)
+        Counts above the lowest threshold, and those at the highest calibrated rate in
+        the same time.
+    """
+    scatter = RATE_SIGMAS * np.sqrt(np.maximum(limit, 1.0))
+    return np.asarray((counts - scatter) / np.maximum(limit, 1.0))
+
+
 def judge(
     *,
     total_counts: NDArray[np.float64],
@@ -101,7 +117,7 @@ def judge(
     deviance: NDArray[np.float64],
     limit: NDArray[np.float64],
     converged: NDArray[np.bool_],
-    rate_share: NDArray[np.float64],
+    over_rate: NDArray[np.float64],
 ) -> NDArray[np.uint16]:
     """Flags of estimates, shape (pixel,); see `PixelFlag`.
 
@@ -113,8 +129,8 @@ def judge(
         As `sigmas_outside`.
     deviance, limit : arrays, shape (pixel,)
     converged : array of bool, shape (pixel,)
-    rate_share : array, shape (pixel,)
-        Count rate over the highest calibrated one.
+    over_rate : array, shape (pixel,)
+        As the function `rate_share`.
     """
     flags = np.zeros(total_counts.shape, np.uint16)
     for flag, where in (
@@ -122,7 +138,7 @@ def judge(
         (PixelFlag.OUTSIDE_DOMAIN, outside > OUTSIDE_SIGMAS),
         (PixelFlag.MISFIT, deviance > limit),
         (PixelFlag.NOT_CONVERGED, ~converged),
-        (PixelFlag.RATE_TOO_HIGH, rate_share > RATE_MARGIN),
+        (PixelFlag.RATE_TOO_HIGH, over_rate > RATE_MARGIN),
     ):
         flags[where] |= np.uint16(flag)
     return flags

@@ -13,6 +13,7 @@ from spectral.decomposition.judging import (
     domain_facets,
     judge,
     misfit_limit,
+    rate_share,
     sigmas_outside,
 )
 
@@ -134,7 +135,7 @@ def judged(**changed: float | bool) -> int:
         "deviance": 1.0,
         "limit": 9.0,
         "converged": True,
-        "rate_share": 0.5,
+        "over_rate": 0.5,
     }
     facts |= changed
     return int(judge(**{k: np.array([v]) for k, v in facts.items()})[0])
@@ -148,8 +149,8 @@ def test_each_doubt_has_its_flag() -> None:
     assert judged(outside=3.9) == PixelFlag.GOOD
     assert judged(deviance=9.1) == PixelFlag.MISFIT
     assert judged(converged=False) == PixelFlag.NOT_CONVERGED
-    assert judged(rate_share=1.06) == PixelFlag.RATE_TOO_HIGH
-    assert judged(rate_share=1.04) == PixelFlag.GOOD
+    assert judged(over_rate=1.06) == PixelFlag.RATE_TOO_HIGH
+    assert judged(over_rate=1.04) == PixelFlag.GOOD
 
 
 def test_doubts_add_up() -> None:
@@ -159,3 +160,10 @@ def test_doubts_add_up() -> None:
 
 def test_every_flag_has_a_meaning() -> None:
     assert set(MEANING) == {flag for flag in PixelFlag if flag}
+
+
+def test_counting_scatter_does_not_count_as_rate() -> None:
+    limit = np.array([400.0, 40000.0])
+    # 5 sigma of 400 counts is 100, of 40000 it is 1000
+    found = rate_share(np.array([500.0, 45000.0]), limit)
+    np.testing.assert_allclose(found, [1.0, 1.1])
