@@ -36,6 +36,7 @@ from spectral.calibration.threshold_scan.summary import (
 )
 from spectral.errors import CalibrationError, FileFormatError, InputError
 from spectral.physics.sensor import ChargeTransport
+from spectral.scans.scan import Filter
 from spectral.scans.threshold_scan import LineSource, ThresholdScan
 
 if TYPE_CHECKING:
@@ -143,6 +144,59 @@ def test_several_comparators(tables: dict[str, CurveTable]) -> None:
         assert np.abs(energy[k] - true).max() < 0.2
     with pytest.raises(InputError, match="2 comparators were scanned"):
         found.energies([100.0, 120.0, 140.0])
+
+
+@pytest.mark.parametrize(
+    ("source", "height", "largest_kev"),
+    [
+        (
+            LineSource(
+                kind="edge filter",
+                emitter="Gd",
+                voltage_kv=80.0,
+                filters=(Filter(material="Gd", thickness_mm=0.15),),
+            ),
+            2e4,
+            0.3,
+        ),
+        (LineSource(kind="tube end", voltage_kv=70.0), 2e4, 0.1),
+    ],
+)
+def test_edges_and_ends_help_a_line(
+    tables: dict[str, CurveTable],
+    source: LineSource,
+    height: float,
+    largest_kev: float,
+) -> None:
+    rng = np.random.default_rng(8)
+    scans, offset, gain = made_up(tables)
+    table = landmark_table(landmark_of(source), source, None, ChargeTransport())
+    mark = table.landmark.energy_kev
+    settings = np.round((mark + np.linspace(-9.0, 9.0, 36) - OFFSET) / GAIN)
+    values = np.zeros((ROWS * COLUMNS, table.parameters))
+    values[:, LN_WIDTH] = np.log(1.3)
+    values[:, LN_HEIGHT] = np.log(height)
+    e = offset.reshape(-1, 1) + gain.reshape(-1, 1) * settings - mark
+    counts = rng.poisson(landmark_curve(table, e, values)[0]).T
+    other = replace(
+        scans[0],
+        source=source,
+        settings=settings,
+        counts=counts.reshape(-1, 1, ROWS, COLUMNS).astype(np.uint32),
+        count_time_s=np.ones(settings.size),
+        nominal_scale=(OFFSET + 0.5, GAIN),
+    )
+    found = threshold_energies([scans[0], other])
+    true_kev = offset + gain * found.place[1]
+    off = true_kev - mark
+    assert abs(off.mean()) < 0.1 + 3.0 * off.std() / np.sqrt(off.size)
+    assert off.std() < largest_kev
+    # errors are as large as the scatter, or larger
+    assert np.median(found.place_error[1]) * GAIN > 0.7 * off.std()
+    assert found.freedom.max() == 0
+    if source.kind == "tube end":
+        assert any("may keep rising with exposure" in a for a in found.assumptions)
+        assert found.common_error_kev[1] > 0.35  # half a percent of 70 kV
 
 
 def test_sick_pixels_are_flagged_with_reasons(tables: dict[str, CurveTable]) -> None:

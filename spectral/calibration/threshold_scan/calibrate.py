@@ -20,7 +20,7 @@ from spectral.calibration.threshold_scan.landmark_places import (
 )
 from spectral.calibration.threshold_scan.landmark_shape import landmark_table
 from spectral.calibration.threshold_scan.landmark_teaching import NOISE_START_KEV
-from spectral.calibration.threshold_scan.landmarks import LINE, Landmark
+from spectral.calibration.threshold_scan.landmarks import END, LINE, Landmark
 from spectral.calibration.threshold_scan.oriented_scan import (
     OrientedScan,
     check_scans,
@@ -42,6 +42,9 @@ if TYPE_CHECKING:
     from spectral.physics.sensor import Sensor
     from spectral.scans.threshold_scan import ThresholdScan
 
+VOLTAGE_ERROR = 0.005
+"""Share by which a tube's voltage may differ from its nominal one (common practice, no
+source)."""
 NO_SENSOR_ERROR_KEV = 0.3
 """Common error of a landmark where no sensor is described: typical bias by sharing."""
 
@@ -188,6 +191,8 @@ def _result(
     common = np.array([f.common_error_kev for f in found])
     if sensor is None:
         common = np.hypot(common, NO_SENSOR_ERROR_KEV)
+    ends = np.array([o.landmark.order == END for o in oriented])
+    common = np.where(ends, np.hypot(common, VOLTAGE_ERROR * energy), common)
     straight = fit_energy_scale(energy, place, error, usable, common)
 
     def image(values: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -270,6 +275,7 @@ def _assumptions(
         )
     if any(o.scan.source.kind == "tube end" for o in oriented):
         said.append(
-            "the tube's end lies at the nominal voltage; it may drift with exposure"
+            "a tube's end lies at its nominal voltage; the threshold that just "
+            "silences a pixel may keep rising with exposure"
         )
     return tuple(said)

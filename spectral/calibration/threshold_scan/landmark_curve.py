@@ -91,7 +91,7 @@ def curve_table(
     u = level - landmark.energy_kev
     near = np.abs(u) <= REACH_KEV
     width = np.exp(LN_WIDTH_GRID)
-    shape = _above(density.pulses, step, width)
+    shape = np.maximum(_above(density.pulses, step, width), 0.0)
     norm = float(np.interp(-NORM_KEV, u, shape[:, 0]))
     change = _above(larger.pulses - smaller.pulses, step, width) / (2.0 * cloud_step)
     tables = [shape / norm, change / norm]
