@@ -45,7 +45,7 @@ if TYPE_CHECKING:
 VOLTAGE_ERROR = 0.005
 """Share by which a tube's voltage may differ from its nominal one (common practice, no
 source)."""
-NO_SENSOR_ERROR_KEV = 0.3
+NO_SENSOR_ERROR_KEV = 0.5
 """Common error of a landmark where no sensor is described: typical bias by sharing."""
 
 
