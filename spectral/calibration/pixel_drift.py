@@ -8,6 +8,12 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.calibration.drift_spread import (
+    CLASSES,
+    class_of,
+    drift_variance,
+    updated,
+)
 from spectral.calibration.pixel_fit import CHUNK, NS
 from spectral.forward.pixel_response import curve_tables
 from spectral.kernels import pixel_likelihood
@@ -19,11 +25,6 @@ if TYPE_CHECKING:
     from spectral.calibration.wedge_data import WedgeData
     from spectral.forward.pixel_response import CurveTables
 
-CLASSES = ("ln_area", "shift_kev", "variance_kev2", "ln_dead_time")
-"""Kinds of departures; all thresholds of a detector drift alike."""
-SCORING_ROUNDS = 12
-SAMPLE = 8192
-FAR = 5.0
 JITTER = 1e-5
 
 
@@ -37,7 +38,7 @@ class PixelDrift:
         Posterior means; their mean over the pixels is that of the calibration.
     covariance : array, shape (pixel, parameter, parameter)
     spread, spread_error : arrays, shape (4,)
-        Standard deviation of the drift between pixels for each of `CLASSES`, and the
+        Standard deviation of the drift between pixels for each of `drift_spread.CLASSES`, and the
         standard error of that; an upper bound where the spread is 0.
     deviance : array, shape (pixel,)
         Per degree of freedom, of the scan's counts at the new values.
@@ -74,7 +75,7 @@ def pixel_drift(
     Notes
     -----
     The prior of a pixel is normal about its calibrated departures, with their posterior
-    covariance plus the drift's variance, one number for each of `CLASSES`, which
+    covariance plus the drift's variance, one number for each of `drift_spread.CLASSES`, which
     maximises the marginal likelihood of all pixels. A factor for each exposure and bin
     keeps what all pixels share out of them. Source: empirical Bayes, H. Robbins
     (1956); variance components by scoring, H. D. Patterson, R. Thompson, Biometrika
@@ -193,97 +194,7 @@ def _stored_covariance(
     return own
 
 
-def class_of(parameters: int) -> NDArray[np.int64]:
-    """Index into `CLASSES` of each departure."""
-    return np.array([0, *[1] * (parameters - 3), 2, 3])
-
-
 def _by_class(values: NDArray[np.float64]) -> NDArray[np.float64]:
     """Mean of a value of each departure over its class."""
     which = class_of(values.size)
     return np.array([values[which == c].mean() for c in range(len(CLASSES))])
-
-
-def updated(
-    information: NDArray[np.float64],
-    pull: NDArray[np.float64],
-    start: NDArray[np.float64],
-    own: NDArray[np.float64],
-    variance: NDArray[np.float64],
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Posterior mean and covariance of departures that drifted.
-
-    Parameters
-    ----------
-    information : array, shape (pixel, parameter, parameter)
-    pull : array, shape (pixel, parameter)
-        Information times the departures that the counts alone would give.
-    start : array, shape (pixel, parameter)
-        Departures before, and
-    own : array, shape (pixel, parameter, parameter)
-        their covariance.
-    variance : array, shape (4,)
-        Of the drift, for each of `CLASSES`.
-    """
-    prior = own + np.diag(variance[class_of(start.shape[1])])
-    # posterior = (1 + prior information)^-1 prior: nothing near singular is inverted
-    inner = np.eye(start.shape[1]) + prior @ information
-    covariance = np.linalg.solve(inner, prior)
-    covariance = 0.5 * (covariance + covariance.transpose(0, 2, 1))
-    news = pull - (information @ start[..., None])[..., 0]
-    return start + (covariance @ news[..., None])[..., 0], covariance
-
-
-def drift_variance(
-    information: NDArray[np.float64],
-    pull: NDArray[np.float64],
-    start: NDArray[np.float64],
-    own: NDArray[np.float64],
-    variance: NDArray[np.float64],
-    largest: NDArray[np.float64],
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
-    """Variance of the drift that makes the pixels' counts most probable.
-
-    Parameters are those of `updated`, with
-
-    variance : array, shape (4,)
-        To start from.
-    largest : array, shape (4,)
-        Upper bounds.
-
-    Returns
-    -------
-    variance, error : arrays, shape (4,)
-        The latter is the standard error of the former.
-
-    Notes
-    -----
-    Fisher scoring. With J the information on a pixel's drift once its calibrated
-    departures' error is added, Q = (J^-1 + D)^-1 and w = Q (apparent drift), the score
-    of class c is half the sum over pixels and its departures of w^2 - Q_ii.
-    """
-    sample = slice(None, None, max(1, information.shape[0] // SAMPLE))
-    information, own = information[sample], own[sample]
-    size = start.shape[1]
-    which = np.eye(len(CLASSES))[class_of(size)]
-    inner = np.eye(size) + information @ own
-    known = np.linalg.solve(inner, information)
-    news = pull[sample] - (information @ start[sample][..., None])[..., 0]
-    apparent = np.linalg.solve(inner, news[..., None])[..., 0]
-    scale = which @ largest
-    fisher = np.eye(len(CLASSES))
-    for _ in range(SCORING_ROUNDS):
-        spread = np.eye(size) + known * (which @ variance)
-        weight = np.linalg.solve(spread, known)
-        pulls = np.linalg.solve(spread, apparent[..., None])[..., 0]
-        own_weight = np.maximum(np.diagonal(weight, axis1=1, axis2=2), 0.0)
-        near = (pulls**2 <= FAR**2 * (own_weight + 1e-12 / scale)).all(axis=1)
-        score = 0.5 * (pulls[near] ** 2 - own_weight[near]).sum(axis=0) @ which
-        fisher = 0.5 * which.T @ (weight[near] ** 2).sum(axis=0) @ which
-        fisher = fisher + np.diag(1e-3 / largest**2)
-        new = np.clip(variance + np.linalg.solve(fisher, score), 0.0, largest)
-        still = np.abs(new - variance).max() < 1e-4 * largest.max()
-        variance = new
-        if still:
-            break
-    return variance, np.sqrt(np.diag(np.linalg.inv(fisher)))

@@ -10,8 +10,9 @@ import numpy as np
 
 import spectral
 from spectral.calibration.common_drift import CommonDrift, common_drift, moved
+from spectral.calibration.drift_spread import class_of
 from spectral.calibration.full_scan import full_scan_reasons, refresh_notes
-from spectral.calibration.pixel_drift import PixelDrift, class_of, pixel_drift
+from spectral.calibration.pixel_drift import PixelDrift, pixel_drift
 from spectral.calibration.promise import with_promise
 from spectral.calibration.short_scan import short_scan_data
 from spectral.scans.bad_pixels import PixelReason, find_bad_pixels

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from spectral.calibration.comparison import by_reason
-from spectral.calibration.pixel_drift import CLASSES
+from spectral.calibration.drift_spread import CLASSES
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
