@@ -125,9 +125,9 @@ def _spread(c: CalibrationComparison) -> str:
     )
     return (
         f"Between pixels the change of threshold {k + 1} spreads by "
-        f"{c.spread_kev[k]:.3f} keV, {ratio[k]:.2f} times what is expected of unchanged "
-        f"pixels: {verdict}. {found} of {int(c.both_good.sum())} pixels changed by more "
-        f"than their errors allow, where {c.by_chance:.1f} are expected by chance."
+        f"{c.spread_kev[k]:.3f} keV, {ratio[k]:.2f} times what is expected of "
+        f"unchanged pixels: {verdict}. {found} of {int(c.both_good.sum())} pixels "
+        f"changed by more than their errors allow, where {c.by_chance:.1f} are expected by chance."
     )
 
 
@@ -137,8 +137,8 @@ def _others(c: CalibrationComparison) -> str:
         f"Flux per mA s changed by {100 * a.flux_share:+.2f} % "
         f"(error {100 * a.flux_error:.2f} %), noise by {a.noise_kev:+.3f} keV "
         f"({a.noise_error_kev:.3f} keV), dead time by {100 * a.dead_time_share:+.1f} % "
-        f"({100 * a.dead_time_error:.1f} %); what these leave of the expected counts is "
-        f"at most {_unexplained_percent(c):.2f} %. Areas of pixels changed by "
+        f"({100 * a.dead_time_error:.1f} %); what these leave of the expected counts "
+        f"is at most {_unexplained_percent(c):.2f} %. Areas of pixels changed by "
         f"{c.area_spread_percent:.2f} % (standard deviation; expected of unchanged "
         f"pixels {c.expected_area_spread_percent:.2f} %)."
     )

@@ -112,8 +112,8 @@ def _output(data: WedgeData, common: CommonDrift) -> str:
     if abs(change) <= LARGEST_OUTPUT_CHANGE:
         return ""
     return (
-        f"The tube's output changed by {100 * change:+.0f} %: count rates are no longer "
-        "those of the wedge scan."
+        f"The tube's output changed by {100 * change:+.0f} %: count rates are no "
+        "longer those of the wedge scan."
     )
 
 

@@ -38,8 +38,9 @@ class PixelDrift:
         Posterior means; their mean over the pixels is that of the calibration.
     covariance : array, shape (pixel, parameter, parameter)
     spread, spread_error : arrays, shape (4,)
-        Standard deviation of the drift between pixels for each of `drift_spread.CLASSES`, and the
-        standard error of that; an upper bound where the spread is 0.
+        Standard deviation of the drift between pixels for each of
+        `drift_spread.CLASSES`, and its standard error; an upper bound where the spread
+        is 0.
     deviance : array, shape (pixel,)
         Per degree of freedom, of the scan's counts at the new values.
     """
@@ -75,8 +76,8 @@ def pixel_drift(
     Notes
     -----
     The prior of a pixel is normal about its calibrated departures, with their posterior
-    covariance plus the drift's variance, one number for each of `drift_spread.CLASSES`, which
-    maximises the marginal likelihood of all pixels. A factor for each exposure and bin
+    covariance plus the drift's variance, one number for each of
+    `drift_spread.CLASSES`, which maximises the marginal likelihood of all pixels. A factor for each exposure and bin
     keeps what all pixels share out of them. Source: empirical Bayes, H. Robbins
     (1956); variance components by scoring, H. D. Patterson, R. Thompson, Biometrika
     58 (1971) 545.

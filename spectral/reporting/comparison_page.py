@@ -289,7 +289,7 @@ def _unknowns_table(old: Calibration, new: Calibration) -> Table:
 
 def _assumed() -> list[str]:
     return [
-        "both calibrations are of the same detector, pixel for pixel, and the same beam",
+        "both calibrations are of one detector, pixel for pixel, and of one beam",
         (
             "the change of the average pixel is that of thresholds, flux, noise and "
             "dead time; beam and sensor are taken as unchanged"

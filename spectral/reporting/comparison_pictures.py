@@ -59,12 +59,13 @@ def _threshold_sheet(
     maps = sheet.axes[columns : columns + len(chosen)]
     for place, k in enumerate(chosen):
         _draw_change(sheet.axes[place], comparison, k, limits)
-        mean, spread = comparison.mean_kev[k], comparison.spread_kev[k]
+        mean = fixed(float(comparison.mean_kev[k]), 3, sign=True)
+        spread = fixed(float(comparison.spread_kev[k]), 3)
         panels.draw_signed_map(
             maps[place],
             comparison.change_kev[k],
             label="keV, new minus old",
-            title=f"{fixed(float(mean), 3, sign=True)}, spread {fixed(float(spread), 3)}",
+            title=f"{mean}, spread {spread}",
             limits=limits,
             bar_beside=maps if place == len(chosen) - 1 else [],
         )
@@ -127,6 +128,7 @@ def area_change_picture(comparison: CalibrationComparison) -> Picture:
         label="%, new over old",
         title="sensitive area, mean taken off",
     )
+    share = float(comparison.changed.sum() / comparison.both_good.sum())
     per_freedom = comparison.chi_square / np.maximum(comparison.freedom, 1)
     panels.draw_map(
         sheet.axes[1],
@@ -141,8 +143,7 @@ def area_change_picture(comparison: CalibrationComparison) -> Picture:
             f"Two maps: area changed by {fixed(comparison.area_spread_percent, 2)} % "
             "(standard deviation between pixels); chi-square per degree of freedom of "
             f"each pixel's change, median {number(median(per_freedom))}, "
-            f"{percent(float(comparison.changed.sum() / comparison.both_good.sum()), 2)}"
-            " of the pixels beyond the limit."
+            f"{percent(share, 2)} of the pixels beyond the limit."
         ),
         caption=(
             "Unchanged pixels have a chi-square per degree of freedom near 1. "
