@@ -9,9 +9,13 @@ import click
 from spectral.calibration.calibration_file import write_calibration
 from spectral.calibration.calibrator import Faults, WedgeCalibrator
 from spectral.calibration.summary import calibration_summary, calibration_text
+from spectral.calibration.threshold_scan.energies_file import (
+    read_threshold_energies,
+)
+from spectral.calibration.threshold_scan.result import threshold_prior
 from spectral.scans.script import open_scan
 
-from ..outcome import SAFETY, ends_well, json_option, scan_argument, show
+from ..outcome import SAFETY, UseError, ends_well, json_option, scan_argument, show
 from ..stages import stages
 
 
@@ -38,6 +42,20 @@ from ..stages import stages
     show_default=True,
     help="What to do with exposures that contradict the others.",
 )
+@click.option(
+    "--thresholds",
+    "energies_path",
+    type=click.Path(exists=True, dir_okay=False, path_type=Path),
+    help="Threshold energies of each pixel, from 'wedgewright thresholds'.",
+)
+@click.option(
+    "--setting",
+    "settings",
+    type=float,
+    multiple=True,
+    metavar="S",
+    help="With --thresholds: the scan's threshold settings, lowest first; repeat.",
+)
 @json_option
 @ends_well
 def calibrate(
@@ -45,6 +63,8 @@ def calibrate(
     output: Path,
     without: tuple[int, ...],
     faults: Faults,
+    energies_path: Path | None,
+    settings: tuple[float, ...],
     as_json: bool,
 ) -> None:
     """Learn every pixel's bin response from the wedge scan SCAN.
@@ -54,10 +74,19 @@ def calibrate(
     decomposing needs goes into one file.
     """
     scan = open_scan(scan_path)
+    known = None
+    if energies_path is not None:
+        if len(settings) != scan.shape[1]:
+            message = (
+                f"--thresholds needs one --setting for each of the {scan.shape[1]} "
+                f"thresholds, got {len(settings)}"
+            )
+            raise UseError(message)
+        known = threshold_prior(read_threshold_energies(energies_path), settings)
     with stages() as tell:
-        fitted = WedgeCalibrator(excluded=without, faults=faults).fit(
-            scan, progress=tell
-        )
+        fitted = WedgeCalibrator(
+            excluded=without, faults=faults, threshold_shifts=known
+        ).fit(scan, progress=tell)
     calibration = fitted.calibration_
     write_calibration(calibration, output)
     show(

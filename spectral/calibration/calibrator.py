@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 
 from spectral.calibration.assembly import assemble
-from spectral.calibration.pixel_fit import PixelFit, fit_pixels
+from spectral.calibration.pixel_fit import MeasuredShifts, PixelFit, fit_pixels
 from spectral.calibration.population import Population, fit_population
 from spectral.calibration.promise import with_promise
 from spectral.calibration.scan_trends import trends
@@ -19,7 +19,7 @@ from spectral.calibration.step_faults import (
     name_faults,
 )
 from spectral.calibration.wedge_data import WedgeData, wedge_data
-from spectral.errors import CalibrationError
+from spectral.errors import CalibrationError, InputError
 from spectral.forward.pixel_response import curve_tables
 from spectral.forward.setup import Setup
 from spectral.scans.bad_pixels import PixelReason, find_bad_pixels
@@ -55,6 +55,9 @@ class WedgeCalibrator:
     faults : {"leave out", "refuse", "keep"}
         What to do with exposures that contradict the others or themselves: leave
         them out and say so, refuse the scan, or do not look.
+    threshold_shifts : (shift_kev, sigma_kev), each of shape (row, column, threshold)
+        What a threshold scan says of each pixel
+        (`spectral.calibration.threshold_scan.result.threshold_prior`).
 
     Attributes
     ----------
@@ -74,12 +77,14 @@ class WedgeCalibrator:
         excluded: tuple[int, ...] = (),
         leave_out: bool = True,
         faults: Faults = "leave out",
+        threshold_shifts: tuple[NDArray[np.float64], NDArray[np.float64]] | None = None,
     ) -> None:
         self.rounds = rounds
         self.samples = samples
         self.excluded = excluded
         self.leave_out = leave_out
         self.faults = faults
+        self.threshold_shifts = threshold_shifts
 
     def fit(
         self, scan: Scan, *, progress: Callable[[str, float], None] | None = None
@@ -214,9 +219,28 @@ class WedgeCalibrator:
             tables,
             data.thresholds_kev + population.shift_kev,
             dead_time_ns=population.model.shape.effective_ns,
+            measured=self._measured(data),
             rounds=rounds,
             progress=self._tell(stage),
         )
+
+    def _measured(self, data: WedgeData) -> MeasuredShifts | None:
+        """Known shifts of the data's pixels."""
+        if self.threshold_shifts is None:
+            return None
+        wanted = (*data.shape, data.thresholds_kev.size)
+        for name, values in zip(("shift", "sigma"), self.threshold_shifts, strict=True):
+            if values.shape != wanted:
+                msg = (
+                    f"the {name} of threshold_shifts has shape {values.shape}, the scan "
+                    f"needs {wanted}"
+                )
+                raise InputError(msg)
+        shift, sigma = (
+            values.reshape(-1, wanted[2])[data.pixel]
+            for values in self.threshold_shifts
+        )
+        return MeasuredShifts(shift_kev=shift, sigma_kev=sigma)
 
 
 def misfits(fit: PixelFit, data: WedgeData) -> NDArray[np.bool_]:

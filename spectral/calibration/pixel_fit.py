@@ -57,6 +57,30 @@ class _Summary:
     expected: NDArray[np.float64]
 
 
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class MeasuredShifts:
+    """Threshold shifts of pixels known from elsewhere, such as a threshold scan.
+
+    Attributes
+    ----------
+    shift_kev, sigma_kev : arrays, shape (pixel, threshold), in keV
+        Shift against the average pixel and its standard deviation; infinite where
+        nothing is known.
+    """
+
+    shift_kev: NDArray[np.float64]
+    sigma_kev: NDArray[np.float64]
+
+    def add_to(
+        self, information: NDArray[np.float64], pull: NDArray[np.float64]
+    ) -> None:
+        """Add what is known to the quadratic form of the likelihood, in place."""
+        precision = self.sigma_kev**-2
+        for k in range(self.shift_kev.shape[1]):
+            information[:, 1 + k, 1 + k] += precision[:, k]
+            pull[:, 1 + k] += precision[:, k] * self.shift_kev[:, k]
+
+
 def prior_spread(thresholds: int) -> NDArray[np.float64]:
     """Spread of the departures to start from: 3 %, 1.5 keV, 1 keV2, 5 %."""
     return np.diag([0.03, *([1.5] * thresholds), 1.0, 0.05]) ** 2
@@ -68,6 +92,7 @@ def fit_pixels(
     levels_kev: NDArray[np.float64],
     *,
     dead_time_ns: float,
+    measured: MeasuredShifts | None = None,
     rounds: int = 4,
     threads: int = 2,
     progress: Callable[[float], None] | None = None,
@@ -83,6 +108,8 @@ def fit_pixels(
         Thresholds of the average pixel.
     dead_time_ns : float
         For the covariance of the counts.
+    measured : MeasuredShifts, optional
+        Joins the likelihood as independent data.
     rounds : int
         Gauss-Newton rounds; the spread is learned anew in each.
     threads : int
@@ -130,6 +157,8 @@ def fit_pixels(
             break
         information = np.concatenate([p.information for p in parts])
         pull = np.concatenate([p.pull for p in parts])
+        if measured is not None:
+            measured.add_to(information, pull)
         spread = learned_spread(information, pull, spread)
         values, covariance = posterior(information, pull, spread)
         # the average pixel has no departures: what all share belongs to the ratio
