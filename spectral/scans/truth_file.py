@@ -106,8 +106,6 @@ def read_truth(path: str | Path) -> ScanTruth:
                 values[name] = entry.texts(name)
             elif name in ("seed", "detector_seed"):
                 values[name] = int(entry.values(name))
-            elif name in _UNITS:
-                values[name] = entry.quantity(name, _UNITS[name])
             else:
                 values[name] = entry.values(name)
     return ScanTruth(**values)
