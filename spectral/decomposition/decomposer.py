@@ -245,11 +245,12 @@ class MaterialDecomposer:
         spread, extra = calibration_spread(
             self.calibration,
             where.tables,
-            flat,
-            np.where(np.isfinite(found.areal_density), found.areal_density, 0.0),
-            np.where(np.isfinite(full), full, 0.0),
+            where.responses,
+            np.nan_to_num(found.areal_density),
+            np.nan_to_num(full),
             count_time_s=float(self.count_time_[exposure]),
             output=where.output,
+            threads=self.threads,
         )
         materials = full.shape[1]
         flags = judge(

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from spectral.forward.node_response import NodeTables, pixel_weights
+from spectral.kernels import calibration_shift
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -94,15 +96,26 @@ def responses(
     )
 
 
+def stacked(tables: NodeTables) -> NDArray[np.float64]:
+    """Node tables as one array (bin, kind, grid, node) for the compiled loops."""
+    return np.ascontiguousarray(
+        [
+            [t.curve.T, t.by_rate.T, t.by_variance.T, t.by_dead_time.T]
+            for t in tables.by_bin
+        ]
+    )
+
+
 def calibration_spread(
     calibration: Calibration,
     tables: NodeTables,
-    flat: NDArray[np.int64],
+    ready: Responses,
     estimate: NDArray[np.float64],
     covariance: NDArray[np.float64],
     *,
     count_time_s: float,
     output: float = 1.0,
+    threads: int = 1,
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
     """What the calibration's own errors add to estimates.
 
@@ -110,12 +123,14 @@ def calibration_spread(
     ----------
     calibration : Calibration
     tables : NodeTables
-    flat : array of int64, shape (pixel,)
+    ready : Responses
+        Of the pixels, made from the tables.
     estimate : array, shape (pixel, material), in g/cm2
     covariance : array, shape (pixel, material, material)
         Of the estimates, by counting statistics.
     count_time_s, output : float
         As `responses`.
+    threads : int
 
     Returns
     -------
@@ -129,35 +144,34 @@ def calibration_spread(
     First order: shift = F^-1 D^T C^-1 dl, with dl the change of the expected counts
     by the departures' posterior covariance.
     """
-    materials = estimate.shape[1]
-    errors = np.empty((flat.size, materials))
+    flat = ready.flat
+    errors = np.empty(estimate.shape)
     extra = np.empty(flat.size)
     lost = lost_fraction(calibration.dead_time_ns, count_time_s)
     spread = calibration.departure_covariance.reshape(
         -1, *calibration.departure_covariance.shape[2:]
     )
-    for first in range(0, flat.size, BLOCK // 4):
-        part = slice(first, first + BLOCK // 4)
-        weight, change = pixel_weights(
-            tables,
+    departures = calibration.pixels(flat).brightened(output).values
+    table = stacked(tables)
+
+    def block(first: int) -> None:
+        part = slice(first, first + BLOCK)
+        calibration_shift.shifts(
+            table,
             calibration.levels_kev,
-            calibration.pixels(flat[part]).brightened(output),
-            derivatives=True,
+            tables.by_bin[0].step_kev,
+            tables.attenuation,
+            departures[part],
+            spread[flat[part]],
+            ready.weight[part],
+            estimate[part],
+            covariance[part],
+            lost,
+            count_time_s,
+            errors[part],
+            extra[part],
         )
-        passed = np.exp(-estimate[part] @ tables.attenuation.T)
-        counts = np.maximum((weight @ passed[..., None])[..., 0] * count_time_s, 1e-6)
-        slope = -(weight * passed[:, None]) @ tables.attenuation * count_time_s
-        moved = (change @ passed[:, None, :, None])[..., 0] * count_time_s
-        boost = lost / np.maximum(1.0 - lost * counts.sum(axis=1), 0.1)
-        weighted = slope / counts[..., None]
-        weighted += (boost[:, None] * slope.sum(axis=1))[:, None, :]
-        gain = covariance[part] @ (weighted.transpose(0, 2, 1) @ moved)
-        own = spread[flat[part]].astype(np.float64)
-        shift = gain @ own @ gain.transpose(0, 2, 1)
-        errors[part] = np.sqrt(np.maximum(np.diagonal(shift, axis1=1, axis2=2), 0.0))
-        # what the fit cannot follow of the change raises the deviance
-        rest = moved - slope @ gain
-        variance = np.einsum("pbq,pqr,pbr->pb", rest, own, rest)
-        freedom = max(counts.shape[1] - materials, 1)
-        extra[part] = (variance / counts).sum(axis=1) / freedom
+
+    with ThreadPoolExecutor(threads) as pool:
+        list(pool.map(block, range(0, flat.size, BLOCK)))
     return errors, extra

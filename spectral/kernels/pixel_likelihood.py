@@ -22,7 +22,9 @@ LEAST = 1e-6
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def _weights(level: float, step: float, grid: int, value: Array, slope: Array) -> int:
+def cubic_weights(
+    level: float, step: float, grid: int, value: Array, slope: Array
+) -> int:
     """Lagrange's cubic through four grid points; the first point's index."""
     place = min(max(level / step, 1.0), grid - 2.001)
     first = int(place) - 1
@@ -84,12 +86,12 @@ def summarise(  # noqa: PLR0912, PLR0915 - one loop, kept flat for the compiler
         pull[:] = 0.0
         total_deviance = 0.0
         for k in range(bins):
-            first[k] = _weights(
+            first[k] = cubic_weights(
                 levels[k] + values[p, 1 + k], step, grid, value[k], slope[k]
             )
         for e in range(exposures):
             for k in range(bins):
-                c = r = v = d = cs = rs = vs = 0.0
+                c = r = v = d = cs = rs = vs = ds = 0.0
                 for q in range(4):
                     g = first[k] + q
                     w = value[k, q]
@@ -101,10 +103,13 @@ def summarise(  # noqa: PLR0912, PLR0915 - one loop, kept flat for the compiler
                     cs += s * curve[e, g]
                     rs += s * by_rate[e, g]
                     vs += s * by_variance[e, g]
+                    ds += s * by_dead[e, g]
                 scale = area * time[e]
                 above[k] = scale * (c + ln_area * r + variance * v + ln_dead * d)
                 change[k, 0] = above[k] + scale * r
-                change[k, 1] = scale * (cs + ln_area * rs + variance * vs)
+                change[k, 1] = scale * (
+                    cs + ln_area * rs + variance * vs + ln_dead * ds
+                )
                 change[k, 2] = scale * v
                 change[k, 3] = scale * d
             above[bins] = 0.0

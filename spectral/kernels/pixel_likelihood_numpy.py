@@ -14,6 +14,27 @@ if TYPE_CHECKING:
 LEAST = 1e-6
 
 
+def cubic_weights(
+    level: Array, step: float, grid: int
+) -> tuple[NDArray[np.int64], Array, Array]:
+    """First of four grid points, and their weights for value and slope, (4, ...)."""
+    place = np.clip(level / step, 1.0, grid - 2.001)
+    first = place.astype(np.int64) - 1
+    t = place - first - 1.0
+    corner = np.array([-1.0, 0.0, 1.0, 2.0])
+    value = np.ones((4, *t.shape))
+    slope = np.zeros((4, *t.shape))
+    for q in range(4):
+        others = [i for i in range(4) if i != q]
+        scale = np.prod([corner[q] - corner[i] for i in others])
+        parts = [t - corner[i] for i in others]
+        value[q] = parts[0] * parts[1] * parts[2] / scale
+        slope[q] = (parts[0] * parts[1] + parts[0] * parts[2] + parts[1] * parts[2]) / (
+            scale * step
+        )
+    return first, value, slope
+
+
 def summarise(
     counts: Array,
     curve: Array,
@@ -34,20 +55,7 @@ def summarise(
     """Fill the same arrays as the compiled function, for a few pixels at a time."""
     pixels, exposures, bins = counts.shape
     size = bins + 3
-    place = np.clip((levels + values[:, 1:-2]) / step, 1.0, curve.shape[1] - 2.001)
-    first = place.astype(np.int64) - 1
-    t = place - first - 1.0
-    corner = np.array([-1.0, 0.0, 1.0, 2.0])
-    value = np.ones((4, *t.shape))
-    slope = np.zeros((4, *t.shape))
-    for q in range(4):
-        others = [i for i in range(4) if i != q]
-        scale = np.prod([corner[q] - corner[i] for i in others])
-        parts = [t - corner[i] for i in others]
-        value[q] = parts[0] * parts[1] * parts[2] / scale
-        slope[q] = (parts[0] * parts[1] + parts[0] * parts[2] + parts[1] * parts[2]) / (
-            scale * step
-        )
+    first, value, slope = cubic_weights(levels + values[:, 1:-2], step, curve.shape[1])
 
     def read(of: Array, by: Array) -> Array:
         out = sum(of[:, first + q] * by[q] for q in range(4))
@@ -67,6 +75,7 @@ def summarise(
         read(curve, slope)
         + ln_area * read(by_rate, slope)
         + variance * read(by_variance, slope)
+        + ln_dead * read(by_dead, slope)
     )
     jacobian = np.zeros((pixels, exposures, bins + 1, size))
     jacobian[:, :, :-1, 0] = above + area * read(by_rate, value)

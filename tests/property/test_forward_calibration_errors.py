@@ -22,6 +22,7 @@ from spectral.decomposition.likelihood import (
     fisher_information,
 )
 from spectral.decomposition.responses import (
+    Responses,
     calibration_spread,
     lost_fraction,
     responses,
@@ -151,13 +152,17 @@ def bound(tables: NodeTables, dead: float) -> np.ndarray:
     return np.asarray(cramer_rao_bound(fisher_information(mean, slope, dead=dead)))
 
 
+def ready(tables: NodeTables, time: float) -> Responses:
+    return responses(MADE, tables, FLAT, count_time_s=time)
+
+
 def test_promised_error_is_the_scatter_of_wrong_calibrations(
     tables: NodeTables, shifts: np.ndarray
 ) -> None:
     covariance = bound(tables, lost_fraction(MADE.dead_time_ns, TIME_S))
     estimate = np.tile(TRUTH, (FLAT.size, 1))
     errors, extra = calibration_spread(
-        MADE, tables, FLAT, estimate, covariance, count_time_s=TIME_S
+        MADE, tables, ready(tables, TIME_S), estimate, covariance, count_time_s=TIME_S
     )
     pulls = shifts / errors
     # 1200 draws: width known to 2 %; the shift is taken to first order
@@ -172,7 +177,12 @@ def test_perfect_calibration_adds_nothing(tables: NodeTables) -> None:
     )
     estimate = np.tile(TRUTH, (FLAT.size, 1))
     errors, extra = calibration_spread(
-        perfect, tables, FLAT, estimate, bound(tables, 0.0), count_time_s=TIME_S
+        perfect,
+        tables,
+        ready(tables, TIME_S),
+        estimate,
+        bound(tables, 0.0),
+        count_time_s=TIME_S,
     )
     np.testing.assert_array_equal(errors, 0.0)
     np.testing.assert_array_equal(extra, 0.0)
@@ -186,10 +196,15 @@ def test_longer_exposures_do_not_lessen_the_calibrations_error(
     estimate = np.tile(TRUTH, (FLAT.size, 1))
     plain = bound(tables, 0.0)
     short, little = calibration_spread(
-        MADE, tables, FLAT, estimate, plain, count_time_s=TIME_S
+        MADE, tables, ready(tables, TIME_S), estimate, plain, count_time_s=TIME_S
     )
     long, much = calibration_spread(
-        MADE, tables, FLAT, estimate, plain / 100.0, count_time_s=100.0 * TIME_S
+        MADE,
+        tables,
+        ready(tables, 100.0 * TIME_S),
+        estimate,
+        plain / 100.0,
+        count_time_s=100.0 * TIME_S,
     )
     np.testing.assert_allclose(long, short, rtol=0.02)
     np.testing.assert_allclose(much / little, 100.0, rtol=0.02)
@@ -209,7 +224,7 @@ def test_misfit_grows_as_promised(tables: NodeTables) -> None:
     counts = rng.poisson(expected_counts(TRUTH, true.weight, true.attenuation))
     found = solve(counts.astype(float), known.weight, known.attenuation, start=TRUTH)
     _, extra = calibration_spread(
-        worse, tables, FLAT, np.tile(TRUTH, (FLAT.size, 1)),
+        worse, tables, known, np.tile(TRUTH, (FLAT.size, 1)),
         bound(tables, 0.0) * TIME_S / time, count_time_s=time,
     )  # fmt: skip
     # the mean of 1200 deviances with 2 degrees of freedom each is known to some 4 %
