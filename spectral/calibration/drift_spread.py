@@ -58,7 +58,7 @@ def drift_variance(
     information: NDArray[np.float64],
     pull: NDArray[np.float64],
     start: NDArray[np.float64],
-    own: NDArray[np.float64],
+    own: NDArray[np.floating],
     variance: NDArray[np.float64],
     largest: NDArray[np.float64],
 ) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
@@ -85,7 +85,7 @@ def drift_variance(
     the counts say nothing.
     """
     sample = slice(None, None, max(1, information.shape[0] // SAMPLE))
-    information, own = information[sample], own[sample]
+    information, own = information[sample], own[sample].astype(np.float64)
     size = start.shape[1]
     which = np.eye(len(CLASSES))[class_of(size)]
     inner = np.eye(size) + information @ own

@@ -25,8 +25,6 @@ if TYPE_CHECKING:
     from spectral.calibration.wedge_data import WedgeData
     from spectral.forward.pixel_response import CurveTables
 
-JITTER = 1e-5
-
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class PixelDrift:
@@ -36,7 +34,7 @@ class PixelDrift:
     ----------
     values : array, shape (pixel, parameter)
         Posterior means; their mean over the pixels is that of the calibration.
-    covariance : array, shape (pixel, parameter, parameter)
+    covariance : array of float32, shape (pixel, parameter, parameter)
     spread, spread_error : arrays, shape (4,)
         Standard deviation of the drift between pixels for each of
         `drift_spread.CLASSES`, and its standard error; an upper bound where the spread
@@ -46,7 +44,7 @@ class PixelDrift:
     """
 
     values: NDArray[np.float64]
-    covariance: NDArray[np.float64]
+    covariance: NDArray[np.float32]
     spread: NDArray[np.float64]
     spread_error: NDArray[np.float64]
     deviance: NDArray[np.float64]
@@ -77,26 +75,33 @@ def pixel_drift(
     -----
     The prior of a pixel is normal about its calibrated departures, with their posterior
     covariance plus the drift's variance, one number for each of
-    `drift_spread.CLASSES`, which maximises the marginal likelihood of all pixels. A factor for each exposure and bin
-    keeps what all pixels share out of them. Source: empirical Bayes, H. Robbins
-    (1956); variance components by scoring, H. D. Patterson, R. Thompson, Biometrika
-    58 (1971) 545.
+    `drift_spread.CLASSES`, which maximises the marginal likelihood of all pixels. A
+    factor for each exposure and bin keeps what all pixels share out of them. Source:
+    empirical Bayes, H. Robbins (1956); variance components by scoring, H. D.
+    Patterson, R. Thompson, Biometrika 58 (1971) 545.
     """
     size = len(calibration.parameter_names)
     start = calibration.departures.reshape(-1, size)[data.pixel]
-    own = _stored_covariance(calibration, data.pixel)
+    own = calibration.departure_covariance.reshape(-1, size, size)[data.pixel]
     largest = _by_class(np.diag(calibration.spread))
     likelihood = _Likelihood.build(calibration, data, output, threads=threads)
-    values, covariance = start, own
+    values, covariance = start.copy(), own.copy()
     variance, error = 1e-4 * largest, np.zeros(len(CLASSES))
-    ratio = likelihood.ratio(likelihood.at(values, np.ones(data.bins.shape[1:])))
+    ratio = likelihood.ratio(
+        likelihood.at(values, np.ones(likelihood.counts.shape[1:]))
+    )
     for _ in range(rounds):
         seen = likelihood.at(values, ratio)
         variance, error = drift_variance(
             seen.information, seen.pull, start, own, variance, largest
         )
-        values, covariance = updated(seen.information, seen.pull, start, own, variance)
-        values = values + (start - values).mean(axis=0)
+        for first in range(0, start.shape[0], CHUNK):
+            part = slice(first, first + CHUNK)
+            values[part], covariance[part] = updated(
+                seen.information[part], seen.pull[part], start[part],
+                own[part].astype(np.float64), variance,
+            )  # fmt: skip
+        values += (start - values).mean(axis=0)
         ratio = likelihood.ratio(likelihood.at(values, ratio))
     spread = np.sqrt(variance)
     by_first_order = error / np.maximum(2.0 * spread, 1e-12)
@@ -180,19 +185,6 @@ class _Likelihood:
         return _Seen(
             information=information, pull=pull, deviance=deviance, expected=expected
         )
-
-
-def _stored_covariance(
-    calibration: Calibration, pixel: NDArray[np.int64]
-) -> NDArray[np.float64]:
-    """Posterior covariance of pixels, made safe to invert after single precision."""
-    stored = calibration.departure_covariance
-    own = stored.reshape(-1, *stored.shape[2:])[pixel].astype(np.float64)
-    own = 0.5 * (own + own.transpose(0, 2, 1))
-    diagonal = np.diagonal(own, axis1=1, axis2=2)
-    size = np.arange(own.shape[1])
-    own[:, size, size] += JITTER * diagonal
-    return own
 
 
 def _by_class(values: NDArray[np.float64]) -> NDArray[np.float64]:
