@@ -17,6 +17,7 @@ from spectral.calibration.calibration_file import read_calibration, write_calibr
 from spectral.calibration.common_drift import chance_of_shift, common_drift
 from spectral.calibration.drift_spread import USUAL_SHARE, drift_variance, updated
 from spectral.calibration.pooled_counts import pooled
+from spectral.calibration.promise import with_promise
 from spectral.calibration.refresh import refresh, updated_by_opens
 from spectral.calibration.refresh_summary import refresh_summary, refresh_text
 from spectral.calibration.residual import ResidualCorrection
@@ -341,6 +342,16 @@ def test_refreshed_calibration_says_where_it_came_from(tmp_path: Path) -> None:
     assert again.unknown_errors["shift_1_kev"] > 0.1
     assert again.unknowns["trapping"] == 0.01
     assert again.photons_per_mas == pytest.approx(1.02e5, rel=5e-3)
+
+
+def test_promise_follows_the_pixels() -> None:
+    before = with_promise(OLD)
+    done = refresh(before, short_scan(truth(), time_s=2.0))
+    assert before.promise is not None
+    assert done.calibration.promise is not None
+    # pixels are better known than before: the fixed pattern shrinks
+    after = done.calibration.promise.fixed_pattern
+    assert np.all(after < 0.8 * before.promise.fixed_pattern)
 
 
 def test_summary_and_text() -> None:
