@@ -182,6 +182,10 @@ class Calibration:
             values=self.departures.reshape(-1, self.departures.shape[-1])[flat]
         )
 
+    def average_pixel(self) -> PixelDepartures:
+        """Departures of the average pixel: none."""
+        return PixelDepartures(values=np.zeros((1, self.departures.shape[-1])))
+
     def expected_bins(
         self,
         areal_density: NDArray[np.float64],
