@@ -79,7 +79,7 @@ def solve(
     bias_correction: bool = True,
     nonnegative: bool = False,
     max_steps: int = 50,
-    tolerance: float = 1e-5,
+    tolerance: float = 3e-5,
     threads: int = 1,
 ) -> Solution:
     """Areal densities that make the counts of each pixel most likely.
@@ -103,8 +103,8 @@ def solve(
         0, and `covariance` stays that of the free estimate.
     max_steps : int
     tolerance : float
-        Stop when the squared distance still to go, in standard errors and as
-        foreseen from the last two steps, falls to this.
+        Stop when the squared distance that the last step will leave, in standard
+        errors and as foreseen, falls to this.
     threads : int
         The result does not depend on it.
 
@@ -122,9 +122,9 @@ def solve(
     Poisson likelihood of independent bins, E. Roessl & R. Proksa 2007, Phys. Med.
     Biol. 52:4679 (from memory); Fisher scoring, C. R. Rao 1948, Proc. Camb. Phil. Soc.
     44:50 (from memory), turning to Newton's step close to the root. With a dead
-    fraction it is the quasi-likelihood of the same mean and covariance. Covariance and
-    deviance are those at the last point evaluated, one last small step before the
-    estimate.
+    fraction it is the quasi-likelihood of the same mean and covariance.
+    Near the root a step is two: Newton's, and one from the Taylor series of the
+    expectation at its end.
 
     Examples
     --------

@@ -26,15 +26,18 @@ from spectral.kernels.pixel_lanes import (
     LARGEST_INFLATION,
     ROW,
     bend,
+    compare,
     expect,
     inflate,
     inform,
     invert,
+    look_ahead,
     misfit,
     observe,
     project,
     regress,
     score,
+    settle,
     step,
     transmit,
 )
@@ -205,6 +208,7 @@ def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
     t = np.empty((nodes, ROW))
     moment = np.empty((bins + 1, factor.shape[0], ROW))
     scale, residual = np.empty((bins + 1, ROW)), np.empty((bins + 1, ROW))
+    pseudo = np.empty((bins + 1, ROW))
     f, v = (
         np.empty((materials, materials, ROW)),
         np.empty((materials, materials, ROW)),
@@ -213,6 +217,11 @@ def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
     scored, newton = np.empty((materials, ROW)), np.empty((materials, ROW))
     along, decrement, straight = np.empty(ROW), np.empty(ROW), np.empty(ROW)
     u, sound, regular = np.empty((materials, ROW)), np.empty(ROW), np.empty(ROW)
+    ahead = np.empty((bins + 1, 1 + materials, ROW))
+    ahead_scale, ahead_residual = np.empty_like(scale), np.empty_like(scale)
+    u_ahead, shift = np.empty((materials, ROW)), np.empty((materials, ROW))
+    second, second_straight = np.empty((materials, ROW)), np.empty(ROW)
+    bias, looked = np.empty(ROW), np.zeros(ROW)
     walk = np.empty((3 * materials + 4, ROW))
     a, base = walk[:materials], walk[materials : 2 * materials]
     move, slope = walk[2 * materials : 3 * materials], walk[3 * materials]
@@ -235,19 +244,28 @@ def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
                 for lane in range(LANES):
                     walk[:, lane] = state[min(first + lane, todo - 1)]
             few = order.shape[0] // CROWDED if todo > LANES else 0
+            looked[:] = 0.0
             moved = LANES
             while moved > few:
                 transmit(minus_attenuation, a, t)
                 expect(factor, w, t, moment)
                 inform(moment, c, scale, sound, f)
                 invert(f, v, sound)
-                score(corrected, n, moment, scale, v, residual, u)
+                compare(corrected, n, moment, scale, v, pseudo, residual)
+                score(moment, scale, residual, u)
                 project(u, move, along)
                 step(v, u, scored, decrement)
                 observe(moment, scale, residual, observed)
                 regular[:] = 1.0
                 invert(observed, observed_inverse, regular)
                 step(observed_inverse, u, newton, straight)
+                look_ahead(
+                    moment, c, residual, newton, ahead, ahead_scale, ahead_residual
+                )
+                score(ahead, ahead_scale, ahead_residual, u_ahead)
+                step(observed_inverse, u_ahead, second, second_straight)
+                score(moment, scale, pseudo, u_ahead)
+                step(v, u_ahead, shift, bias)
                 moved = advance(
                     tolerance,
                     max_steps,
@@ -261,6 +279,10 @@ def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
                     decrement,
                     newton,
                     straight,
+                    second,
+                    second_straight,
+                    bias,
+                    looked,
                     a,
                     base,
                     move,
@@ -272,6 +294,9 @@ def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
                 )
             if moved > 0:
                 waiting = _set_aside(order, outcome, walk, waiting, queue, state)
+            settle(looked, ahead, moment)
+            inform(moment, c, scale, sound, f)
+            invert(f, v, sound)
             if corrected:
                 bend(moment, scale, v, g, y)
                 inflate(f, v, y, extra, share)

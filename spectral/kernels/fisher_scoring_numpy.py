@@ -6,7 +6,7 @@ last one holds the sum over the bins, weighted by the dead time's share of C^-1)
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -14,12 +14,12 @@ import numpy as np
 from spectral.kernels.pixel_lanes import LARGEST_INFLATION, SMALLEST_PIVOT
 from spectral.kernels.step_control import (
     CONVERGED,
+    FADING,
     FEW_COUNTS,
     HALVINGS,
     NEAR,
     RUNNING,
     SINGULAR,
-    SLOWEST_NEWTON,
     STEPS_SPENT,
     UNUSABLE,
 )
@@ -43,8 +43,13 @@ class _Point:
     information: Array
     inverse: Array
     score: Array
-    newton: Array
+    move: Array
+    straight: Array
     regular: Mask
+    ahead: Array
+    further: Array
+    further_straight: Array
+    bias: Array
 
 
 def _full(triangle: Array, materials: int) -> Array:
@@ -92,36 +97,95 @@ class _Problem:
         moment = (self.weight[which] * transmission[:, None, :]) @ self.factor.T
         moment = np.concatenate((moment, moment.sum(axis=1, keepdims=True)), axis=1)
         expected = moment[:, :, 0]
-        live = 1.0 - dead * expected[:, -1]
-        scale = 1.0 / expected
-        scale[:, -1] = dead / live
-        sound = (expected[:, :-1] > _TINY).all(axis=1) & (live > 0.0)
+        scale = _scales(expected, dead)
+        sound = (expected[:, :-1] > _TINY).all(axis=1)
+        sound &= dead * expected[:, -1] < 1.0
         sound &= expected[:, -1] < _HUGE
         first = moment[:, :, 1 : 1 + m]
         information = np.einsum("pbj,pbi,pb->pji", first, first, scale)
         inverse, good = _invert(information)
         second = _full(moment[:, :, 1 + m :], m)
-        residual = np.zeros_like(scale)
-        residual[:, :-1] = self.counts[which] - expected[:, :-1]
+        pseudo, residual = np.zeros_like(scale), np.zeros_like(scale)
         if self.corrected:
-            residual += 0.5 * np.einsum("pji,pbji->pb", inverse, second)
+            pseudo[:, :-1] = 0.5 * np.einsum("pji,pbji->pb", inverse, second[:, :-1])
+        residual[:, :-1] = self.counts[which] - expected[:, :-1] + pseudo[:, :-1]
         residual[:, -1] = residual[:, :-1].sum(axis=1)
+        pseudo[:, -1] = pseudo[:, :-1].sum(axis=1)
         pull = residual * scale
         pulled = pull * scale
         pulled[:, -1] *= -1.0
         observed = np.einsum("pbj,pbi,pb->pji", first, first, scale + pulled)
         observed -= np.einsum("pbji,pb->pji", second, pull)
         newton, regular = _invert(observed)
+        score = np.einsum("pbj,pb->pj", first, pull)
+        turn = np.einsum("pbj,pb->pj", first, pseudo * scale)
+        move = np.einsum("pji,pi->pj", newton, score)
+        ahead, further = _look_ahead(
+            expected, first, second, dead, residual, move, newton
+        )
         return _Point(
             sound=sound & good,
             moment=moment,
             scale=scale,
             information=information,
             inverse=inverse,
-            score=np.einsum("pbj,pb->pj", first, pull),
-            newton=newton,
+            score=score,
+            move=move,
+            straight=np.einsum("pj,pj->p", move, score),
             regular=regular,
+            ahead=ahead,
+            further=further[0],
+            further_straight=further[1],
+            bias=np.einsum("pj,pji,pi->p", turn, inverse, turn),
         )
+
+    def settled(self, a: Array, which: NDArray[np.intp], looked: Mask) -> _Point:
+        """What is known at a, with the moments ahead where the last step used them."""
+        at = self.at(a, which)
+        m = self.minus.shape[1]
+        moment = at.moment.copy()
+        moment[looked, :, : 1 + m] = at.ahead[looked]
+        scale = _scales(moment[:, :, 0], self.dead[which])
+        first = moment[:, :, 1 : 1 + m]
+        information = np.einsum("pbj,pbi,pb->pji", first, first, scale)
+        return replace(
+            at,
+            moment=moment,
+            scale=scale,
+            information=information,
+            inverse=_invert(information)[0],
+        )
+
+
+def _scales(expected: Array, dead: Array) -> Array:
+    """Weights of the rows in products with C^-1."""
+    scale = 1.0 / expected
+    scale[:, -1] = dead / (1.0 - dead * expected[:, -1])
+    return scale
+
+
+def _look_ahead(
+    expected: Array,
+    first: Array,
+    second: Array,
+    dead: Array,
+    residual: Array,
+    move: Array,
+    newton: Array,
+) -> tuple[Array, tuple[Array, Array]]:
+    """Moments after a move by the Taylor series; the step from there, its length."""
+    turn = np.einsum("pbji,pi->pbj", second, move)
+    there = expected + np.einsum("pbj,pj->pb", first + 0.5 * turn, move)
+    slope = first + turn
+    scale = _scales(there, dead)
+    cannot = there <= 0.0
+    cannot[:, -1] = dead * there[:, -1] >= 1.0
+    scale[cannot] = np.nan
+    left = (residual - there + expected) * scale
+    score = np.einsum("pbj,pb->pj", slope, left)
+    further = np.einsum("pji,pi->pj", newton, score)
+    ahead = np.concatenate((there[:, :, None], slope), axis=2)
+    return ahead, (further, np.einsum("pj,pj->p", further, score))
 
 
 def _start(
@@ -161,23 +225,23 @@ def _hold_back(a: Array, u: Array, v: Array) -> tuple[Array, float]:
 
 def _next_step(
     a: Array, at: _Point, last: Array, nonnegative: bool
-) -> tuple[Array, Array, Array]:
-    """Step, decrement and the share of it that will outlast the step."""
+) -> tuple[Array, Array, Array, Mask]:
+    """Step, decrement, what will be left of it, and whether it was looked ahead."""
     move = np.einsum("pji,pi->pj", at.inverse, at.score)
     decrement = np.einsum("pj,pj->p", move, at.score)
     if nonnegative:
         for p in range(len(a)):
             move[p], decrement[p] = _hold_back(a[p], at.score[p], at.inverse[p])
-    shrink = np.where(last > 0.0, np.minimum(1.0, decrement / last), 1.0)
-    if not nonnegative:
-        straight = np.einsum("pj,pji,pi->p", at.score, at.newton, at.score)
-        near = (decrement < NEAR) & at.regular
-        near &= (straight > 0.0) & (straight < 4.0 * decrement)
-        newton = np.einsum("pji,pi->pj", at.newton, at.score)
-        move[near] = newton[near]
-        quick = np.minimum(shrink, np.maximum(decrement, SLOWEST_NEWTON))
-        shrink[near] = quick[near]
-    return move, decrement, shrink
+    left = decrement * np.where(last > 0.0, np.minimum(1.0, decrement / last), 1.0)
+    near = (decrement < NEAR) & at.regular & (not nonnegative)
+    near &= (at.straight > 0.0) & (at.straight < 4.0 * decrement)
+    move[near] = at.move[near]
+    looked = near & (at.further_straight >= 0.0)
+    looked &= at.further_straight < 0.25 * at.straight
+    move[looked] += at.further[looked]
+    after = at.further_straight**2 / at.straight + FADING * at.bias**2 * at.straight
+    left[looked] = after[looked]
+    return move, decrement, left, looked
 
 
 def _curved_covariance(at: _Point, m: int) -> tuple[Array, Array]:
@@ -237,11 +301,11 @@ def _walk(
     tolerance: float,
     steps: NDArray[np.int64],
     outcome: NDArray[np.int64],
-) -> tuple[Array, Array]:
-    """Last accepted points and the steps that remain to be added to them."""
+) -> tuple[Array, Array, Mask]:
+    """Last good points, the steps to be added to them, and which looked ahead."""
     base, move = np.zeros_like(a), a.copy()
     slope, last = np.full(len(a), np.inf), np.zeros(len(a))
-    halved = np.zeros(len(a), np.int64)
+    halved, looked = np.zeros(len(a), np.int64), np.zeros(len(a), np.bool_)
     todo = np.flatnonzero(outcome == RUNNING)
     while len(todo):
         outcome[todo[steps[todo] >= max_steps]] = STEPS_SPENT
@@ -253,8 +317,9 @@ def _walk(
         good = at.sound & (along >= -slope[todo])
         back = ~good & (halved[todo] < HALVINGS)
         kept = ~back & at.sound
-        step, decrement, shrink = _next_step(a[todo], at, last[todo], nonnegative)
-        done = kept & (decrement * shrink <= tolerance)
+        step, decrement, left, ahead = _next_step(a[todo], at, last[todo], nonnegative)
+        done = kept & (left <= tolerance)
+        looked[todo] = done & ahead
         stop = kept & ~done & spent
         outcome[todo[stop]] = STEPS_SPENT
         outcome[todo[~back & ~at.sound]] = SINGULAR
@@ -269,7 +334,7 @@ def _walk(
         move[todo[stop]] = 0.0
         todo = todo[outcome[todo] == RUNNING]
         a[todo] = base[todo] + move[todo]
-    return base, move
+    return base, move, looked
 
 
 def fit_pixels(
@@ -307,13 +372,13 @@ def fit_pixels(
             coefficients,
             np.stack((lowest, highest)),
         )
-        base, move = _walk(
+        base, move, looked = _walk(
             problem, a, nonnegative, max_steps, tolerance, steps_out, outcome_out
         )
         found = np.flatnonzero(
             (outcome_out == CONVERGED) | (outcome_out == STEPS_SPENT)
         )
-        at = problem.at(base, found)
+        at = problem.settled(base, found, looked[found])
         m = base.shape[1]
         matrix, share = at.inverse, np.zeros(len(found))
         if corrected:

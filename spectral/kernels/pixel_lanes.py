@@ -15,12 +15,12 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+import numpy as np
 from numba import njit
 
-from spectral.kernels.elementary import exponential, logarithm
+from spectral.kernels.elementary import exponential, logarithm, multiply_add
 
 if TYPE_CHECKING:
-    import numpy as np
     from numpy.typing import NDArray
 
     Array = NDArray[np.float64]
@@ -34,10 +34,9 @@ SMALLEST_PIVOT = 1e-13  # of the diagonal: a share of information not to be told
 LARGEST_INFLATION = 0.5  # of the variance, by curvature
 _TINY = 1e-290
 _HUGE = 1e290
-_LOOSE = {"contract"}  # fused multiply-add; no reordering, so the same everywhere
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
 def regress(n: Array, opened: Array, x: Array, coefficients: Array, a: Array) -> None:
     """Start values: quadratic polynomial in ln((N + 1/2) / open counts)."""
     bins = n.shape[0]
@@ -60,7 +59,7 @@ def regress(n: Array, opened: Array, x: Array, coefficients: Array, a: Array) ->
                     a[j, lane] += square * x[b, lane] * x[other, lane]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE, inline="always")
+@njit(nogil=True, cache=True, error_model="numpy", inline="always")
 def transmit(minus: Array, a: Array, t: Array) -> None:
     """Transmission of each node, exp(minus a) with minus = -M."""
     nodes, materials = minus.shape
@@ -80,7 +79,7 @@ def _four(factor: Array, q: int, k: int) -> tuple[float, float, float, float]:
     return factor[q, k], factor[q, k + 1], factor[q, k + 2], factor[q, k + 3]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE, inline="always")
+@njit(nogil=True, cache=True, error_model="numpy", inline="always")
 def expect(factor: Array, w: Array, t: Array, moment: Array) -> None:
     """Moments of w t: `MOMENTS` factors by 4 nodes at a time, held in registers."""
     bins, nodes = w.shape[0], w.shape[1]
@@ -108,18 +107,48 @@ def expect(factor: Array, w: Array, t: Array, moment: Array) -> None:
                         w[b, k + 2, lane] * t[k + 2, lane],
                         w[b, k + 3, lane] * t[k + 3, lane],
                     )
-                    moment[b, q, lane] += a0 * p0 + a1 * p1 + a2 * p2 + a3 * p3
-                    moment[b, q + 1, lane] += b0 * p0 + b1 * p1 + b2 * p2 + b3 * p3
-                    moment[b, q + 2, lane] += c0 * p0 + c1 * p1 + c2 * p2 + c3 * p3
-                    moment[b, q + 3, lane] += d0 * p0 + d1 * p1 + d2 * p2 + d3 * p3
-                    moment[b, q + 4, lane] += e0 * p0 + e1 * p1 + e2 * p2 + e3 * p3
-                    moment[b, q + 5, lane] += f0 * p0 + f1 * p1 + f2 * p2 + f3 * p3
+                    total = multiply_add(
+                        a1, p1, multiply_add(a0, p0, moment[b, q, lane])
+                    )
+                    moment[b, q, lane] = multiply_add(
+                        a3, p3, multiply_add(a2, p2, total)
+                    )
+                    total = multiply_add(
+                        b1, p1, multiply_add(b0, p0, moment[b, q + 1, lane])
+                    )
+                    moment[b, q + 1, lane] = multiply_add(
+                        b3, p3, multiply_add(b2, p2, total)
+                    )
+                    total = multiply_add(
+                        c1, p1, multiply_add(c0, p0, moment[b, q + 2, lane])
+                    )
+                    moment[b, q + 2, lane] = multiply_add(
+                        c3, p3, multiply_add(c2, p2, total)
+                    )
+                    total = multiply_add(
+                        d1, p1, multiply_add(d0, p0, moment[b, q + 3, lane])
+                    )
+                    moment[b, q + 3, lane] = multiply_add(
+                        d3, p3, multiply_add(d2, p2, total)
+                    )
+                    total = multiply_add(
+                        e1, p1, multiply_add(e0, p0, moment[b, q + 4, lane])
+                    )
+                    moment[b, q + 4, lane] = multiply_add(
+                        e3, p3, multiply_add(e2, p2, total)
+                    )
+                    total = multiply_add(
+                        f1, p1, multiply_add(f0, p0, moment[b, q + 5, lane])
+                    )
+                    moment[b, q + 5, lane] = multiply_add(
+                        f3, p3, multiply_add(f2, p2, total)
+                    )
             for i in range(MOMENTS):
                 for lane in range(LANES):
                     moment[bins, q + i, lane] += moment[b, q + i, lane]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
 def inform(moment: Array, c: Array, scale: Array, sound: Array, f: Array) -> None:
     """Fisher information f[j, i]; sound[l] is 0 where lambda or C cannot be."""
     rows, materials = scale.shape[0], f.shape[0]
@@ -144,7 +173,7 @@ def inform(moment: Array, c: Array, scale: Array, sound: Array, f: Array) -> Non
                 f[i, j, lane] = f[j, i, lane]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
 def invert(  # noqa: PLR0912 (loops, not decisions)
     f: Array, v: Array, sound: Array
 ) -> None:
@@ -174,43 +203,90 @@ def invert(  # noqa: PLR0912 (loops, not decisions)
                     v[k, i, lane] *= -v[k, k, lane]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
-def score(
+@njit(nogil=True, cache=True, error_model="numpy")
+def compare(
     corrected: bool,
     n: Array,
     moment: Array,
     scale: Array,
     v: Array,
+    pseudo: Array,
     residual: Array,
-    u: Array,
 ) -> None:
-    """Quasi-score u[j] and residuals, with the pseudo-counts q / 2 if corrected."""
-    rows, materials = scale.shape[0], u.shape[0]
+    """Residuals with the pseudo-counts q / 2, which are 0 if not corrected."""
+    rows, materials = scale.shape[0], v.shape[0]
     for lane in range(LANES):
-        residual[rows - 1, lane] = 0.0
+        residual[rows - 1, lane] = pseudo[rows - 1, lane] = 0.0
     for b in range(rows - 1):
         for lane in range(LANES):
-            residual[b, lane] = n[b, lane] - moment[b, 0, lane]
+            pseudo[b, lane] = 0.0
         if corrected:
             q = 1 + materials
             for j in range(materials):
                 for i in range(j, materials):
                     share = 0.5 if i == j else 1.0
                     for lane in range(LANES):
-                        residual[b, lane] += share * v[j, i, lane] * moment[b, q, lane]
+                        pseudo[b, lane] += share * v[j, i, lane] * moment[b, q, lane]
                     q += 1
         for lane in range(LANES):
+            residual[b, lane] = n[b, lane] - moment[b, 0, lane] + pseudo[b, lane]
             residual[rows - 1, lane] += residual[b, lane]
-    for j in range(materials):
+            pseudo[rows - 1, lane] += pseudo[b, lane]
+
+
+@njit(nogil=True, cache=True, error_model="numpy")
+def score(moment: Array, scale: Array, residual: Array, u: Array) -> None:
+    """Quasi-score u = D' C^-1 residual."""
+    for j in range(u.shape[0]):
         for lane in range(LANES):
             u[j, lane] = 0.0
-        for b in range(rows):
+        for b in range(scale.shape[0]):
             for lane in range(LANES):
                 product = moment[b, 1 + j, lane] * residual[b, lane]
                 u[j, lane] += product * scale[b, lane]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
+def look_ahead(
+    moment: Array,
+    c: Array,
+    residual: Array,
+    move: Array,
+    ahead: Array,
+    ahead_scale: Array,
+    ahead_residual: Array,
+) -> None:
+    """Moments, scales and residuals after a move, from the Taylor series here."""
+    rows, materials = ahead_scale.shape[0], move.shape[0]
+    for b in range(rows):
+        for lane in range(LANES):
+            ahead[b, 0, lane] = moment[b, 0, lane]
+        q = 1 + materials
+        for j in range(materials):
+            for lane in range(LANES):
+                ahead[b, 1 + j, lane] = moment[b, 1 + j, lane]
+                ahead[b, 0, lane] += moment[b, 1 + j, lane] * move[j, lane]
+        for j in range(materials):
+            for i in range(j, materials):
+                share = 0.5 if i == j else 1.0
+                for lane in range(LANES):
+                    turn = moment[b, q, lane] * move[i, lane]
+                    ahead[b, 1 + j, lane] += turn
+                    ahead[b, 0, lane] += share * turn * move[j, lane]
+                if i > j:
+                    for lane in range(LANES):
+                        ahead[b, 1 + i, lane] += moment[b, q, lane] * move[j, lane]
+                q += 1
+        for lane in range(LANES):
+            expected = ahead[b, 0, lane]
+            ahead_residual[b, lane] = residual[b, lane] - expected + moment[b, 0, lane]
+            live = 1.0 - c[lane] * expected
+            last = c[lane] / live if live > 0.0 else np.nan
+            first = 1.0 / expected if expected > 0.0 else np.nan
+            ahead_scale[b, lane] = last if b == rows - 1 else first
+
+
+@njit(nogil=True, cache=True, error_model="numpy")
 def observe(moment: Array, scale: Array, residual: Array, observed: Array) -> None:
     """Observed information: minus the slope of the score, q held."""
     rows, materials = scale.shape[0], observed.shape[0]
@@ -231,7 +307,7 @@ def observe(moment: Array, scale: Array, residual: Array, observed: Array) -> No
             q += 1
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
 def project(u: Array, move: Array, along: Array) -> None:
     """Slope of the likelihood along a move."""
     for lane in range(LANES):
@@ -241,7 +317,7 @@ def project(u: Array, move: Array, along: Array) -> None:
             along[lane] += u[j, lane] * move[j, lane]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
 def step(v: Array, u: Array, move: Array, decrement: Array) -> None:
     """Step v u and the squared length u' v u of it, in standard errors."""
     materials = u.shape[0]
@@ -254,7 +330,17 @@ def step(v: Array, u: Array, move: Array, decrement: Array) -> None:
     project(u, move, decrement)
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
+def settle(looked: Array, ahead: Array, moment: Array) -> None:
+    """Take the moments ahead where the last step went by them."""
+    for b in range(ahead.shape[0]):
+        for q in range(ahead.shape[1]):
+            for lane in range(LANES):
+                here = moment[b, q, lane]
+                moment[b, q, lane] = ahead[b, q, lane] if looked[lane] > 0.0 else here
+
+
+@njit(nogil=True, cache=True, error_model="numpy")
 def bend(  # noqa: PLR0912 (loops, not decisions)
     moment: Array, scale: Array, v: Array, g: Array, y: Array
 ) -> None:
@@ -292,7 +378,7 @@ def bend(  # noqa: PLR0912 (loops, not decisions)
     y[:] = g
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
 def inflate(f: Array, v: Array, y: Array, extra: Array, share: Array) -> None:
     """Add to v what the curvature of the expectation adds to the variance.
 
@@ -322,7 +408,7 @@ def inflate(f: Array, v: Array, y: Array, extra: Array, share: Array) -> None:
                 v[j, i, lane] += cut * extra[j, i, lane]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=_LOOSE)
+@njit(nogil=True, cache=True, error_model="numpy")
 def misfit(n: Array, moment: Array, scale: Array, dof: float, chi: Array) -> None:
     """Deviance per degree of freedom, with the dead time's share of C^-1."""
     rows = scale.shape[0]

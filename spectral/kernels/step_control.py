@@ -18,8 +18,8 @@ if TYPE_CHECKING:
 CONVERGED, STEPS_SPENT, FEW_COUNTS, SINGULAR, UNUSABLE = range(5)
 RUNNING = -1
 HALVINGS = 30
-NEAR = 1.0  # standard errors squared, within which Newton's step is tried
-SLOWEST_NEWTON = 1e-3  # of the squared error may outlast a Newton step (q was held)
+NEAR = 25.0  # standard errors squared, within which Newton's step is tried
+FADING = 4.0  # times the squared bias squared: what a step leaves because q was held
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
@@ -73,6 +73,10 @@ def advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
     decrement: Array,
     newton: Array,
     straight: Array,
+    second: Array,
+    second_straight: Array,
+    bias: Array,
+    looked: Array,
     a: Array,
     base: Array,
     move: Array,
@@ -93,7 +97,7 @@ def advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
         if outcome[lane] != RUNNING:
             continue
         if steps[lane] >= max_steps:  # back at the last point that was good
-            outcome[lane] = STEPS_SPENT
+            outcome[lane], looked[lane] = STEPS_SPENT, 0.0
             continue
         steps[lane] += 1
         good = sound[lane] > 0.0
@@ -117,16 +121,23 @@ def advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
         if nonnegative:
             distance = _hold_back(lane, a, u, v, move)
         shrink = min(1.0, distance / last[lane]) if last[lane] > 0.0 else 1.0
+        left = distance * shrink
+        looked[lane] = 0.0
         if near and distance < NEAR and 0.0 < straight[lane] < 4.0 * distance:
-            shrink = min(shrink, max(distance, SLOWEST_NEWTON))
             for j in range(materials):
                 move[j, lane] = newton[j, lane]
+            if 0.0 <= second_straight[lane] < 0.25 * straight[lane]:
+                looked[lane] = 1.0
+                held = FADING * bias[lane] ** 2 * straight[lane]
+                left = second_straight[lane] ** 2 / straight[lane] + held
+                for j in range(materials):
+                    move[j, lane] += second[j, lane]
         last[lane] = slope[lane] = distance
         halved[lane] = 0
-        if distance * shrink <= tolerance:
+        if left <= tolerance:
             outcome[lane] = CONVERGED
         elif steps[lane] >= max_steps:
-            outcome[lane] = STEPS_SPENT
+            outcome[lane], looked[lane] = STEPS_SPENT, 0.0
             for j in range(materials):
                 move[j, lane] = 0.0
         else:

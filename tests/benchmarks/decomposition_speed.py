@@ -133,6 +133,9 @@ def pixel_by_pixel(scene: Scene, method: str) -> Method:
         value = float((expected - n * np.log(expected)).sum())
         return value, np.asarray(slope.T @ (1.0 - n / expected))
 
+    def value(a: Array, n: Array, weight: Array) -> float:
+        return loss(a, n, weight)[0]
+
     def run(pixels: int) -> Array:
         found = np.empty((pixels, len(middle)))
         for p in range(pixels):
@@ -140,8 +143,13 @@ def pixel_by_pixel(scene: Scene, method: str) -> Method:
             if method == "least_squares":
                 found[p] = optimize.least_squares(pearson, middle, args=given).x
             else:
+                slopes = method == "L-BFGS-B"
                 found[p] = optimize.minimize(
-                    loss, middle, args=given, jac=True, method=method
+                    loss if slopes else value,
+                    middle,
+                    args=given,
+                    jac=slopes,
+                    method="L-BFGS-B",
                 ).x
         return found
 
@@ -244,6 +252,7 @@ def methods(scene: Scene, pixels: int) -> list[tuple[str, Method, int, bool]]:
         ("cubic polynomial, sklearn", learned(scene, "cubic"), pixels, False),
         ("perceptron 32+32, sklearn", learned(scene, "perceptron"), pixels, False),
         ("SciPy L-BFGS-B per pixel", pixel_by_pixel(scene, "L-BFGS-B"), few, False),
+        ("  slopes by differences", pixel_by_pixel(scene, "differences"), few, False),
         ("SciPy least_squares", pixel_by_pixel(scene, "least_squares"), few, False),
     ]
 

@@ -166,9 +166,20 @@ def test_nonnegative_holds_a_material_at_zero_where_free_fit_is_negative() -> No
     expected = (WEIGHT[0] * np.exp(-ATTENUATION @ np.array([1.0, -0.05]))).sum(axis=1)
     free = solve(expected[None], WEIGHT, ATTENUATION, bias_correction=False)
     held = solve(
-        expected[None], WEIGHT, ATTENUATION, bias_correction=False, nonnegative=True
+        expected[None],
+        WEIGHT,
+        ATTENUATION,
+        bias_correction=False,
+        nonnegative=True,
+        tolerance=1e-14,
     )
-    one = solve(expected[None], WEIGHT, ATTENUATION[:, :1], bias_correction=False)
+    one = solve(
+        expected[None],
+        WEIGHT,
+        ATTENUATION[:, :1],
+        bias_correction=False,
+        tolerance=1e-14,
+    )
     assert free.areal_density[0, 1] < 0.0
     assert held.areal_density[0, 1] == 0.0
     # With the second material at 0, the first is the one-material fit.
