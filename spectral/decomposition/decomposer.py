@@ -7,6 +7,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.calibration.matching import scan_differs
+from spectral.calibration.refresh import updated_by_opens
 from spectral.decomposition.block_maps import BlockMaps, joined, unpacked
 from spectral.decomposition.conditions import Conditions, ConditionsStore
 from spectral.decomposition.flags import PixelFlag
@@ -51,6 +53,8 @@ class MaterialDecomposer:
         Take off the first-order bias of maximum likelihood.
     nonnegative : bool
         Keep areal densities at or above 0; averages of such maps are biased.
+    follow_pixels : bool
+        Let the scan's own open exposures sharpen each pixel's departures.
     threads : int
         Threads of the solver.
 
@@ -73,9 +77,12 @@ class MaterialDecomposer:
         *,
         bias_correction: bool = True,
         nonnegative: bool = False,
+        follow_pixels: bool = True,
         threads: int = 2,
     ) -> None:
         self.calibration = calibration
+        self.follow_pixels = follow_pixels
+        self._given = calibration
         self.bias_correction = bias_correction
         self.nonnegative = nonnegative
         self.threads = threads
@@ -90,7 +97,11 @@ class MaterialDecomposer:
         ScanError
             If scan and calibration are not of one detector setting.
         """
-        check_match(self.calibration, scan)
+        check_match(self._given, scan)
+        self.calibration = self._given
+        follow = self.follow_pixels and scan.exposures("open").size > 0
+        if follow and not scan_differs(self._given, scan):
+            self.calibration = updated_by_opens(self._given, scan)
         self.bad_ = find_bad_pixels(scan)
         self.usable_ = self.calibration.good & (self.bad_ == 0)
         if not self.usable_.any():
@@ -267,6 +278,7 @@ class MaterialDecomposer:
                 {
                     "bias_correction": self.bias_correction,
                     "nonnegative": self.nonnegative,
+                    "follow_pixels": self.follow_pixels,
                 }
             ),
             "scan": scan.source,
