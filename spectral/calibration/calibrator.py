@@ -6,6 +6,7 @@ from dataclasses import replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
+from sklearn.base import BaseEstimator
 
 from spectral.calibration.assembly import assemble
 from spectral.calibration.pixel_fit import MeasuredShifts, PixelFit, fit_pixels
@@ -39,7 +40,7 @@ FIRST_SPREAD_KEV = 1.5
 MISFIT_SIGMAS = 6.0
 
 
-class WedgeCalibrator:
+class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
     """Learns every pixel's bin response from one step-wedge scan.
 
     Parameters

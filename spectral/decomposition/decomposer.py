@@ -6,6 +6,7 @@ import json
 from typing import TYPE_CHECKING
 
 import numpy as np
+from sklearn.base import BaseEstimator, TransformerMixin
 
 from spectral.calibration.matching import scan_differs
 from spectral.calibration.refresh import updated_by_opens
@@ -43,7 +44,7 @@ STRIP = 200_000
 ENDED_WELL = (SolveOutcome.CONVERGED, SolveOutcome.FEW_COUNTS)
 
 
-class MaterialDecomposer:
+class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
     """Maximum-likelihood areal densities of basis materials.
 
     Parameters
@@ -60,6 +61,8 @@ class MaterialDecomposer:
 
     Attributes
     ----------
+    calibration_ : Calibration
+        After `fit`: what was given, its pixels followed by the scan's opens if wished.
     session_ : Session
         After `fit`: the tube's output in the scan.
     usable_ : array of bool, shape (row, column)
@@ -82,12 +85,9 @@ class MaterialDecomposer:
     ) -> None:
         self.calibration = calibration
         self.follow_pixels = follow_pixels
-        self._given = calibration
         self.bias_correction = bias_correction
         self.nonnegative = nonnegative
         self.threads = threads
-        self._store = ConditionsStore(calibration)
-        self._facets = domain_facets(calibration.steps.areal_density)
 
     def fit(self, scan: Scan) -> MaterialDecomposer:
         """Read the session off a scan's dark and open exposures.
@@ -97,21 +97,22 @@ class MaterialDecomposer:
         ScanError
             If scan and calibration are not of one detector setting.
         """
-        check_match(self._given, scan)
-        self.calibration = self._given
+        check_match(self.calibration, scan)
+        self.calibration_ = self.calibration
         follow = self.follow_pixels and scan.exposures("open").size > 0
-        if follow and not scan_differs(self._given, scan):
-            self.calibration = updated_by_opens(self._given, scan)
+        if follow and not scan_differs(self.calibration, scan):
+            self.calibration_ = updated_by_opens(self.calibration, scan)
         self.bad_ = find_bad_pixels(scan)
-        self.usable_ = self.calibration.good & (self.bad_ == 0)
+        self.usable_ = self.calibration_.good & (self.bad_ == 0)
         if not self.usable_.any():
             msg = f"{scan.source}: no pixel is sound in both scan and calibration"
             raise ScanError(msg)
         self.flat_ = np.flatnonzero(self.usable_.ravel())
-        self.session_: Session = normalise(self.calibration, scan, self.usable_)
-        self.current_ = current_of(scan, self.calibration)
+        self.session_: Session = normalise(self.calibration_, scan, self.usable_)
+        self.current_ = current_of(scan, self.calibration_)
         self.count_time_ = scan.count_time_s
-        self._store = ConditionsStore(self.calibration)
+        self._store = ConditionsStore(self.calibration_)
+        self._facets = domain_facets(self.calibration_.steps.areal_density)
         return self
 
     def conditions(
@@ -141,10 +142,10 @@ class MaterialDecomposer:
         -------
         array, shape (pixel, material), in g/cm2
         """
-        if counts.shape != (self.flat_.size, self.calibration.levels_kev.size):
+        if counts.shape != (self.flat_.size, self.calibration_.levels_kev.size):
             msg = (
                 f"counts has shape {counts.shape}, the fitted pixels need "
-                f"{(self.flat_.size, self.calibration.levels_kev.size)}"
+                f"{(self.flat_.size, self.calibration_.levels_kev.size)}"
             )
             raise InputError(msg)
         which = self.count_time_.size - 1 if exposure is None else exposure
@@ -213,7 +214,7 @@ class MaterialDecomposer:
         """
         faults = count_faults(above, count_limit=count_limit) != 0
         filled = BlockMaps.empty(
-            len(exposures), len(self.calibration.materials), above.shape[2:]
+            len(exposures), len(self.calibration_.materials), above.shape[2:]
         )
         counts = above.reshape(*above.shape[:2], -1)
         for first in range(0, self.flat_.size, STRIP):
@@ -222,7 +223,7 @@ class MaterialDecomposer:
                 picked = counts[i][:, flat].T.astype(np.float64)
                 self._fill(filled, i, exposure, flat, picked, faults[i].ravel()[flat])
         return filled.maps(
-            tuple(m.name for m in self.calibration.materials),
+            tuple(m.name for m in self.calibration_.materials),
             np.asarray(exposures, np.int32),
         )
 
@@ -241,7 +242,7 @@ class MaterialDecomposer:
         found = self._solve(np.maximum(counts, 0.0), where)
         full = unpacked(found.covariance)
         spread, extra = calibration_spread(
-            self.calibration,
+            self.calibration_,
             where.tables,
             where.responses,
             np.nan_to_num(found.areal_density),
@@ -272,7 +273,7 @@ class MaterialDecomposer:
             for e in chosen
         )
         session = self.session_
-        calibration = self.calibration
+        calibration = self.calibration_
         return {
             "options": json.dumps(
                 {

@@ -89,7 +89,7 @@ def decompose_series(
     path = Path(path)
     decomposer.fit(scan)
     chosen = chosen_exposures(scan, exposures)
-    blocks = split(scan, chosen, len(decomposer.calibration.materials))
+    blocks = split(scan, chosen, len(decomposer.calibration_.materials))
     record = decomposer.record(scan, chosen)
     job = {
         "record": hashlib.sha256(json.dumps(record).encode()).hexdigest(),
@@ -113,7 +113,7 @@ def decompose_series(
                     progress(done / len(blocks))
             if written is not None:
                 written.result()
-        material = [m.name for m in decomposer.calibration.materials]
+        material = [m.name for m in decomposer.calibration_.materials]
         parts.finish(material, len(blocks), {**record, "date": _date()})
     return SeriesRun(
         path=path, exposures=chosen.size, blocks=len(blocks), resumed=resumed
