@@ -1,4 +1,4 @@
-"""A small scan of a made-up detector, for tests that need counts and no physics."""
+"""Scans and calibrations of made-up detectors, for tests of what is done with them."""
 
 from __future__ import annotations
 
@@ -7,12 +7,18 @@ from typing import TYPE_CHECKING, Protocol
 import numpy as np
 import pytest
 
+from spectral.calibration.residual import fit_residual
+from spectral.calibration.result import Calibration, StepTable
+from spectral.forward.counting_model import CountingModel
+from spectral.physics.materials import find_material
+from spectral.physics.pileup import PulseShape
 from spectral.scans.scan import CountsInMemory, Filter, Layer, Scan
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 THRESHOLDS_KEV = (20.0, 32.0, 45.0, 58.0)
+LEVELS_KEV = np.array([20.0, 32.0, 45.0, 60.0])
 WEDGE_MM = [(p, a) for p in (0.0, 10.0, 25.0, 50.0) for a in (0.0, 1.0, 4.0)][1:]
 
 
@@ -32,6 +38,12 @@ class MakeScan(Protocol):
         loss: float = 0.0,
         drift: float = 0.0,
     ) -> Scan: ...
+
+
+class MakeCalibration(Protocol):
+    """Returns a calibration of made-up pixels that differ a bit from each other."""
+
+    def __call__(self, pixels: tuple[int, int] = (6, 8)) -> Calibration: ...
 
 
 def _attenuation(energy: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -131,3 +143,86 @@ def make_scan() -> MakeScan:
         )
 
     return make
+
+
+def _counting_model() -> CountingModel:
+    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
+    energy = np.arange(12.0, 91.0, 2.0)
+    materials = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
+    attenuation = np.array([m.mass_attenuation(energy) for m in materials])
+    spectrum = (energy - 8.0) * (92.0 - energy) * np.exp(-0.7 * attenuation[1])
+    level = 0.5 * np.arange(316)
+    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
+    tail = (level > 4.0) & (level < energy[:, None])
+    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
+    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
+    return CountingModel(
+        energy_kev=energy,
+        spectrum=spectrum / spectrum.sum(),
+        attenuation=attenuation,
+        heights=heights,
+        step_kev=0.5,
+        noise_kev=1.6,
+        shape=PulseShape(dead_time_ns=150.0, tail_ns=30.0),
+    )
+
+
+def made_up_calibration(pixels: tuple[int, int] = (6, 8)) -> Calibration:
+    """A calibration of made-up pixels, as a wedge scan might have left it."""
+    rng = np.random.default_rng(1)
+    mesh = np.meshgrid([0.0, 3.0, 6.0, 9.0], [0.0, 1.0, 2.0, 3.0], indexing="ij")
+    areal = np.stack([m.ravel() for m in mesh], axis=1)
+    steps, bins = areal.shape[0], LEVELS_KEV.size
+    ratio = np.zeros((steps, bins))
+    error = np.full((steps, bins), 1e-4)
+    current = np.full(steps, 4.0)
+    residual = fit_residual(ratio, error, areal, current, np.array([0.2, 0.4]))
+    size = bins + 3
+    scale = np.array([0.02, *[0.5] * bins, 0.2, 0.05])
+    return Calibration(
+        materials=(
+            Layer(name="PMMA", formula="C5H8O2", density_g_cm3=1.19),
+            Layer(name="Al", formula="Al", density_g_cm3=2.7),
+        ),
+        thresholds_kev=LEVELS_KEV - 0.5,
+        levels_kev=LEVELS_KEV,
+        model=_counting_model(),
+        photons_per_mas=1e5,
+        residual=residual,
+        departures=rng.normal(0.0, 1.0, (*pixels, size)) * scale,
+        departure_covariance=np.tile(
+            np.diag(0.01 * scale**2).astype(np.float32), (*pixels, 1, 1)
+        ),
+        spread=np.diag(scale**2),
+        pixel_reasons=np.zeros(pixels, np.uint16),
+        deviance=np.ones(pixels, np.float32),
+        steps=StepTable(
+            exposure=np.arange(steps),
+            areal_density=areal,
+            current_ma=current,
+            count_time_s=np.full(steps, 0.25),
+            drift=np.zeros(steps),
+            residual=ratio,
+            physics_residual=ratio,
+            error=error,
+        ),
+        promise=None,
+        unknowns={"ln_noise": 0.47, "ln_dead_time": 5.0},
+        unknown_errors={"ln_noise": 0.01, "ln_dead_time": 0.02},
+        voltage_kv=90.0,
+        sensor="CdTe, 1 mm, 100 um pixels",
+        filters=("Al 2 mm",),
+        assumptions=("no tube current is given",),
+        findings=(),
+        scan_source="a made-up wedge scan",
+        scan_digest="0" * 64,
+        created="2026-01-01T00:00:00+00:00",
+        version="0",
+        cross_sections="made up",
+    )
+
+
+@pytest.fixture(scope="session")
+def make_calibration() -> MakeCalibration:
+    """A function that makes a calibration, as a wedge scan might have left it."""
+    return made_up_calibration

@@ -6,11 +6,11 @@ of consistency: they would not find a wrong cross section.
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 import pytest
 
-from spectral.calibration.residual import fit_residual
-from spectral.calibration.result import Calibration, StepTable
 from spectral.decomposition.likelihood import (
     count_derivatives,
     cramer_rao_bound,
@@ -19,92 +19,13 @@ from spectral.decomposition.likelihood import (
 )
 from spectral.decomposition.responses import lost_fraction, responses
 from spectral.decomposition.solver import solve
-from spectral.forward.counting_model import CountingModel
-from spectral.physics.materials import find_material
-from spectral.physics.pileup import PulseShape
-from spectral.scans.scan import Layer
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from spectral.calibration.result import Calibration
 
 pytestmark = [pytest.mark.property, pytest.mark.slow]
-
-LEVELS_KEV = np.array([20.0, 32.0, 45.0, 60.0])
-
-
-def counting_model() -> CountingModel:
-    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
-    energy = np.arange(12.0, 91.0, 2.0)
-    materials = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
-    attenuation = np.array([m.mass_attenuation(energy) for m in materials])
-    spectrum = (energy - 8.0) * (92.0 - energy) * np.exp(-0.7 * attenuation[1])
-    level = 0.5 * np.arange(316)
-    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
-    tail = (level > 4.0) & (level < energy[:, None])
-    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
-    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
-    return CountingModel(
-        energy_kev=energy,
-        spectrum=spectrum / spectrum.sum(),
-        attenuation=attenuation,
-        heights=heights,
-        step_kev=0.5,
-        noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=150.0, tail_ns=30.0),
-    )
-
-
-def calibration(pixels: tuple[int, int] = (6, 8)) -> Calibration:
-    """A calibration of made-up pixels, as a wedge scan might have left it."""
-    rng = np.random.default_rng(1)
-    mesh = np.meshgrid([0.0, 3.0, 6.0, 9.0], [0.0, 1.0, 2.0, 3.0], indexing="ij")
-    areal = np.stack([m.ravel() for m in mesh], axis=1)
-    steps, bins = areal.shape[0], LEVELS_KEV.size
-    ratio = np.zeros((steps, bins))
-    error = np.full((steps, bins), 1e-4)
-    current = np.full(steps, 4.0)
-    residual = fit_residual(ratio, error, areal, current, np.array([0.2, 0.4]))
-    size = bins + 3
-    scale = np.array([0.02, *[0.5] * bins, 0.2, 0.05])
-    return Calibration(
-        materials=(
-            Layer(name="PMMA", formula="C5H8O2", density_g_cm3=1.19),
-            Layer(name="Al", formula="Al", density_g_cm3=2.7),
-        ),
-        thresholds_kev=LEVELS_KEV - 0.5,
-        levels_kev=LEVELS_KEV,
-        model=counting_model(),
-        photons_per_mas=1e5,
-        residual=residual,
-        departures=rng.normal(0.0, 1.0, (*pixels, size)) * scale,
-        departure_covariance=np.tile(
-            np.diag(0.01 * scale**2).astype(np.float32), (*pixels, 1, 1)
-        ),
-        spread=np.diag(scale**2),
-        pixel_reasons=np.zeros(pixels, np.uint16),
-        deviance=np.ones(pixels, np.float32),
-        steps=StepTable(
-            exposure=np.arange(steps),
-            areal_density=areal,
-            current_ma=current,
-            count_time_s=np.full(steps, 0.25),
-            drift=np.zeros(steps),
-            residual=ratio,
-            physics_residual=ratio,
-            error=error,
-        ),
-        promise=None,
-        unknowns={"ln_noise": 0.47, "ln_dead_time": 5.0},
-        unknown_errors={"ln_noise": 0.01, "ln_dead_time": 0.02},
-        voltage_kv=90.0,
-        sensor="CdTe, 1 mm, 100 um pixels",
-        filters=("Al 2 mm",),
-        assumptions=("no tube current is given",),
-        findings=(),
-        scan_source="a made-up wedge scan",
-        scan_digest="0" * 64,
-        created="2026-01-01T00:00:00+00:00",
-        version="0",
-        cross_sections="made up",
-    )
-
 
 PIXELS = (40, 50)
 FLAT = np.arange(2000)
@@ -114,9 +35,11 @@ SHORT_S = 0.02
 
 
 @pytest.fixture(scope="module")
-def response() -> tuple[np.ndarray, np.ndarray]:
+def response(
+    make_calibration: Callable[..., Calibration],
+) -> tuple[np.ndarray, np.ndarray]:
     """Counts per second of each pixel's nodes, and the nodes' attenuation."""
-    made = calibration(PIXELS)
+    made = make_calibration(PIXELS)
     ready = responses(made, made.nodes(CURRENT_MA), FLAT, count_time_s=1.0)
     return ready.weight, ready.attenuation
 
@@ -194,8 +117,9 @@ def test_spread_of_the_estimates_is_the_smallest_there_can_be(
 
 def test_expected_counts_are_proportional_to_time_and_to_nothing_else(
     response: tuple[np.ndarray, np.ndarray],
+    make_calibration: Callable[..., Calibration],
 ) -> None:
-    made = calibration(PIXELS)
+    made = make_calibration(PIXELS)
     tables = made.nodes(CURRENT_MA)
     ten = responses(made, tables, FLAT[:5], count_time_s=10.0)
     np.testing.assert_allclose(ten.weight, 10.0 * response[0][:5], rtol=1e-12)
@@ -214,9 +138,11 @@ def test_share_lost_to_dead_time_makes_counts_less_variable() -> None:
     assert found == pytest.approx(variance, rel=1e-12)
 
 
-def test_brighter_beam_is_met_without_new_tables() -> None:
+def test_brighter_beam_is_met_without_new_tables(
+    make_calibration: Callable[..., Calibration],
+) -> None:
     # the responses serve outputs a few percent from the tables' own
-    made = calibration((2, 3))
+    made = make_calibration((2, 3))
     flat, areal = np.arange(6), np.array([[3.0, 1.0], [0.0, 0.0], [8.0, 2.5]])
     ready = responses(made, made.nodes(4.0), flat, count_time_s=1.0, output=1.025)
     found = np.einsum("pbn,cn->pcb", ready.weight, np.exp(-areal @ ready.attenuation.T))

@@ -10,103 +10,27 @@ import numpy as np
 import pytest
 
 from spectral.calibration.calibration_file import read_calibration, write_calibration
-from spectral.calibration.residual import fit_residual
-from spectral.calibration.result import Calibration, Promise, StepTable
+from spectral.calibration.result import Promise
 from spectral.errors import FileFormatError
-from spectral.forward.counting_model import CountingModel
-from spectral.physics.materials import find_material
-from spectral.physics.pileup import PulseShape
-from spectral.scans.scan import Layer
 from spectral.scans.scan_file import file_digest
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
     from pathlib import Path
 
-LEVELS_KEV = np.array([20.0, 32.0, 45.0, 60.0])
-
-
-def counting_model() -> CountingModel:
-    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
-    energy = np.arange(12.0, 91.0, 2.0)
-    materials = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
-    attenuation = np.array([m.mass_attenuation(energy) for m in materials])
-    spectrum = (energy - 8.0) * (92.0 - energy) * np.exp(-0.7 * attenuation[1])
-    level = 0.5 * np.arange(316)
-    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
-    tail = (level > 4.0) & (level < energy[:, None])
-    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
-    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
-    return CountingModel(
-        energy_kev=energy,
-        spectrum=spectrum / spectrum.sum(),
-        attenuation=attenuation,
-        heights=heights,
-        step_kev=0.5,
-        noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=150.0, tail_ns=30.0),
-    )
-
-
-def calibration(pixels: tuple[int, int] = (6, 8)) -> Calibration:
-    """A calibration of made-up pixels, as a wedge scan might have left it."""
-    rng = np.random.default_rng(1)
-    mesh = np.meshgrid([0.0, 3.0, 6.0, 9.0], [0.0, 1.0, 2.0, 3.0], indexing="ij")
-    areal = np.stack([m.ravel() for m in mesh], axis=1)
-    steps, bins = areal.shape[0], LEVELS_KEV.size
-    ratio = np.zeros((steps, bins))
-    error = np.full((steps, bins), 1e-4)
-    current = np.full(steps, 4.0)
-    residual = fit_residual(ratio, error, areal, current, np.array([0.2, 0.4]))
-    size = bins + 3
-    scale = np.array([0.02, *[0.5] * bins, 0.2, 0.05])
-    return Calibration(
-        materials=(
-            Layer(name="PMMA", formula="C5H8O2", density_g_cm3=1.19),
-            Layer(name="Al", formula="Al", density_g_cm3=2.7),
-        ),
-        thresholds_kev=LEVELS_KEV - 0.5,
-        levels_kev=LEVELS_KEV,
-        model=counting_model(),
-        photons_per_mas=1e5,
-        residual=residual,
-        departures=rng.normal(0.0, 1.0, (*pixels, size)) * scale,
-        departure_covariance=np.tile(
-            np.diag(0.01 * scale**2).astype(np.float32), (*pixels, 1, 1)
-        ),
-        spread=np.diag(scale**2),
-        pixel_reasons=np.zeros(pixels, np.uint16),
-        deviance=np.ones(pixels, np.float32),
-        steps=StepTable(
-            exposure=np.arange(steps),
-            areal_density=areal,
-            current_ma=current,
-            count_time_s=np.full(steps, 0.25),
-            drift=np.zeros(steps),
-            residual=ratio,
-            physics_residual=ratio,
-            error=error,
-        ),
-        promise=None,
-        unknowns={"ln_noise": 0.47, "ln_dead_time": 5.0},
-        unknown_errors={"ln_noise": 0.01, "ln_dead_time": 0.02},
-        voltage_kv=90.0,
-        sensor="CdTe, 1 mm, 100 um pixels",
-        filters=("Al 2 mm",),
-        assumptions=("no tube current is given",),
-        findings=(),
-        scan_source="a made-up wedge scan",
-        scan_digest="0" * 64,
-        created="2026-01-01T00:00:00+00:00",
-        version="0",
-        cross_sections="made up",
-    )
+    from spectral.calibration.result import Calibration
 
 
 @pytest.fixture
-def path(tmp_path: Path) -> Path:
+def calibration(make_calibration: Callable[..., Calibration]) -> Calibration:
+    return make_calibration()
+
+
+@pytest.fixture
+def path(calibration: Calibration, tmp_path: Path) -> Path:
     """A calibration in a file."""
     path = tmp_path / "calibration.h5"
-    write_calibration(calibration(), path)
+    write_calibration(calibration, path)
     return path
 
 
@@ -131,11 +55,13 @@ def assert_alike(first: Any, second: Any, where: str) -> None:
         assert first == second, where
 
 
-def test_everything_comes_back(path: Path) -> None:
-    assert_alike(calibration(), read_calibration(path), "calibration")
+def test_everything_comes_back(calibration: Calibration, path: Path) -> None:
+    assert_alike(calibration, read_calibration(path), "calibration")
 
 
-def test_large_arrays_and_a_promise_come_back(tmp_path: Path) -> None:
+def test_large_arrays_and_a_promise_come_back(
+    make_calibration: Callable[..., Calibration], tmp_path: Path
+) -> None:
     promise = Promise(
         exposure=np.array([3, 4]),
         bias=np.array([[0.01, -0.02], [0.0, 0.03]]),
@@ -143,7 +69,7 @@ def test_large_arrays_and_a_promise_come_back(tmp_path: Path) -> None:
         fixed_pattern=np.array([0.2, 0.3]),
     )
     full = replace(
-        calibration((40, 50)), promise=promise, findings=("a finding", "another")
+        make_calibration((40, 50)), promise=promise, findings=("a finding", "another")
     )
     path = tmp_path / "large.h5"
     write_calibration(full, path)
@@ -154,12 +80,12 @@ def test_digest_is_that_of_the_file(path: Path) -> None:
     assert read_calibration(path).digest == file_digest(path)
 
 
-def test_expected_counts_survive_the_file(path: Path) -> None:
+def test_expected_counts_survive_the_file(calibration: Calibration, path: Path) -> None:
     areal = np.array([[2.0, 0.5], [7.0, 2.0]])
     arguments = (areal, np.full(2, 4.0), np.ones(2), np.arange(10))
     np.testing.assert_array_equal(
         read_calibration(path).expected_bins(*arguments),
-        calibration().expected_bins(*arguments),
+        calibration.expected_bins(*arguments),
     )
 
 
@@ -170,14 +96,18 @@ def test_units_stand_beside_the_numbers(path: Path) -> None:
         assert file["steps/areal_density"].attrs["units"] == "g/cm2"
 
 
-def test_nothing_else_is_left_in_the_folder(path: Path) -> None:
-    write_calibration(calibration(), path)
+def test_nothing_else_is_left_in_the_folder(
+    calibration: Calibration, path: Path
+) -> None:
+    write_calibration(calibration, path)
     assert [p.name for p in path.parent.iterdir()] == [path.name]
 
 
-def test_failed_writing_leaves_the_old_file(path: Path) -> None:
+def test_failed_writing_leaves_the_old_file(
+    calibration: Calibration, path: Path
+) -> None:
     before = path.read_bytes()
-    broken = replace(calibration(), unknowns={"ln_noise": object()})  # type: ignore[dict-item]
+    broken = replace(calibration, unknowns={"ln_noise": object()})  # type: ignore[dict-item]
     with pytest.raises(TypeError, match="not JSON serializable"):
         write_calibration(broken, path)
     assert path.read_bytes() == before
@@ -241,15 +171,17 @@ def test_missing_fact_is_refused(path: Path, name: str) -> None:
         read_calibration(path)
 
 
-def test_what_a_calibration_says_of_itself() -> None:
-    found = calibration((6, 8))
+def test_what_a_calibration_says_of_itself(
+    make_calibration: Callable[..., Calibration],
+) -> None:
+    found = make_calibration((6, 8))
     assert found.shape == (6, 8)
     assert found.good.all()
     assert found.largest.tolist() == [9.0, 3.0]
     assert found.largest_current_ma == 4.0
     assert found.dead_time_ns == pytest.approx(165.0)
     assert found.parameter_names[1:5] == tuple(f"shift_{k}_kev" for k in range(1, 5))
-    expected = LEVELS_KEV[2] + found.departures[3, 4, 3]
+    expected = 45.0 + found.departures[3, 4, 3]
     assert found.threshold_kev()[2, 3, 4] == pytest.approx(expected)
     np.testing.assert_array_equal(
         found.pixels(np.array([9])).values[0], found.departures[1, 1]
