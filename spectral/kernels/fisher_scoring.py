@@ -21,14 +21,12 @@ from typing import TYPE_CHECKING
 import numpy as np
 from numba import njit
 
+from spectral.kernels.curvature import LARGEST_INFLATION, bend, inflate
 from spectral.kernels.pixel_lanes import (
     LANES,
-    LARGEST_INFLATION,
     ROW,
-    bend,
     compare,
     expect,
-    inflate,
     inform,
     invert,
     look_ahead,
@@ -221,7 +219,7 @@ def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
     ahead_scale, ahead_residual = np.empty_like(scale), np.empty_like(scale)
     u_ahead, shift = np.empty((materials, ROW)), np.empty((materials, ROW))
     second, second_straight = np.empty((materials, ROW)), np.empty(ROW)
-    bias, looked = np.empty(ROW), np.zeros(ROW)
+    bias, blur, looked = np.empty(ROW), np.empty(ROW), np.zeros(ROW)
     walk = np.empty((3 * materials + 4, ROW))
     a, base = walk[:materials], walk[materials : 2 * materials]
     move, slope = walk[2 * materials : 3 * materials], walk[3 * materials]
@@ -260,7 +258,15 @@ def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
                 invert(observed, observed_inverse, regular)
                 step(observed_inverse, u, newton, straight)
                 look_ahead(
-                    moment, c, residual, newton, ahead, ahead_scale, ahead_residual
+                    moment,
+                    c,
+                    scale,
+                    residual,
+                    newton,
+                    ahead,
+                    ahead_scale,
+                    ahead_residual,
+                    blur,
                 )
                 score(ahead, ahead_scale, ahead_residual, u_ahead)
                 step(observed_inverse, u_ahead, second, second_straight)
@@ -282,6 +288,7 @@ def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
                     second,
                     second_straight,
                     bias,
+                    blur,
                     looked,
                     a,
                     base,

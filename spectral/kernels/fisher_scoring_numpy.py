@@ -11,7 +11,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.kernels.pixel_lanes import LARGEST_INFLATION, SMALLEST_PIVOT
+from spectral.kernels.curvature import LARGEST_INFLATION
+from spectral.kernels.pixel_lanes import SMALLEST_PIVOT
 from spectral.kernels.step_control import (
     CONVERGED,
     FADING,
@@ -20,6 +21,7 @@ from spectral.kernels.step_control import (
     NEAR,
     RUNNING,
     SINGULAR,
+    SLOWEST,
     STEPS_SPENT,
     UNUSABLE,
 )
@@ -49,6 +51,7 @@ class _Point:
     ahead: Array
     further: Array
     further_straight: Array
+    blur: Array
     bias: Array
 
 
@@ -136,6 +139,7 @@ class _Problem:
             ahead=ahead,
             further=further[0],
             further_straight=further[1],
+            blur=further[2],
             bias=np.einsum("pj,pji,pi->p", turn, inverse, turn),
         )
 
@@ -172,8 +176,8 @@ def _look_ahead(
     residual: Array,
     move: Array,
     newton: Array,
-) -> tuple[Array, tuple[Array, Array]]:
-    """Moments after a move by the Taylor series; the step from there, its length."""
+) -> tuple[Array, tuple[Array, Array, Array]]:
+    """Moments after a move by the Taylor series; step from there, its length, blur."""
     turn = np.einsum("pbji,pi->pbj", second, move)
     there = expected + np.einsum("pbj,pj->pb", first + 0.5 * turn, move)
     slope = first + turn
@@ -185,7 +189,11 @@ def _look_ahead(
     score = np.einsum("pbj,pb->pj", slope, left)
     further = np.einsum("pji,pi->pj", newton, score)
     ahead = np.concatenate((there[:, :, None], slope), axis=2)
-    return ahead, (further, np.einsum("pj,pj->p", further, score))
+    here = expected[:, :-1]
+    x = there[:, :-1] / here - 1.0
+    blur = 0.25 * x**4 * (x**2 * here / 9.0 + residual[:, :-1] ** 2 / here)
+    straight = np.einsum("pj,pj->p", further, score)
+    return ahead, (further, straight, blur.sum(axis=1))
 
 
 def _start(
@@ -232,7 +240,8 @@ def _next_step(
     if nonnegative:
         for p in range(len(a)):
             move[p], decrement[p] = _hold_back(a[p], at.score[p], at.inverse[p])
-    left = decrement * np.where(last > 0.0, np.minimum(1.0, decrement / last), 1.0)
+    factor = np.minimum(np.sqrt(np.maximum(decrement, 0.0) / last), SLOWEST)
+    left = decrement * np.where(last > 0.0, (factor / (1.0 - factor)) ** 2, 1.0)
     near = (decrement < NEAR) & at.regular & (not nonnegative)
     near &= (at.straight > 0.0) & (at.straight < 4.0 * decrement)
     move[near] = at.move[near]
@@ -240,7 +249,7 @@ def _next_step(
     looked &= at.further_straight < 0.25 * at.straight
     move[looked] += at.further[looked]
     after = at.further_straight**2 / at.straight + FADING * at.bias**2 * at.straight
-    left[looked] = after[looked]
+    left[looked] = (after + at.blur)[looked]
     return move, decrement, left, looked
 
 

@@ -31,7 +31,6 @@ LANES = 64
 ROW = 72
 MOMENTS = 6  # computed in one pass: all of two materials
 SMALLEST_PIVOT = 1e-13  # of the diagonal: a share of information not to be told from 0
-LARGEST_INFLATION = 0.5  # of the variance, by curvature
 _TINY = 1e-290
 _HUGE = 1e290
 
@@ -247,17 +246,25 @@ def score(moment: Array, scale: Array, residual: Array, u: Array) -> None:
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def look_ahead(
+def look_ahead(  # noqa: PLR0912 (loops, not decisions)
     moment: Array,
     c: Array,
+    scale: Array,
     residual: Array,
     move: Array,
     ahead: Array,
     ahead_scale: Array,
     ahead_residual: Array,
+    blur: Array,
 ) -> None:
-    """Moments, scales and residuals after a move, from the Taylor series here."""
+    """Moments, scales and residuals after a move, from the Taylor series here.
+
+    With x the relative change of an expectation, the series leaves about x^3 / 6 of it
+    and x^2 / 2 of its derivatives; blur is what that makes of chi-square.
+    """
     rows, materials = ahead_scale.shape[0], move.shape[0]
+    for lane in range(LANES):
+        blur[lane] = 0.0
     for b in range(rows):
         for lane in range(LANES):
             ahead[b, 0, lane] = moment[b, 0, lane]
@@ -284,6 +291,12 @@ def look_ahead(
             last = c[lane] / live if live > 0.0 else np.nan
             first = 1.0 / expected if expected > 0.0 else np.nan
             ahead_scale[b, lane] = last if b == rows - 1 else first
+        if b < rows - 1:
+            for lane in range(LANES):
+                x = (ahead[b, 0, lane] - moment[b, 0, lane]) * scale[b, lane]
+                pull = residual[b, lane] * residual[b, lane] * scale[b, lane]
+                curve = x * x * moment[b, 0, lane] / 9.0 + pull
+                blur[lane] += 0.25 * x * x * x * x * curve
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
@@ -338,74 +351,6 @@ def settle(looked: Array, ahead: Array, moment: Array) -> None:
             for lane in range(LANES):
                 here = moment[b, q, lane]
                 moment[b, q, lane] = ahead[b, q, lane] if looked[lane] > 0.0 else here
-
-
-@njit(nogil=True, cache=True, error_model="numpy")
-def bend(  # noqa: PLR0912 (loops, not decisions)
-    moment: Array, scale: Array, v: Array, g: Array, y: Array
-) -> None:
-    """Curvature y_j = G_j v, with G_j = sum_e v_je d_e' C^-1 (second derivatives)."""
-    rows, materials = scale.shape[0], v.shape[0]
-    for e in range(materials):
-        q = 1 + materials
-        for k in range(materials):
-            for i in range(k, materials):
-                for lane in range(LANES):
-                    g[e, k, i, lane] = 0.0
-                for b in range(rows):
-                    for lane in range(LANES):
-                        product = moment[b, 1 + e, lane] * moment[b, q, lane]
-                        g[e, k, i, lane] += product * scale[b, lane]
-                for lane in range(LANES):
-                    g[e, i, k, lane] = g[e, k, i, lane]
-                q += 1
-    for e in range(materials):
-        for k in range(materials):
-            for i in range(materials):
-                for lane in range(LANES):
-                    y[e, k, i, lane] = 0.0
-                for j in range(materials):
-                    for lane in range(LANES):
-                        y[e, k, i, lane] += g[e, k, j, lane] * v[j, i, lane]
-    for k in range(materials):
-        for i in range(materials):
-            for e in range(materials):
-                for lane in range(LANES):
-                    g[e, k, i, lane] = 0.0
-                for j in range(materials):
-                    for lane in range(LANES):
-                        g[e, k, i, lane] += v[e, j, lane] * y[j, k, i, lane]
-    y[:] = g
-
-
-@njit(nogil=True, cache=True, error_model="numpy")
-def inflate(f: Array, v: Array, y: Array, extra: Array, share: Array) -> None:
-    """Add to v what the curvature of the expectation adds to the variance.
-
-    Half of trace(y_j y_i), the second-order variance of a bias-corrected estimate
-    but for its statistical-curvature term: S. Amari 1985, Differential-Geometrical
-    Methods in Statistics, Springer, chapter 4 (from memory). share[l] is its mean
-    ratio to v; above LARGEST_INFLATION the series is no guide and is cut there.
-    """
-    materials = f.shape[0]
-    for lane in range(LANES):
-        share[lane] = 0.0
-    for j in range(materials):
-        for i in range(materials):
-            for lane in range(LANES):
-                extra[j, i, lane] = 0.0
-            for k in range(materials):
-                for e in range(materials):
-                    for lane in range(LANES):
-                        product = y[j, k, e, lane] * y[i, e, k, lane]
-                        extra[j, i, lane] += 0.5 * product
-            for lane in range(LANES):
-                share[lane] += extra[j, i, lane] * f[j, i, lane] / materials
-    for j in range(materials):
-        for i in range(materials):
-            for lane in range(LANES):
-                cut = min(1.0, LARGEST_INFLATION / max(share[lane], 1e-30))
-                v[j, i, lane] += cut * extra[j, i, lane]
 
 
 @njit(nogil=True, cache=True, error_model="numpy")

@@ -19,6 +19,7 @@ CONVERGED, STEPS_SPENT, FEW_COUNTS, SINGULAR, UNUSABLE = range(5)
 RUNNING = -1
 HALVINGS = 30
 NEAR = 25.0  # standard errors squared, within which Newton's step is tried
+SLOWEST = 0.99  # largest factor from step to step that is believed
 FADING = 4.0  # times the squared bias squared: what a step leaves because q was held
 
 
@@ -76,6 +77,7 @@ def advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
     second: Array,
     second_straight: Array,
     bias: Array,
+    blur: Array,
     looked: Array,
     a: Array,
     base: Array,
@@ -120,8 +122,10 @@ def advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
             move[j, lane] = scored[j, lane]
         if nonnegative:
             distance = _hold_back(lane, a, u, v, move)
-        shrink = min(1.0, distance / last[lane]) if last[lane] > 0.0 else 1.0
-        left = distance * shrink
+        left = distance
+        if last[lane] > 0.0:  # steps shrink by this factor: the rest is a series
+            factor = min(np.sqrt(max(distance, 0.0) / last[lane]), SLOWEST)
+            left *= (factor / (1.0 - factor)) ** 2
         looked[lane] = 0.0
         if near and distance < NEAR and 0.0 < straight[lane] < 4.0 * distance:
             for j in range(materials):
@@ -129,7 +133,7 @@ def advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
             if 0.0 <= second_straight[lane] < 0.25 * straight[lane]:
                 looked[lane] = 1.0
                 held = FADING * bias[lane] ** 2 * straight[lane]
-                left = second_straight[lane] ** 2 / straight[lane] + held
+                left = second_straight[lane] ** 2 / straight[lane] + held + blur[lane]
                 for j in range(materials):
                     move[j, lane] += second[j, lane]
         last[lane] = slope[lane] = distance

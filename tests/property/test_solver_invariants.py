@@ -160,7 +160,8 @@ def test_nonnegative_results_are_and_free_ones_stay(
             start=START,
             bias_correction=corrected,
             nonnegative=sign,
-            tolerance=1e-14,
+            max_steps=300,
+            tolerance=1e-16,
         )
         for sign in (True, False)
     )
