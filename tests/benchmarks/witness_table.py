@@ -61,7 +61,8 @@ PHOTONS = 20_000.0
 class Bench:
     """One detector with the tube setting and the stacks to test it on.
 
-    `loss` is the open rate times the dead time at full current.
+    `loss` is the open rate times the dead time at full current, `step_time` the count
+    time of a wedge step relative to an open exposure.
     """
 
     detector: str
@@ -71,6 +72,7 @@ class Bench:
     witness_mm: tuple[tuple[float, float], ...]
     regions_mm: tuple[tuple[float, float], ...]
     loss: float
+    step_time: float = 1.0
 
 
 _POLYMER_ALUMINIUM = {
@@ -81,6 +83,7 @@ _POLYMER_ALUMINIUM = {
 BENCHES = (
     Bench(
         detector="silicon", voltage_kv=50.0, filter_mm_al=1.0, loss=0.15,
+        step_time=6.0,
         **_POLYMER_ALUMINIUM,  # type: ignore[arg-type]
     ),
     Bench(
@@ -219,7 +222,7 @@ class Instrument:
         rows = [("dark", (0.0, 0.0), 0.0, 1.0)] * 2
         rows += [("open", (0.0, 0.0), ma, t) for ma, t in opens]
         rows += [
-            ("wedge", (float(p), float(a)), FULL_MA, 1.0)
+            ("wedge", (float(p), float(a)), FULL_MA, self.bench.step_time)
             for p, a in wedge.thickness_mm[order]
         ]
         rows += [("open", (0.0, 0.0), ma, t) for ma, t in opens[1:]]
@@ -376,27 +379,30 @@ def run(bench: Bench, *, pixels: int = 24) -> tuple[list[WitnessRow], list[Chain
 
 
 def witness_text(rows: Sequence[WitnessRow]) -> str:
-    """The table in Markdown: largest differences, and where they are."""
-    titles = (
-        "detector", "open rate x dead time", "PMMA + Al, mm", "before, by bin, %",
-        "after, by bin, %", "statistical error, %",
-    )  # fmt: skip
-    lines = _heading(titles)
-    lines += [
-        f"| {r.detector} | {r.loss:.2f} | {r.stack_mm[0]:g} + {r.stack_mm[1]:g} | "
-        f"{_listed(r.before, 1)} | {_listed(r.after, 2)} | "
-        f"{', '.join(f'{v:.2f}' for v in r.error)} |"
-        for r in rows
+    """The table in Markdown: a line for each detector and rate, a column a stack."""
+    stacks = list(dict.fromkeys(r.stack_mm for r in rows))
+    named = [
+        f"after, {p:g} mm + {a:g} mm" if p + a else "after, open" for p, a in stacks
     ]
+    lines = _heading(
+        ("detector", "rate x dead time", "before, largest", *named, "statistical")
+    )
+    for key in dict.fromkeys((r.detector, r.loss) for r in rows):
+        own = [r for r in rows if (r.detector, r.loss) == key]
+        before = max((v for r in own for v in r.before), key=abs)
+        cells = [
+            key[0],
+            f"{key[1]:.2f}",
+            f"{before:+.0f}",
+            *(", ".join(f"{v:+.2f}" for v in r.after) for r in own),
+            f"{max(v for r in own for v in r.error):.2f}",
+        ]
+        lines.append(f"| {' | '.join(cells)} |")
     return "\n".join(lines)
 
 
 def _heading(titles: tuple[str, ...]) -> list[str]:
     return [f"| {' | '.join(titles)} |", "|" + "---|" * len(titles)]
-
-
-def _listed(values: Sequence[float], digits: int) -> str:
-    return ", ".join(f"{v:+.{digits}f}" for v in values)
 
 
 def chain_text(rows: Sequence[ChainRow]) -> str:
