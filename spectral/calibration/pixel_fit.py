@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.calibration.smooth_field import field_terms, smooth_field
 from spectral.kernels import pixel_likelihood
 
 if TYPE_CHECKING:
@@ -119,7 +120,8 @@ def fit_pixels(
     Notes
     -----
     The spread maximises the marginal likelihood of all pixels by expectation
-    maximisation on the quadratic form of each pixel's likelihood. Source: A. P.
+    maximisation on the quadratic form of each pixel's likelihood; a smooth change
+    over the field is the mean that departures are drawn to. Source: A. P.
     Dempster, N. M. Laird, D. B. Rubin, J. R. Stat. Soc. B 39 (1977) 1; empirical
     Bayes, H. Robbins (1956).
     """
@@ -127,6 +129,8 @@ def fit_pixels(
     thresholds = levels_kev.size
     spread = prior_spread(thresholds)
     values = np.zeros((counts.shape[0], thresholds + 3))
+    field = np.zeros_like(values)
+    terms = field_terms(data.pixel, data.shape)
     ratio = np.ones(counts.shape[1:])
     lost = 2.0 * dead_time_ns * NS / data.count_time_s
     covariance = np.empty((0, 0, 0))
@@ -159,10 +163,14 @@ def fit_pixels(
         pull = np.concatenate([p.pull for p in parts])
         if measured is not None:
             measured.add_to(information, pull)
-        spread = learned_spread(information, pull, spread)
-        values, covariance = posterior(information, pull, spread)
+        # departures from the smooth field are what the spread draws to zero
+        around = pull - np.matmul(information, field[..., None])[..., 0]
+        spread = learned_spread(information, around, spread)
+        values, covariance = posterior(information, around, spread)
+        values += field
         # the average pixel has no departures: what all share belongs to the ratio
         values -= values.mean(axis=0)
+        field = smooth_field(values, terms)
     deviance = np.concatenate([p.deviance for p in parts])
     return PixelFit(
         values=values,
