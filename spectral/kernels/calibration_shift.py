@@ -80,7 +80,7 @@ def _moved_bins(
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def shifts(  # noqa: PLR0912 - one loop, kept flat for the compiler
+def shifts(
     tables: Array,
     levels: Array,
     step: float,

@@ -21,9 +21,7 @@ LARGEST_INFLATION = 0.5  # of the variance, by curvature
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def bend(  # noqa: PLR0912 (loops, not decisions)
-    moment: Array, scale: Array, v: Array, g: Array, y: Array
-) -> None:
+def bend(moment: Array, scale: Array, v: Array, g: Array, y: Array) -> None:
     """Curvature y_j = G_j v, with G_j = sum_e v_je d_e' C^-1 (second derivatives)."""
     rows, materials = scale.shape[0], v.shape[0]
     for e in range(materials):

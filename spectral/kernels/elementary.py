@@ -14,7 +14,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from llvmlite import ir  # type: ignore[import-untyped]
+from llvmlite import ir
 from numba import njit, types
 from numba.extending import intrinsic
 

@@ -167,7 +167,7 @@ def _store(
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def fit_pixels(  # noqa: PLR0915 (scratch arrays, one a line)
+def fit_pixels(
     counts: Array,
     weight: Weight,
     minus_attenuation: Array,

@@ -173,9 +173,7 @@ def inform(moment: Array, c: Array, scale: Array, sound: Array, f: Array) -> Non
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def invert(  # noqa: PLR0912 (loops, not decisions)
-    f: Array, v: Array, sound: Array
-) -> None:
+def invert(f: Array, v: Array, sound: Array) -> None:
     """Inverse v of f by Gauss-Jordan elimination; sound[l] turns 0 where f is singular."""
     materials = f.shape[0]
     for j in range(materials):
@@ -246,7 +244,7 @@ def score(moment: Array, scale: Array, residual: Array, u: Array) -> None:
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def look_ahead(  # noqa: PLR0912 (loops, not decisions)
+def look_ahead(
     moment: Array,
     c: Array,
     scale: Array,

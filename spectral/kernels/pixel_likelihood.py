@@ -41,7 +41,7 @@ def cubic_weights(
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def summarise(  # noqa: PLR0912, PLR0915 - one loop, kept flat for the compiler
+def summarise(
     counts: Array,
     curve: Array,
     by_rate: Array,

@@ -61,7 +61,7 @@ def _hold_back(lane: int, a: Array, u: Array, v: Array, move: Array) -> float:
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
-def advance(  # noqa: PLR0912 (one lane's whole decision, kept in one loop)
+def advance(
     tolerance: float,
     max_steps: int,
     nonnegative: bool,
