@@ -1,7 +1,7 @@
 """How a command ends: what it prints, where, and with which exit code.
 
 0: done. 1: the data do not allow it, said in one sentence on standard error. 2: wrong
-use. The result goes to standard output; progress and messages to standard error.
+use. 130: interrupted from the keyboard, as shells have it. The result goes to standard output; progress and messages to standard error.
 """
 
 from __future__ import annotations
@@ -25,6 +25,7 @@ P = ParamSpec("P")
 
 DATA_DO_NOT_ALLOW = 1
 WRONG_USE = 2
+INTERRUPTED = 130
 
 SAFETY = (
     "This describes measured counts under the assumptions it names; it is no diagnosis "
@@ -79,6 +80,19 @@ def ends_well(command: Callable[P, None]) -> Callable[P, None]:
             raise DataError(message) from error
 
     return wrapped
+
+
+@contextmanager
+def goes_on(output: Path) -> Iterator[None]:
+    """End an interruption by saying that the same command goes on."""
+    try:
+        yield
+    except KeyboardInterrupt:
+        say(
+            f"{output}: interrupted; finished blocks are kept, and the same command "
+            "goes on from them"
+        )
+        raise click.exceptions.Exit(INTERRUPTED) from None
 
 
 def one_line(error: BaseException) -> str:

@@ -46,6 +46,20 @@ class MakeCalibration(Protocol):
     def __call__(self, pixels: tuple[int, int] = (6, 8)) -> Calibration: ...
 
 
+class MakeSeries(Protocol):
+    """Returns a scan of a moving object: a dark, opens before and after, objects."""
+
+    def __call__(
+        self,
+        calibration: Calibration,
+        objects: int,
+        *,
+        seed: int = 1,
+        count_time_s: float = 0.1,
+        drift: float = 0.01,
+    ) -> Scan: ...
+
+
 def _attenuation(energy: NDArray[np.float64]) -> NDArray[np.float64]:
     """Two laws that fall with energy, in 1/mm; they resemble no material."""
     return np.array(
@@ -226,3 +240,62 @@ def made_up_calibration(pixels: tuple[int, int] = (6, 8)) -> Calibration:
 def make_calibration() -> MakeCalibration:
     """A function that makes a calibration, as a wedge scan might have left it."""
     return made_up_calibration
+
+
+def made_up_series(
+    calibration: Calibration,
+    objects: int,
+    *,
+    seed: int = 1,
+    count_time_s: float = 0.1,
+    drift: float = 0.01,
+) -> Scan:
+    """Counts drawn from a calibration's own pixels, with a slowly rising output."""
+    rng = np.random.default_rng(seed)
+    role = ("dark", "open", "open", *["object"] * objects, "open", "open")
+    rows, columns = calibration.shape
+    flat = np.arange(rows * columns)
+    across = np.linspace(0.1, 0.9, columns)
+    ready = [
+        calibration.expected_bins(
+            np.array([[thick * 8.0, (1.0 - thick) * 2.0]]), np.full(1, 3.0),
+            np.ones(1), flat,
+        )[:, 0]
+        for thick in (0.15, 0.5, 0.85)
+    ]  # fmt: skip
+    free = calibration.expected_bins(
+        np.zeros((1, 2)), np.full(1, 3.0), np.ones(1), flat
+    )[:, 0]
+    counts = np.zeros((len(role), LEVELS_KEV.size, rows, columns), np.uint32)
+    where = np.tile(across, rows)
+    for i, name in enumerate(role):
+        if name == "dark":
+            continue
+        rate = free
+        if name == "object":
+            rate = np.choose(((where * 9 + i) % 3).astype(int)[:, None], ready)
+        mean = rate * count_time_s * (1.0 + drift * i / len(role))
+        bins = rng.poisson(mean)
+        above = np.cumsum(bins[:, ::-1], axis=1)[:, ::-1]
+        counts[i] = above.T.reshape(-1, rows, columns)
+    beam = np.array([name != "dark" for name in role])
+    known = np.array([name != "object" for name in role])
+    return Scan(
+        counts=CountsInMemory(counts),
+        thresholds_kev=calibration.thresholds_kev,
+        role=role,
+        thickness_mm=np.where(known[:, None], 0.0, np.nan) * np.ones(2),
+        materials=calibration.materials,
+        count_time_s=np.full(len(role), count_time_s),
+        current_ma=np.where(beam, 3.0, 0.0),
+        voltage_kv=calibration.voltage_kv,
+        filters=(Filter(material="Al", thickness_mm=2.0),),
+        pixel_mask=np.zeros((rows, columns), np.uint32),
+        title="a made-up series",
+    )
+
+
+@pytest.fixture(scope="session")
+def make_series() -> MakeSeries:
+    """A function that makes a series of object exposures for a calibration."""
+    return made_up_series

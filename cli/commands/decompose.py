@@ -10,12 +10,21 @@ import numpy as np
 from spectral.calibration.calibration_file import read_calibration
 from spectral.decomposition.cluster import on_cluster
 from spectral.decomposition.decomposer import MaterialDecomposer
+from spectral.decomposition.object_scan import chosen_exposures
 from spectral.decomposition.series import decompose_series
 from spectral.decomposition.summary import maps_summary, maps_text
 from spectral.scans.maps_file import read_maps
 from spectral.scans.script import open_scan
 
-from ..outcome import SAFETY, ends_well, json_option, say, scan_argument, show
+from ..outcome import (
+    SAFETY,
+    ends_well,
+    goes_on,
+    json_option,
+    say,
+    scan_argument,
+    show,
+)
 from ..stages import stages
 
 SHOWN = 32
@@ -88,6 +97,9 @@ def decompose(
     filters and thresholds. Open exposures in SCAN set the tube's output. An
     interrupted run goes on when the same command is given again.
     """
+    if output.exists() and any(map(output.samefile, (calibration_path, scan_path))):
+        msg = f"{output} is read by this command; name another output"
+        raise click.UsageError(msg)
     calibration = read_calibration(calibration_path)
     scan = open_scan(scan_path)
     options = {
@@ -98,8 +110,16 @@ def decompose(
     decomposer = MaterialDecomposer(calibration, threads=threads, **options)
     compute = None
     if scheduler is not None:
-        compute = on_cluster(scheduler, calibration_path, scan_path, options)
-    with stages() as tell:
+        compute = on_cluster(
+            scheduler,
+            calibration_path,
+            scan_path,
+            options,
+            digests=(calibration.digest, scan.digest),
+        )
+    total = chosen_exposures(scan, exposures or None).size
+    with goes_on(output), stages(decompose=(total, "exposures")) as tell:
+        tell("prepare", 0.0)
         run = decompose_series(
             decomposer,
             scan,

@@ -4,21 +4,24 @@ from __future__ import annotations
 
 from functools import lru_cache
 from importlib import import_module
+from threading import Lock
 from typing import TYPE_CHECKING, Any
 
-from spectral.errors import InputError
+from spectral.errors import InputError, ScanError
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterator
+    from collections.abc import Generator, Iterator
     from pathlib import Path
 
     from spectral.decomposition.decomposer import MaterialDecomposer
     from spectral.decomposition.maps import Maps
+    from spectral.decomposition.series import Compute
     from spectral.scans.scan import Scan
 
 IN_FLIGHT_PER_WORKER = 2
-TRIES = 10
-"""Times that a block is given to another worker when one dies with it."""
+TRIES = 2
+"""Times that a block is tried again when reading its counts fails."""
+_ONE_BLOCK_AT_A_TIME = Lock()
 
 
 def on_cluster(
@@ -26,7 +29,9 @@ def on_cluster(
     calibration_path: Path,
     scan_path: Path,
     options: dict[str, bool],
-) -> Callable[[list[list[int]]], Iterator[tuple[int, Maps]]]:
+    *,
+    digests: tuple[str, str],
+) -> Compute:
     """A way to compute blocks for `spectral.decomposition.series.decompose_series`.
 
     Parameters
@@ -37,11 +42,15 @@ def on_cluster(
         Both must be readable by every worker under these names.
     options : dict of str to bool
         Keyword arguments of `MaterialDecomposer`.
+    digests : (str, str)
+        Of calibration and scan: workers must read the same.
 
     Raises
     ------
     InputError
         If dask.distributed is not installed, or no scheduler answers.
+    ScanError
+        From the run: if the scheduler is lost, or one block ends worker after worker.
 
     Notes
     -----
@@ -57,51 +66,63 @@ def on_cluster(
             "extra: pip install 'wedgewright[cluster]'"
         )
         raise InputError(msg) from error
-    paths = (str(calibration_path.resolve()), str(scan_path.resolve()))
+    job = (
+        str(calibration_path.resolve()),
+        str(scan_path.resolve()),
+        tuple(sorted(options.items())),
+        digests,
+    )
 
-    def run(blocks: list[list[int]]) -> Iterator[tuple[int, Maps]]:
+    def run(blocks: list[list[int]]) -> Generator[tuple[int, Maps]]:
+        if not blocks:
+            return
         try:
             client = distributed.Client(address, timeout="20s")
-        except OSError as error:
+        except (OSError, ValueError) as error:
             msg = f"no scheduler answers at {address} ({error})"
             raise InputError(msg) from error
         with client:
-            yield from _stream(
-                client,
-                distributed.as_completed(),
-                blocks,
-                paths,
-                tuple(sorted(options.items())),
-            )
+            try:
+                yield from _stream(client, distributed.as_completed(), blocks, job)
+            except distributed.KilledWorker as error:
+                msg = (
+                    f"several workers of {address} died with the same block, perhaps "
+                    "for want of memory; finished blocks are kept: give the workers "
+                    "more, then the same command goes on"
+                )
+                raise ScanError(msg) from error
+            except (
+                distributed.CancelledError,
+                distributed.comm.CommClosedError,
+            ) as error:
+                msg = (
+                    f"the scheduler at {address} is gone; finished blocks are kept: "
+                    "start it again, then the same command goes on"
+                )
+                raise ScanError(msg) from error
 
     return run
 
 
 def _stream(
-    client: Any,
-    queue: Any,
-    blocks: list[list[int]],
-    paths: tuple[str, str],
-    options: tuple[tuple[str, bool], ...],
+    client: Any, queue: Any, blocks: list[list[int]], job: tuple[Any, ...]
 ) -> Iterator[tuple[int, Maps]]:
-    def submit(place: int) -> Any:
-        return client.submit(
-            block_maps, *paths, options, blocks[place], pure=False, retries=TRIES
-        )
-
     waiting = iter(range(len(blocks)))
     place_of: dict[str, int] = {}
 
     def feed() -> None:
-        place = next(waiting, None)
-        if place is not None:
-            future = submit(place)
+        wanted = IN_FLIGHT_PER_WORKER * max(len(client.nthreads()), 1)
+        while len(place_of) < wanted:
+            place = next(waiting, None)
+            if place is None:
+                return
+            future = client.submit(
+                block_maps, *job, blocks[place], pure=False, retries=TRIES
+            )
             place_of[future.key] = place
             queue.add(future)
 
-    workers = max(len(client.scheduler_info()["workers"]), 1)
-    for _ in range(IN_FLIGHT_PER_WORKER * workers):
-        feed()
+    feed()
     for future in queue:
         maps = future.result()
         place = place_of.pop(future.key)
@@ -114,16 +135,32 @@ def block_maps(
     calibration_path: str,
     scan_path: str,
     options: tuple[tuple[str, bool], ...],
+    digests: tuple[str, str],
     exposures: list[int],
 ) -> Maps:
-    """Maps of some exposures, on a worker that keeps the decomposer for the next."""
-    decomposer, scan = _worker_state(calibration_path, scan_path, options)
-    return decomposer.block(scan, exposures)
+    """Maps of some exposures, on a worker that keeps the decomposer for the next.
+
+    A worker of several threads reads blocks side by side and solves one of them at a
+    time, with all its threads.
+
+    Raises
+    ------
+    ScanError
+        If this worker finds other files under those names.
+    """
+    with _ONE_BLOCK_AT_A_TIME:
+        decomposer, scan = _worker_state(calibration_path, scan_path, options, digests)
+    counts = scan.counts.read(exposures)
+    with _ONE_BLOCK_AT_A_TIME:
+        return decomposer.maps_of(counts, exposures, scan.count_limit)
 
 
-@lru_cache(maxsize=2)
+@lru_cache(maxsize=1)
 def _worker_state(
-    calibration_path: str, scan_path: str, options: tuple[tuple[str, bool], ...]
+    calibration_path: str,
+    scan_path: str,
+    options: tuple[tuple[str, bool], ...],
+    digests: tuple[str, str],
 ) -> tuple[MaterialDecomposer, Scan]:
     from spectral.calibration.calibration_file import (  # noqa: PLC0415 - workers only
         read_calibration,
@@ -134,7 +171,23 @@ def _worker_state(
     from spectral.scans.script import open_scan  # noqa: PLC0415 - workers only
 
     scan = open_scan(scan_path)
+    calibration = read_calibration(calibration_path)
+    if (calibration.digest, scan.digest) != digests:
+        msg = (
+            f"a worker reads other files as {calibration_path} and {scan_path}; all "
+            "workers need the same files under the same names"
+        )
+        raise ScanError(msg)
     decomposer = MaterialDecomposer(
-        read_calibration(calibration_path), threads=1, **dict(options)
+        calibration, threads=_own_threads(), **dict(options)
     )
     return decomposer.fit(scan), scan
+
+
+def _own_threads() -> int:
+    """Threads of the worker that this runs on."""
+    distributed: Any = import_module("distributed")
+    try:
+        return int(distributed.get_worker().state.nthreads)
+    except ValueError:
+        return 1

@@ -30,8 +30,9 @@ FIELD_UNITS: dict[str, str] = {
     "flags": "",
 }
 _OWN_FIELDS = ("program", "version", "date")
-_CHUNK_EXPOSURES = 16
 _CHUNK_PIXELS = 64
+CHUNK_EXPOSURES = 16
+"""Most exposures in a chunk: reading one exposure reads its neighbours in the chunk."""
 
 
 def write_maps(maps: Maps, path: str | Path) -> None:
@@ -83,12 +84,15 @@ def create_maps(
     material: Sequence[str],
     exposure: NDArray[np.int32],
     pixels: tuple[int, ...],
+    at_once: int = CHUNK_EXPOSURES,
 ) -> None:
     """Lay out an empty maps file, to be filled some exposures at a time.
 
-    Chunks of sixteen exposures by 64 x 64 pixels let a whole exposure and a single
-    pixel's series both open without reading the rest.
+    Chunks of up to sixteen exposures by 64 x 64 pixels let a whole exposure and a
+    single pixel's series both open without reading the rest. Filled `at_once`
+    exposures at a time, each chunk is compressed once.
     """
+    together = min(at_once, CHUNK_EXPOSURES)
     n, m = len(exposure), len(material)
     file.attrs["default"] = "entry"
     entry = new_group(file, "entry", "NXentry")
@@ -116,8 +120,10 @@ def create_maps(
             name,
             (n, *inner[name], *pixels),
             np.uint16 if whole else np.float32,
-            chunks=(min(n, _CHUNK_EXPOSURES), *(1 for _ in inner[name]), *tile),
-            compression="gzip" if whole else None,
+            chunks=(min(n, together), *(1 for _ in inner[name]), *tile),
+            compression="gzip",
+            compression_opts=1,
+            shuffle=True,
             fillvalue=0 if whole else np.nan,
         )
         if units:

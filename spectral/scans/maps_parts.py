@@ -10,18 +10,24 @@ from __future__ import annotations
 import fcntl
 import json
 import os
-import shutil
-from contextlib import contextmanager
+import zipfile
+from contextlib import contextmanager, suppress
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
 from spectral.errors import ScanError
-from spectral.scans.maps_file import check_flags, create_maps, fill_maps, write_process
-from spectral.scans.nexus import written_whole
+from spectral.scans.maps_file import (
+    CHUNK_EXPOSURES,
+    check_flags,
+    create_maps,
+    fill_maps,
+    write_process,
+)
+from spectral.scans.nexus import on_disk, written_whole
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Sequence
+    from collections.abc import Iterator, Mapping, Sequence
     from pathlib import Path
 
     from spectral.decomposition.maps import Maps
@@ -35,6 +41,8 @@ FIELDS = (
     "deviance",
     "flags",
 )
+JOB = "job.json"
+LOCK = "lock"
 
 
 class MapsParts:
@@ -44,49 +52,81 @@ class MapsParts:
     ----------
     path : Path
         The maps file to be.
-    job : dict
-        What is being done, ready for JSON: blocks of another job are refused.
+    job : mapping of str to str
+        What is being done, each fact under a word for people: blocks of another job
+        are refused.
 
     Raises
     ------
     ScanError
-        If another run is writing the same output, or blocks of another job lie there.
+        If another run is writing the same output, blocks of another job lie there, or
+        the disk takes no more.
     """
 
-    def __init__(self, path: Path, job: dict[str, Any]) -> None:
+    def __init__(self, path: Path, job: Mapping[str, str]) -> None:
         self.path = path
         self.folder = path.with_name(f".{path.name}.unfinished")
-        self.job = job
+        self.job = dict(job)
 
     @contextmanager
     def held(self) -> Iterator[MapsParts]:
         """Hold the output for one run; the hold ends with the process."""
         self.folder.mkdir(exist_ok=True)
-        with (self.folder / "lock").open("w") as lock:
+        with (self.folder / LOCK).open("w") as lock:
             try:
                 fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
-            except OSError as error:
+            except BlockingIOError as error:
                 msg = (
                     f"{self.path}: another run is writing this output; wait for it or "
                     "name another output"
                 )
                 raise ScanError(msg) from error
-            self._claim()
+            with self._kept():
+                self._claim()
             yield self
+        # a disk shared by several machines may keep the name of a file while it is open
+        with suppress(OSError):
+            self.folder.rmdir()
 
     def _claim(self) -> None:
         """Write down the job, or compare with the one that lies there."""
-        record = self.folder / "job.json"
-        text = json.dumps(self.job, indent=1, sort_keys=True)
-        if not record.exists():
-            _replace_text(record, text)
+        record = self.folder / JOB
+        if record.exists():
+            differs = _differing(json.loads(record.read_text()), self.job)
+            if differs:
+                msg = (
+                    f"{self.path}: unfinished maps of another job lie in {self.folder} "
+                    f"(other {' and '.join(differs)}); finish that job, delete the "
+                    "folder, or name another output"
+                )
+                raise ScanError(msg)
+            self._remove(lambda name: name.endswith((".new", ".part")))
             return
-        if record.read_text() != text:
+        self._remove(lambda name: name != LOCK)
+        new = record.with_suffix(".new")
+        new.write_text(json.dumps(self.job, indent=1, sort_keys=True))
+        on_disk(new)
+        new.replace(record)
+        on_disk(self.folder)
+
+    def _remove(self, which: Any) -> None:
+        for item in self.folder.iterdir():
+            if which(item.name):
+                item.unlink()
+
+    @contextmanager
+    def _kept(self) -> Iterator[None]:
+        """Say, when the disk takes no more, that what is there stays there."""
+        try:
+            yield
+        except (OSError, RuntimeError) as error:  # h5py raises either
+            number = getattr(error, "errno", None)
+            why = os.strerror(number) if number else " ".join(str(error).split())
             msg = (
-                f"{self.path}: unfinished maps of another job lie in {self.folder}; "
-                "finish that job, delete the folder, or name another output"
+                f"{self.path}: the disk takes no more ({why}); finished blocks are kept "
+                f"in {self.folder}: make room, then the same command goes on from them"
             )
-            raise ScanError(msg)
+            raise ScanError(msg) from error
 
     def _part(self, block: int) -> Path:
         return self.folder / f"block_{block:06d}.npz"
@@ -101,11 +141,11 @@ class MapsParts:
         part = self._part(block)
         new = part.with_suffix(".new")
         try:
-            with new.open("wb") as file:
-                np.savez(file, **{name: getattr(maps, name) for name in FIELDS})
-                file.flush()
-                os.fsync(file.fileno())
-            new.replace(part)
+            with self._kept():
+                with new.open("wb") as file:
+                    np.savez(file, **{name: getattr(maps, name) for name in FIELDS})
+                on_disk(new)
+                new.replace(part)
         finally:
             new.unlink(missing_ok=True)
 
@@ -113,10 +153,8 @@ class MapsParts:
         self, material: Sequence[str], blocks: int, process: dict[str, str]
     ) -> None:
         """Make the maps file of all blocks, in order, and remove them."""
-        exposure = np.concatenate(
-            [self._read(block, ("exposure",))["exposure"] for block in range(blocks)]
-        )
-        with written_whole(self.path) as file:
+        exposures = [self._read(b, ("exposure",))["exposure"] for b in range(blocks)]
+        with self._kept(), written_whole(self.path, folder=self.folder) as file:
             start = 0
             for block in range(blocks):
                 maps = _block(material, self._read(block, FIELDS))
@@ -124,17 +162,37 @@ class MapsParts:
                     create_maps(
                         file,
                         material=material,
-                        exposure=exposure,
+                        exposure=np.concatenate(exposures),
                         pixels=maps.deviance.shape[1:],
+                        at_once=len(maps.exposure),
                     )
                 fill_maps(file, maps, start=start)
                 start += len(maps.exposure)
             write_process(file, process)
-        shutil.rmtree(self.folder)
+        # the job's name goes last: blocks without one would not be known for what they are
+        self._remove(lambda name: name not in {JOB, LOCK})
+        for name in (JOB, LOCK):
+            (self.folder / name).unlink()
 
     def _read(self, block: int, names: Sequence[str]) -> dict[str, Any]:
-        with np.load(self._part(block)) as stored:
-            return {name: stored[name] for name in names}
+        part = self._part(block)
+        try:
+            with np.load(part) as stored:
+                return {name: stored[name] for name in names}
+        except (OSError, ValueError, KeyError, EOFError, zipfile.BadZipFile) as error:
+            part.unlink(missing_ok=True)
+            msg = (
+                f"{self.path}: the disk has damaged a finished block, which is now "
+                "removed; give the same command again to make up for it"
+            )
+            raise ScanError(msg) from error
+
+
+def exposures_at_once(fitting: int) -> int:
+    """Exposures in a block of which so many fit: whole chunks if more than one."""
+    if fitting <= CHUNK_EXPOSURES:
+        return max(fitting, 1)
+    return fitting - fitting % CHUNK_EXPOSURES
 
 
 def _block(material: Sequence[str], arrays: dict[str, Any]) -> Maps:
@@ -143,7 +201,5 @@ def _block(material: Sequence[str], arrays: dict[str, Any]) -> Maps:
     return Maps(material=tuple(material), **arrays)
 
 
-def _replace_text(path: Path, text: str) -> None:
-    new = path.with_suffix(".new")
-    new.write_text(text)
-    new.replace(path)
+def _differing(one: dict[str, str], other: dict[str, str]) -> list[str]:
+    return sorted(k for k in one.keys() | other.keys() if one.get(k) != other.get(k))

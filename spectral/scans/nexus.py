@@ -52,10 +52,19 @@ def opened(path: Path) -> Iterator[h5py.File]:
 
 
 @contextmanager
-def written_whole(path: Path) -> Iterator[h5py.File]:
-    """Open a new HDF5 file that appears under its name only when it is complete."""
+def written_whole(path: Path, *, folder: Path | None = None) -> Iterator[h5py.File]:
+    """Open a new HDF5 file that appears under its name only when it is complete.
+
+    Parameters
+    ----------
+    path : Path
+    folder : Path, optional
+        Where the file grows, on the same disk; beside its name by default.
+    """
     handle, name = tempfile.mkstemp(
-        prefix=f".{path.name}.", suffix=".part", dir=path.parent
+        prefix=f".{path.name}.",
+        suffix=".part",
+        dir=path.parent if folder is None else folder,
     )
     os.close(handle)
     part = Path(name)
@@ -65,9 +74,20 @@ def written_whole(path: Path) -> Iterator[h5py.File]:
         mask = os.umask(0)
         os.umask(mask)
         part.chmod(0o666 & ~mask)
+        on_disk(part)
         part.replace(path)
+        on_disk(path.parent)
     finally:
         part.unlink(missing_ok=True)
+
+
+def on_disk(path: Path) -> None:
+    """Wait until a file, or a folder's names, would survive the machine's end."""
+    handle = os.open(path, os.O_RDONLY)
+    try:
+        os.fsync(handle)
+    finally:
+        os.close(handle)
 
 
 def plain(value: object) -> str:
