@@ -1,0 +1,582 @@
+"""Faults planted into wedge scans: which are found, and are they named right?
+
+Run ``python tests/benchmarks/planted_faults.py``; it prints one table. Each scan is drawn
+event by event from a virtual detector; a fault then changes what truly was (exposed
+anew), what was stored, or what the file says.
+"""
+
+from __future__ import annotations
+
+import argparse
+import re
+import sys
+import tempfile
+import time
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from spectral.calibration.calibrator import WedgeCalibrator
+from spectral.demo.scenario import ALUMINIUM, POLYMER, STACKS_MM, THRESHOLDS_KEV
+from spectral.demo.scenario import detector as demonstration_detector
+from spectral.errors import SpectralError
+from spectral.physics.cross_sections import k_edge_kev
+from spectral.scans.scan import CountsInMemory, Filter, Scan
+from spectral.virtual.pulse_library import PulseLibrary, build_library, energy_borders
+from spectral.virtual.tube import VirtualTube
+from spectral.virtual.virtual_scan import simulate_scan
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+
+    from numpy.typing import NDArray
+
+PIXELS = 14
+CURRENT_MA, COUNT_TIME_S = 4.0, 0.1
+DRIFT_STEP = 5e-4
+TUBE = VirtualTube(photons_per_mas=16000.0, drift_step=DRIFT_STEP, heel=0.02)
+DETECTOR = demonstration_detector()
+NAMES = (POLYMER.name, ALUMINIUM.name)
+LARGEST_MM = np.array(STACKS_MM).max(axis=0)
+WITHIN = 3.0
+"""Stated errors that a named value may be off by."""
+
+
+def template(seed: int) -> Scan:
+    """What is exposed: darks, opens at three currents, twenty stacks, opens again."""
+    order = np.random.default_rng([seed, 1]).permutation(len(STACKS_MM))
+    none = [(0.0, 0.0)]
+    stacks = [STACKS_MM[i] for i in order]
+    half = len(stacks) // 2
+    thickness = none * 6 + stacks[:half] + none + stacks[half:] + none * 4
+    role = ["dark"] * 2 + ["open"] * 4 + ["wedge"] * half + ["open"]
+    role += ["wedge"] * (len(stacks) - half) + ["open"] * 3 + ["dark"]
+    current = np.full(len(role), CURRENT_MA)
+    seconds = np.full(len(role), COUNT_TIME_S)
+    current[[4, -3]], current[[5, -2]] = 2.0, 0.8
+    seconds[[5, -2]] = 2 * COUNT_TIME_S
+    current[np.array(role) == "dark"] = 0.0
+    return Scan(
+        counts=CountsInMemory(
+            np.zeros((len(role), len(THRESHOLDS_KEV), PIXELS, PIXELS), np.uint32)
+        ),
+        thresholds_kev=np.array(THRESHOLDS_KEV),
+        role=tuple(role),
+        thickness_mm=np.array(thickness),
+        materials=(POLYMER, ALUMINIUM),
+        count_time_s=seconds,
+        current_ma=current,
+        voltage_kv=90.0,
+        filters=(Filter(material="Al", thickness_mm=2.0),),
+        sensor_material="CdTe",
+        sensor_thickness_mm=1.0,
+        pixel_size_um=(120.0, 120.0),
+        pixel_mask=np.zeros((PIXELS, PIXELS), np.uint32),
+        source="planted scan",
+    )
+
+
+def sensor_library() -> PulseLibrary:
+    """The sensor's pulses, the same for all seeds."""
+    edges = tuple(k_edge_kev(e) for e in ("H", "C", "N", "O", "Al"))
+    return build_library(DETECTOR.sensor, energy_borders(90.0, edges), seed=1)
+
+
+@dataclass(frozen=True, kw_only=True)
+class Bench:
+    """A clean scan, and the means to expose parts of it otherwise."""
+
+    seed: int
+    clean: Scan
+    library: PulseLibrary
+
+    @property
+    def counts(self) -> NDArray[np.uint32]:
+        """A copy of the clean counts."""
+        return self.clean.counts.read(range(self.clean.shape[0])).copy()
+
+    def exposed(
+        self,
+        exposures: NDArray[np.int64] | list[int],
+        *,
+        said: Scan | None = None,
+        tube: VirtualTube = TUBE,
+        **truth: Any,
+    ) -> NDArray[np.uint32]:
+        """Counts of some exposures under other conditions (as `simulate_scan`)."""
+        run = simulate_scan(
+            self.clean if said is None else said,
+            DETECTOR,
+            tube,
+            seed=self.seed,
+            library=self.library,
+            on_demand=True,
+            **truth,
+        )
+        return run.scan.counts.read(exposures)
+
+    def with_exposure(self, exposure: int, **truth: Any) -> Scan:
+        """The clean scan, one exposure of which was taken otherwise than it says."""
+        counts = self.counts
+        counts[exposure] = self.exposed([exposure], **truth)[0]
+        return self.clean.with_counts(counts)
+
+
+def bench(seed: int, folder: Path, library: PulseLibrary) -> Bench:
+    """The clean scan of a seed, from a file if it was simulated before."""
+    file = folder / f"clean_{seed}_{PIXELS}.npy"
+    made = Bench(seed=seed, clean=template(seed), library=library)
+    if not file.exists():
+        np.save(file, made.exposed(range(made.clean.shape[0])))  # type: ignore[arg-type]
+    return replace(made, clean=made.clean.with_counts(np.load(file)))
+
+
+@dataclass(frozen=True, kw_only=True)
+class Planted:
+    """A scan with a fault.
+
+    Attributes
+    ----------
+    scan : Scan
+    faulty : tuple of int
+        Exposures to be found; none for a change that goes through the whole scan.
+    named : callable
+        Place of the truth among the explanations in the sentences (one for each
+        exposure, and those on trends), from 1; 0 if it is not there.
+    """
+
+    scan: Scan
+    faulty: tuple[int, ...]
+    named: Callable[[dict[int, str], list[str]], int]
+
+
+def explanations(said: str) -> list[str]:
+    """What a sentence says would fit, the likeliest first."""
+    fits = said.removesuffix("; left out").partition("the counts fit ")[2]
+    first, _, others = fits.partition(" (or ")
+    return [first, *others.removesuffix(")").split("; or ")] if fits else []
+
+
+def rank(said: str, right: Callable[[str], bool]) -> int:
+    """Place of the first right explanation, from 1; 0 if there is none."""
+    every = enumerate(explanations(said), start=1)
+    return next((place for place, words in every if right(words)), 0)
+
+
+def near(words: str, pattern: str, truth: float) -> bool:
+    """Whether words hold a value with its error, and the truth within it."""
+    found = re.search(rf"(-?[\d.]+) \+- ([\d.]+) {pattern}", words)
+    if found is None:
+        return False
+    return abs(float(found[1]) - truth) < WITHIN * float(found[2])
+
+
+def layer_alone(words: str, name: str, truth: float) -> bool:
+    """Whether words blame this layer alone, and the truth is within its error."""
+    return words.count("+-") == 1 and near(words, f"mm {name}", truth)
+
+
+def has_stack(words: str, truth: NDArray[np.float64]) -> bool:
+    """Whether a stack of the list, or a fitted one, is the true one."""
+    if " +- " not in words:
+        stated = words.partition(", the stack of")[0]
+        layers = dict.fromkeys(NAMES, 0.0)
+        for mm, name in re.findall(r"([\d.]+) mm (\w+)", stated):
+            layers[name] = float(mm)
+        return bool(np.allclose(list(layers.values()), truth))
+    return all(
+        near(words, f"mm {name}", mm) or (mm == 0.0 and name not in words)
+        for name, mm in zip(NAMES, truth, strict=True)
+    )
+
+
+def wedge_steps(
+    scan: Scan, chosen: Callable[[NDArray[np.float64]], bool]
+) -> NDArray[np.int64]:
+    """Wedge exposures whose stack, in shares of the largest, is chosen."""
+    share = scan.thickness_mm / LARGEST_MM
+    return np.array([e for e in scan.exposures("wedge") if chosen(share[e])], np.int64)
+
+
+def thickness(off: float) -> Callable[[Bench, np.random.Generator], Planted]:
+    """One layer of a step, at least a quarter of the thickest, is off by a share."""
+
+    def plant(bench: Bench, rng: np.random.Generator) -> Planted:
+        material = bench.seed % 2
+        step = int(rng.choice(wedge_steps(bench.clean, lambda s: s[material] > 0.25)))
+        truth = bench.clean.thickness_mm.copy()
+        truth[step, material] *= 1.0 + off * rng.choice([-1.0, 1.0])
+        mm, name = float(truth[step, material]), NAMES[material]
+        return Planted(
+            scan=bench.with_exposure(step, true_thickness_mm=truth),
+            faulty=(step,),
+            named=lambda said, _: rank(
+                said[step], lambda words: layer_alone(words, name, mm)
+            ),
+        )
+
+    return plant
+
+
+def said_otherwise(bench: Bench, said: dict[int, NDArray[np.float64]]) -> Scan:
+    """The clean scan with other stacks in its list."""
+    list_mm = bench.clean.thickness_mm.copy()
+    for e, stack in said.items():
+        list_mm[e] = stack
+    return replace(bench.clean, thickness_mm=list_mm)
+
+
+def materials_exchanged(bench: Bench, rng: np.random.Generator) -> Planted:
+    """A step's two thicknesses stand in each other's column."""
+    mm = bench.clean.thickness_mm
+    chosen = [
+        int(e)
+        for e in bench.clean.exposures("wedge")
+        if mm[e, 0] != mm[e, 1] and max(mm[e]) <= 15.0
+    ]
+    step = int(rng.choice(chosen))
+    return Planted(
+        scan=said_otherwise(bench, {step: mm[step, ::-1]}),
+        faulty=(step,),
+        named=lambda said, _: rank(said[step], lambda w: has_stack(w, mm[step])),
+    )
+
+
+def swapped(bench: Bench, rng: np.random.Generator) -> Planted:
+    """Two steps stand in each other's place in the list."""
+    mm = bench.clean.thickness_mm
+    a, b = map(int, rng.choice(bench.clean.exposures("wedge"), 2, replace=False))
+    return Planted(
+        scan=said_otherwise(bench, {a: mm[b], b: mm[a]}),
+        faulty=(a, b),
+        named=lambda said, _: (
+            f"swapped with exposure {b};" in said[a]
+            and f"swapped with exposure {a};" in said[b]
+        ),
+    )
+
+
+def copied(bench: Bench, target: int, source: int) -> Planted:
+    """One exposure's image in the place of another's."""
+    counts = bench.counts
+    counts[target] = counts[source]
+    return Planted(
+        scan=bench.clean.with_counts(counts),
+        faulty=(target,),
+        named=lambda said, _: f"counts are those of exposure {source} " in said[target],
+    )
+
+
+def saved_twice(bench: Bench, rng: np.random.Generator) -> Planted:
+    """An earlier step's image saved under a later step's label."""
+    steps = np.sort(rng.choice(bench.clean.exposures("wedge"), 2, replace=False))
+    return copied(bench, int(steps[1]), int(steps[0]))
+
+
+def stale_image(bench: Bench, rng: np.random.Generator) -> Planted:
+    """The image of the exposure before, saved again."""
+    steps = wedge_steps(bench.clean, lambda _: True)
+    step = int(rng.choice(steps[np.isin(steps - 1, steps)]))
+    return copied(bench, step, step - 1)
+
+
+def not_moved(bench: Bench, rng: np.random.Generator) -> Planted:
+    """The stack of the exposure before still stood in the beam."""
+    steps = wedge_steps(bench.clean, lambda _: True)
+    step = int(rng.choice(steps[np.isin(steps - 1, steps)]))
+    truth = bench.clean.thickness_mm.copy()
+    truth[step] = truth[step - 1]
+    return Planted(
+        scan=bench.with_exposure(step, true_thickness_mm=truth),
+        faulty=(step,),
+        named=lambda said, _: rank(said[step], lambda w: has_stack(w, truth[step])),
+    )
+
+
+def saturated(bench: Bench, rng: np.random.Generator) -> Planted:
+    """A thin step counted longer, as the file says, than its counters can hold."""
+    step = int(rng.choice(wedge_steps(bench.clean, lambda s: s.max() < 0.35)))
+    limit = int(1.3 * np.quantile(bench.counts, 0.999))
+    seconds = bench.clean.count_time_s.copy()
+    seconds[step] *= 6.0
+    said = replace(bench.clean, count_time_s=seconds)
+    counts = bench.counts
+    counts[step] = np.minimum(bench.exposed([step], said=said)[0], limit)
+    return Planted(
+        scan=replace(said.with_counts(counts), count_limit=limit),
+        faulty=(step,),
+        named=lambda text, _: "stand at the counter's limit" in text[step],
+    )
+
+
+def half_the_frames(bench: Bench, rng: np.random.Generator) -> Planted:
+    """Half of an exposure's frames are missing from its sum."""
+    step = int(rng.choice(bench.clean.exposures("wedge")))
+    seconds = bench.clean.count_time_s.copy()
+    seconds[step] *= 0.5
+    counts = bench.counts
+    said = replace(bench.clean, count_time_s=seconds)
+    counts[step] = bench.exposed([step], said=said)[0]
+    return Planted(
+        scan=bench.clean.with_counts(counts),
+        faulty=(step,),
+        named=lambda text, _: rank(text[step], lambda w: near(w, "% of that", 50.0)),
+    )
+
+
+def rows_missing(bench: Bench, rng: np.random.Generator) -> Planted:
+    """The last third of an exposure's rows was never stored."""
+    step = int(rng.choice(bench.clean.exposures("wedge")))
+    counts = bench.counts
+    counts[step, :, -(PIXELS // 3) :] = 0
+    return Planted(
+        scan=bench.clean.with_counts(counts),
+        faulty=(step,),
+        named=lambda text, _: "of the pixels count nothing" in text[step],
+    )
+
+
+def current(off: float) -> Callable[[Bench, np.random.Generator], Planted]:
+    """The tube's current was not what the file says."""
+
+    def plant(bench: Bench, rng: np.random.Generator) -> Planted:
+        step = int(rng.choice(bench.clean.exposures("wedge")))
+        factor = 1.0 + off * float(rng.choice([-1.0, 1.0]))
+        assert bench.clean.current_ma is not None
+        truth = bench.clean.current_ma.copy()
+        truth[step] *= factor
+        return Planted(
+            scan=bench.with_exposure(step, true_current_ma=truth),
+            faulty=(step,),
+            named=lambda said, _: rank(
+                said[step], lambda words: near(words, "% of that", 100 * factor)
+            ),
+        )
+
+    return plant
+
+
+def open_with_step(bench: Bench, rng: np.random.Generator) -> Planted:
+    """A stack was left in the beam of an open exposure."""
+    opens = bench.clean.exposures("open")
+    e = int(rng.choice(opens))
+    truth = bench.clean.thickness_mm.copy()
+    truth[e] = truth[rng.choice(bench.clean.exposures("wedge"))]
+    return Planted(
+        scan=bench.with_exposure(e, true_thickness_mm=truth),
+        faulty=(e,),
+        named=lambda said, _: rank(said[e], lambda w: has_stack(w, truth[e])),
+    )
+
+
+def step_was_open(bench: Bench, rng: np.random.Generator) -> Planted:
+    """A step that never stood in the beam."""
+    step = int(rng.choice(bench.clean.exposures("wedge")))
+    truth = bench.clean.thickness_mm.copy()
+    truth[step] = 0.0
+    return Planted(
+        scan=bench.with_exposure(step, true_thickness_mm=truth),
+        faulty=(step,),
+        named=lambda said, _: rank(said[step], "an open beam".__eq__),
+    )
+
+
+def warm_up(bench: Bench, _: np.random.Generator) -> Planted:
+    """Five per cent of the tube's output are missing at first."""
+    tube = replace(TUBE, warm_up=0.05, warm_up_exposures=6.0)
+    everything = np.arange(bench.clean.shape[0])
+    late = 1.0 - 0.05 * np.exp(-everything[2:-1] / 6.0)
+    change = 100 * (late[-3:].mean() / late[:3].mean() - 1.0)
+    # the random walk that the tube takes besides, over the scan
+    walk = 100 * DRIFT_STEP * np.sqrt(everything.size)
+
+    def named(_: dict[int, str], trends: list[str]) -> int:
+        found = re.search(r"output changed by ([-+][\d.]+) %", " ".join(trends))
+        return bool(found) and abs(float(found[1]) - change) < WITHIN * walk  # type: ignore[index]
+
+    return Planted(
+        scan=bench.clean.with_counts(bench.exposed(everything, tube=tube)),
+        faulty=(),
+        named=named,
+    )
+
+
+def polarisation(bench: Bench, _: np.random.Generator) -> Planted:
+    """All thresholds sink by 0.3 keV in the course of the scan."""
+    everything = np.arange(bench.clean.shape[0])
+    drift = np.linspace(0.0, -0.3, everything.size)
+    change = drift[-2] - drift[2]
+
+    def named(_: dict[int, str], trends: list[str]) -> int:
+        found = re.search(r"moved by ([-+][\d.]+) \+- ([\d.]+) keV", " ".join(trends))
+        return bool(found) and (
+            abs(float(found[1]) - change) < WITHIN * float(found[2])  # type: ignore[index]
+        )
+
+    return Planted(
+        scan=bench.clean.with_counts(
+            bench.exposed(everything, threshold_drift_kev=drift)
+        ),
+        faulty=(),
+        named=named,
+    )
+
+
+def lit_dark(bench: Bench, rng: np.random.Generator) -> Planted:
+    """The beam was on in a dark exposure."""
+    dark = int(rng.choice(bench.clean.exposures("dark")))
+    counts = bench.counts
+    counts[dark] = counts[2] + rng.integers(0, 50, counts[2].shape)
+    return Planted(
+        scan=bench.clean.with_counts(counts),
+        faulty=(dark,),
+        named=lambda said, _: "dark exposure counts" in said[dark],
+    )
+
+
+def other_thresholds(bench: Bench, rng: np.random.Generator) -> Planted:
+    """All thresholds stood 1 keV higher in one exposure."""
+    step = int(rng.choice(bench.clean.exposures("wedge")))
+    drift = np.zeros(bench.clean.shape[0])
+    drift[step] = shift = float(rng.choice([-1.0, 1.0]))
+
+    return Planted(
+        scan=bench.with_exposure(step, threshold_drift_kev=drift),
+        faulty=(step,),
+        named=lambda said, _: rank(said[step], lambda w: near(w, "keV from", shift)),
+    )
+
+
+KINDS: dict[str, Callable[[Bench, np.random.Generator], Planted]] = {
+    "thickness off by 5 %": thickness(0.05),
+    "thickness off by 20 %": thickness(0.20),
+    "materials exchanged": materials_exchanged,
+    "two steps swapped": swapped,
+    "step saved twice": saved_twice,
+    "stale image": stale_image,
+    "wedge not moved": not_moved,
+    "saturated": saturated,
+    "half the frames missing": half_the_frames,
+    "rows missing": rows_missing,
+    "current off by 4 %": current(0.04),
+    "current off by 30 %": current(0.30),
+    "open with a step in it": open_with_step,
+    "step that was open": step_was_open,
+    "warm-up of 5 %": warm_up,
+    "polarisation, 0.3 keV": polarisation,
+    "dark with the beam on": lit_dark,
+    "thresholds off by 1 keV": other_thresholds,
+}
+
+
+@dataclass(frozen=True, kw_only=True)
+class Outcome:
+    """What became of one scan."""
+
+    found: bool
+    rank: int
+    false_alarms: int
+    exposures: int
+    sentences: tuple[str, ...]
+
+
+def sentences(scan: Scan, *, rounds: int, samples: int) -> tuple[str, ...]:
+    """Findings of the calibration, or the refusal."""
+    calibrator = WedgeCalibrator(rounds=rounds, samples=samples, leave_out=False)
+    try:
+        return calibrator.fit(scan).calibration_.findings
+    except SpectralError as refusal:
+        return (f"refused: {refusal}",)
+
+
+def judge(planted: Planted, said: tuple[str, ...]) -> Outcome:
+    """Compare the sentences with what was planted."""
+    by_exposure: dict[int, str] = dict.fromkeys(planted.faulty, "")
+    trends: list[str] = []
+    others = 0
+    for text in said:
+        about = re.match(r"exposure (\d+): ", text)
+        if about is None:
+            trends.append(text)
+            continue
+        others += int(about[1]) not in planted.faulty
+        by_exposure[int(about[1])] = text
+    refused = bool(said) and said[0].startswith("refused")
+    rank_ = int(planted.named(by_exposure, trends))
+    found = all(by_exposure[e] for e in planted.faulty) if planted.faulty else rank_ > 0
+    return Outcome(
+        found=found or refused,
+        rank=rank_,
+        false_alarms=others,
+        exposures=int(planted.scan.exposures("open", "wedge").size)
+        - len(planted.faulty),
+        sentences=said,
+    )
+
+
+def say(line: str) -> None:
+    """Print a line at once."""
+    sys.stdout.write(line + "\n")
+    sys.stdout.flush()
+
+
+def report(kind: str, outcomes: list[Outcome]) -> str:
+    """One row of the table."""
+    n = len(outcomes)
+    alarms = sum(o.false_alarms for o in outcomes)
+    every = sum(o.exposures for o in outcomes)
+    found, first = sum(o.found for o in outcomes), sum(o.rank == 1 for o in outcomes)
+    named = sum(o.rank > 0 for o in outcomes)
+    shares = "".join(f"{part:4d}/{n:<3d}" for part in (found, first, named))
+    return f"{kind:24s}{shares}{alarms:6d}/{every}"
+
+
+def main() -> None:
+    """Print the table."""
+    options = argparse.ArgumentParser(description=__doc__)
+    options.add_argument("--seeds", type=int, default=3, help="scans for each kind")
+    options.add_argument("--clean", type=int, default=6, help="scans without fault")
+    options.add_argument("--kind", default="", help="only kinds that contain this")
+    options.add_argument("--rounds", type=int, default=6)
+    options.add_argument("--samples", type=int, default=512)
+    options.add_argument("--say", action="store_true", help="print all sentences")
+    options.add_argument("--folder", type=Path, help="keeps the clean scans")
+    given = options.parse_args()
+    started = time.perf_counter()
+    with tempfile.TemporaryDirectory() as temporary:
+        folder = given.folder or Path(temporary)
+        library = sensor_library()
+        benches = [
+            bench(seed, folder, library)
+            for seed in range(1, 1 + max(given.seeds, given.clean))
+        ]
+
+    def judged(planted: Planted) -> Outcome:
+        said = sentences(planted.scan, rounds=given.rounds, samples=given.samples)
+        outcome = judge(planted, said)
+        if given.say:
+            mark = f"    {planted.faulty}, place {outcome.rank}:"
+            say("\n    ".join((mark, *outcome.sentences)))
+        return outcome
+
+    say(f"{'planted':24s}  found   first   named  false alarms")
+    for number, (kind, plant) in enumerate(KINDS.items()):
+        if given.kind in kind:
+            rows = [
+                judged(plant(b, np.random.default_rng([b.seed, number])))
+                for b in benches[: given.seeds]
+            ]
+            say(report(kind, rows))
+    if given.clean and not given.kind:
+        clean = [
+            judged(Planted(scan=b.clean, faulty=(), named=lambda *_: 1))
+            for b in benches[: given.clean]
+        ]
+        say(report("nothing", clean))
+    say(f"{time.perf_counter() - started:.0f} s")
+
+
+if __name__ == "__main__":
+    main()
