@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.decomposition.responses import Responses, responses
+from spectral.decomposition.responses import BLOCK, Responses, responses
 from spectral.decomposition.start_values import StartRegression
 from spectral.forward.node_response import pixel_weights
 
@@ -18,12 +18,15 @@ if TYPE_CHECKING:
     from spectral.calibration.result import Calibration
     from spectral.forward.node_response import NodeTables
 
+CURRENT_STEP = 1e-3
+"""Steps of ln(current) within which exposures share what depends on current alone."""
 OUTPUT_STEP = 2e-4
-"""Steps of ln(output) within which exposures share their weights."""
+"""Steps of ln(photon rate) within which exposures share their weights."""
 TABLE_STEP = 0.05
-"""Steps of ln(output) within which they share their node tables."""
+"""Steps of ln(photon rate) within which they share their node tables."""
 KEPT = 2
 """Sets of weights held at once: each is the largest array of a decomposition."""
+KEPT_TABLES = 24
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -54,25 +57,34 @@ class ConditionsStore:
     Parameters
     ----------
     calibration : Calibration
+    threads : int
     """
 
-    def __init__(self, calibration: Calibration) -> None:
+    def __init__(self, calibration: Calibration, *, threads: int = 1) -> None:
         self._calibration = calibration
-        self._nodes: dict[tuple[float, float], NodeTables] = {}
-        self._held: OrderedDict[tuple[float, int, float, int, int], Conditions] = (
-            OrderedDict()
-        )
+        self._threads = threads
+        self._nodes: OrderedDict[tuple[int, int], NodeTables] = OrderedDict()
+        self._held: OrderedDict[tuple[float, ...], Conditions] = OrderedDict()
+        self._starts: dict[tuple[int, int, float], StartRegression] = {}
+        self._highest: dict[tuple[int, int], NDArray[np.float64]] = {}
 
     def tables(self, current_ma: float, output: float) -> tuple[NodeTables, float]:
-        """Node tables that serve a current and output, and the output over theirs."""
-        step = OUTPUT_STEP * round(np.log(output) / OUTPUT_STEP)
-        coarse = TABLE_STEP * round(step / TABLE_STEP)
-        key = (current_ma, float(coarse))
+        """Node tables that serve a current and output, and the output over theirs.
+
+        They depend on nothing that was asked before, so neither blocks nor their order
+        change a result.
+        """
+        current, step, coarse = _steps(current_ma, output)
+        key = (current, coarse)
         if key not in self._nodes:
+            while len(self._nodes) >= KEPT_TABLES:
+                self._nodes.popitem(last=False)
             self._nodes[key] = self._calibration.nodes(
-                current_ma, float(np.exp(coarse))
+                float(np.exp(CURRENT_STEP * current)),
+                float(np.exp(TABLE_STEP * coarse)),
             )
-        return self._nodes[key], float(np.exp(step - coarse))
+        fine = OUTPUT_STEP * step - TABLE_STEP * coarse
+        return self._nodes[key], float(np.exp(fine))
 
     def at(
         self,
@@ -82,35 +94,58 @@ class ConditionsStore:
         flat: NDArray[np.int64],
     ) -> Conditions:
         """Conditions of an exposure for pixels by flat index."""
-        step = round(np.log(output) / OUTPUT_STEP)
+        current, step, coarse = _steps(current_ma, output)
         ends = (int(flat[0]), int(flat[-1])) if flat.size else (-1, -1)
-        key = (current_ma, step, count_time_s, *ends)
+        key = (current, step, count_time_s, *ends)
         if key in self._held:
             self._held.move_to_end(key)
             return self._held[key]
         tables, fine = self.tables(current_ma, output)
         while len(self._held) >= KEPT:
             self._held.popitem(last=False)
-        ready = responses(
-            self._calibration, tables, flat, count_time_s=count_time_s, output=fine
-        )
+        if ends not in self._highest:
+            self._highest[ends] = self._highest_rate(flat)
+        regression = (current, coarse, count_time_s)
+        if regression not in self._starts:
+            if len(self._starts) >= KEPT_TABLES:
+                self._starts.clear()
+            self._starts[regression] = start_regression(
+                self._calibration, tables, count_time_s
+            )
         made = Conditions(
             tables=tables,
             output=fine,
-            responses=ready,
-            start=start_regression(self._calibration, tables, count_time_s),
-            rate_limit=self._rate_limit(count_time_s, flat),
+            responses=responses(
+                self._calibration,
+                tables,
+                flat,
+                count_time_s=count_time_s,
+                output=fine,
+                threads=self._threads,
+            ),
+            start=self._starts[regression],
+            rate_limit=self._highest[ends] * count_time_s,
         )
         self._held[key] = made
         return made
 
-    def _rate_limit(
-        self, count_time_s: float, flat: NDArray[np.int64]
-    ) -> NDArray[np.float64]:
+    def _highest_rate(self, flat: NDArray[np.int64]) -> NDArray[np.float64]:
+        """Counts per second above the lowest threshold at the highest current."""
         nothing = np.zeros((1, self._calibration.largest.size))
         current = np.array([self._calibration.largest_current_ma])
-        rate = self._calibration.expected_bins(nothing, current, np.ones(1), flat)
-        return np.asarray(rate[:, 0].sum(axis=1) * count_time_s)
+        found = [
+            self._calibration.expected_bins(nothing, current, np.ones(1), part)
+            for part in np.split(flat, range(BLOCK, flat.size, BLOCK))
+        ]
+        return np.asarray(np.concatenate(found)[:, 0].sum(axis=1))
+
+
+def _steps(current_ma: float, output: float) -> tuple[int, int, int]:
+    """Steps of the current, then of the rate at that current, fine and coarse."""
+    current = round(np.log(current_ma) / CURRENT_STEP)
+    rest = np.log(current_ma) - CURRENT_STEP * current + np.log(output)
+    step = round(rest / OUTPUT_STEP)
+    return current, step, round(step * OUTPUT_STEP / TABLE_STEP)
 
 
 def start_regression(

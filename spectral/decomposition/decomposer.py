@@ -111,7 +111,7 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
         self.session_: Session = normalise(self.calibration_, scan, self.usable_)
         self.current_ = current_of(scan, self.calibration_)
         self.count_time_ = scan.count_time_s
-        self._store = ConditionsStore(self.calibration_)
+        self._store = ConditionsStore(self.calibration_, threads=self.threads)
         self._facets = domain_facets(self.calibration_.steps.areal_density)
         return self
 

@@ -8,13 +8,14 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.forward.node_response import NodeTables, pixel_weights
 from spectral.kernels import calibration_shift
+from spectral.kernels.node_weights import node_weights
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from spectral.calibration.result import Calibration
+    from spectral.forward.node_response import NodeTables
 
 NS = 1e-9
 BLOCK = 8192
@@ -63,6 +64,7 @@ def responses(
     *,
     count_time_s: float,
     output: float = 1.0,
+    threads: int = 1,
 ) -> Responses:
     """Node weights of pixels, from node tables near the exposure's photon rate.
 
@@ -75,18 +77,25 @@ def responses(
     count_time_s : float
     output : float
         Photon rate over the tables' own; within a few percent of 1.
+    threads : int
     """
-    weight = np.empty(
-        (flat.size, calibration.levels_kev.size, tables.attenuation.shape[0])
-    )
-    for first in range(0, flat.size, BLOCK):
+    levels = calibration.levels_kev
+    weight = np.empty((flat.size, levels.size, tables.attenuation.shape[0]))
+    table = stacked(tables)
+
+    def block(first: int) -> None:
         part = slice(first, first + BLOCK)
-        weight[part], _ = pixel_weights(
-            tables,
-            calibration.levels_kev,
-            calibration.pixels(flat[part]).brightened(output),
+        node_weights(
+            table,
+            levels,
+            tables.by_bin[0].step_kev,
+            calibration.pixels(flat[part]).brightened(output).values,
+            count_time_s,
+            weight[part],
         )
-    weight *= count_time_s
+
+    with ThreadPoolExecutor(threads) as pool:
+        list(pool.map(block, range(0, flat.size, BLOCK)))
     return Responses(
         flat=flat,
         weight=weight,

@@ -278,6 +278,8 @@ def test_chosen_exposures_in_their_order(
     np.testing.assert_array_equal(found.areal_density[2], alone.areal_density[0])
     with pytest.raises(ScanError, match="exposures 0 to 13 exist, asked for 99"):
         decompose_series(decomposer, scan, tmp_path / "x.h5", exposures=[99])
+    with pytest.raises(ScanError, match="exposure 0 is dark: it shows no object"):
+        decompose_series(decomposer, scan, tmp_path / "x.h5", exposures=[5, 0])
 
 
 SCRIPT = """
