@@ -21,7 +21,7 @@ if TYPE_CHECKING:
     from spectral.calibration.wedge_data import WedgeData
     from spectral.forward.setup import Setup
 
-MODEL_ERROR = 2e-3
+MODEL_ERROR = 7e-4
 """Relative error of the mean model that the fit allows for in each bin."""
 ENOUGH_GAIN = 0.05
 """Relative fall of the penalised chi-square below which the fit is at rest."""
