@@ -91,8 +91,17 @@ def on_disk(path: Path) -> None:
 
 
 def plain(value: object) -> str:
-    """Text as h5py hands it out, bytes or str, as str."""
-    return value.decode("utf-8") if isinstance(value, bytes) else str(value)
+    """Text as h5py hands it out, bytes or str, as str.
+
+    What is not UTF-8 is read as Latin-1, in which some writers store "µm".
+    """
+    raw = value
+    if not isinstance(raw, bytes):
+        raw = str(value).encode("utf-8", "surrogateescape")
+    try:
+        return raw.decode("utf-8")
+    except UnicodeDecodeError:
+        return raw.decode("latin-1")
 
 
 @dataclass(frozen=True, slots=True)

@@ -15,6 +15,8 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 ROLES = ("dark", "open", "wedge", "object")
+MOST_G_CM3 = 25.0
+"""More than any substance has: osmium, the densest, has 22.6 g/cm3 (from memory)."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

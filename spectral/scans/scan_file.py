@@ -15,8 +15,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from spectral.errors import FileFormatError, ScanError
-from spectral.scans.nexus import Node, opened
-from spectral.scans.scan import ROLES, Filter, Layer, Scan
+from spectral.scans.nexus import Node, opened, plain
+from spectral.scans.scan import MOST_G_CM3, ROLES, Filter, Layer, Scan
 from spectral.scans.scan_writing import write_scan
 from spectral.scans.stored_counts import (
     CountsInFile,
@@ -94,9 +94,17 @@ def file_digest(path: Path) -> str:
 
 def _entry(root: Node) -> Node:
     """The entry that holds an instrument."""
-    for entry in root.children("NXentry"):
-        if entry.children("NXinstrument"):
-            return entry
+    found = [e for e in root.children("NXentry") if e.children("NXinstrument")]
+    default = plain(root.group.attrs.get("default", ""))
+    chosen = [e for e in found if e.group.name == f"/{default.lstrip('/')}"] or found
+    if len(chosen) == 1:
+        return chosen[0]
+    if found:
+        msg = (
+            f"{root.file}: {len(found)} groups with NX_class 'NXentry' hold an "
+            "instrument; name the scan's in the file's attribute 'default'"
+        )
+        raise FileFormatError(msg)
     msg = (
         f"{root.file}: no group with NX_class 'NXentry' holds an instrument, so "
         "this is not a scan"
@@ -232,13 +240,23 @@ def _layers(
     formulas = sample.texts("formula")
     density = np.atleast_1d(sample.quantity("density", "g/cm3"))
     m = len(names)
-    for field, length in (("formula", len(formulas)), ("density", len(density))):
-        if length != m:
-            msg = f"{sample.name(field)} has {length} entries, there are {m} materials"
+    for field, shape in (("formula", (len(formulas),)), ("density", density.shape)):
+        if shape != (m,):
+            msg = (
+                f"{sample.name(field)} has {' x '.join(map(str, shape))} entries, "
+                f"there are {m} materials"
+            )
             raise FileFormatError(msg)
-    if not np.all(density > 0):
-        j = int(np.flatnonzero(~(density > 0))[0])
-        msg = f"{sample.name('density')} of {names[j]} must be more than zero"
+    if "" in names:
+        msg = f"{sample.name('material')} has an empty name; name each material"
+        raise ScanError(msg)
+    possible = (density > 0) & (density < MOST_G_CM3)
+    if not possible.all():
+        j = int(np.argmin(possible))
+        msg = (
+            f"{sample.name('density')} of {names[j]} is {density[j]:g} g/cm3; it must "
+            f"be more than zero and less than {MOST_G_CM3:g}: is its unit right?"
+        )
         raise ScanError(msg)
     repeated = {name for name in names if names.count(name) > 1}
     if repeated:
@@ -274,6 +292,14 @@ def _check_thickness(
             f"{field} of {names[j]} in exposure {i} ({role[i]}) is "
             f"{thickness[i, j]:g} mm; it must be zero or more, and only an object's "
             "may be unknown (NaN)"
+        )
+        raise ScanError(msg)
+    opened_up = np.array([r == "open" for r in role])[:, None] & (thickness > 0)
+    if opened_up.any():
+        i, j = (int(v) for v in np.argwhere(opened_up)[0])
+        msg = (
+            f"{field} of {names[j]} in exposure {i} is {thickness[i, j]:g} mm, but its "
+            "role is open; make it zero, or give the exposure the role wedge"
         )
         raise ScanError(msg)
 

@@ -59,7 +59,7 @@ import numpy as np
 
 from spectral.errors import InputError, ScanError
 from spectral.scans.image_files import ImageFile, image_layout, read_pages
-from spectral.scans.scan import Filter, Layer, Scan
+from spectral.scans.scan import MOST_G_CM3, Filter, Layer, Scan
 from spectral.scans.scan_file import file_digest, read_scan
 from spectral.scans.script_exposures import read_exposures
 from spectral.scans.script_images import images_of
@@ -304,10 +304,14 @@ def _materials(root: Table) -> tuple[Layer, ...]:
         name = table.text("name")
         if name in found:
             table.stop("name", f"the material {name!r} is listed twice")
+        density = table.number("density_g_cm3")
+        if density >= MOST_G_CM3:
+            msg = f"density_g_cm3 is {density:g}; nothing has {MOST_G_CM3:g} or more"
+            (table.owner("density_g_cm3") or table).stop("density_g_cm3", msg)
         found[name] = Layer(
             name=name,
             formula=table.text("formula"),
-            density_g_cm3=table.number("density_g_cm3"),
+            density_g_cm3=density,
         )
     return tuple(found.values())
 

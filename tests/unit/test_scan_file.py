@@ -277,7 +277,7 @@ FAULTS: list[tuple[Callable[[h5py.File], object], str]] = [
     ),
     (
         lambda f: _set(f, "entry/sample/density", np.array([1.0, 0.0]), "g/cm3"),
-        "density of Al must be more than zero",
+        "density of Al is 0 g/cm3; it must be more than zero and less than 25",
     ),
     (
         lambda f: _set(f, "entry/sample/material", ["Al", "Al"]),
