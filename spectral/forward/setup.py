@@ -9,10 +9,16 @@ import numpy as np
 
 from spectral.errors import ScanError
 from spectral.forward.counting_model import CountingModel
+from spectral.forward.scan_facts import scan_faults
 from spectral.physics.cross_sections import k_edge_kev, mass_attenuation
 from spectral.physics.materials import find_material
 from spectral.physics.pileup import PulseShape
-from spectral.physics.sensor import ChargeTransport, Sensor, pulse_heights
+from spectral.physics.sensor import (
+    PAIR_ENERGY_EV,
+    ChargeTransport,
+    Sensor,
+    pulse_heights,
+)
 from spectral.physics.spectrum import energy_bins
 from spectral.physics.tube import tube_spectrum
 
@@ -64,25 +70,12 @@ class Setup:
         Raises
         ------
         ScanError
-            If the scan names no sensor or pixel size, or a target other than W.
+            If the scan does not say what the model must know, or something that
+            cannot be (`spectral.forward.scan_facts.scan_faults`).
         """
-        if scan.target_material not in {"W", ""}:
-            msg = (
-                f"{scan.source}: target_material is {scan.target_material!r}; the tube "
-                "model knows tungsten (W) only"
-            )
-            raise ScanError(msg)
-        if scan.sensor_material is None or scan.sensor_thickness_mm is None:
-            msg = (
-                f"{scan.source}: sensor_material and sensor_thickness are needed to "
-                "model the response; add them to the detector group"
-            )
-            raise ScanError(msg)
-        if scan.pixel_size_um is None:
-            msg = (
-                f"{scan.source}: x_pixel_size and y_pixel_size are needed to model "
-                "charge sharing; add them to the detector group"
-            )
+        faults = scan_faults(scan)
+        if faults:
+            msg = f"{scan.source}: {faults[0]}"
             raise ScanError(msg)
         assumptions = []
         if not scan.filters:
@@ -91,13 +84,18 @@ class Setup:
             )
         if scan.current_ma is None:
             assumptions.append("no tube current is given: it is taken as constant")
-        stuff = find_material(scan.sensor_material)
+        stuff = find_material(str(scan.sensor_material))
+        known = {find_material(name).name: name for name in PAIR_ENERGY_EV}
+        if stuff.name not in known:
+            assumptions.append(
+                f"pair energy and Fano factor of {stuff.name} are taken as CdTe's"
+            )
         sensor = Sensor(
-            material=stuff.name,
+            material=known.get(stuff.name, stuff.name),
             weight_fractions=stuff.weight_fractions,
             density_g_cm3=stuff.density_g_cm3,
-            thickness_um=1e3 * scan.sensor_thickness_mm,
-            pitch_um=float(np.sqrt(np.prod(scan.pixel_size_um))),
+            thickness_um=1e3 * float(scan.sensor_thickness_mm or 0.0),
+            pitch_um=float(np.sqrt(np.prod(scan.pixel_size_um or 0.0))),
         )
         filters = []
         for layer in scan.filters:

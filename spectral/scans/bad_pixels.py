@@ -56,6 +56,14 @@ REASON_MEANING: dict[PixelReason, str] = {
 }
 
 
+def commonest_reason(reasons: NDArray[np.uint16]) -> str:
+    """What the reason that most bad pixels have means; "" if none is bad."""
+    if not np.any(reasons):
+        return ""
+    number = {m: np.count_nonzero(reasons & r) for r, m in REASON_MEANING.items()}
+    return max(number, key=lambda meaning: int(number[meaning]))
+
+
 def find_bad_pixels(scan: Scan, *, object_repeats: bool = False) -> NDArray[np.uint16]:
     """Reasons not to use each pixel, from a scan's dark, open and wedge exposures.
 

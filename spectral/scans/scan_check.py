@@ -12,7 +12,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.scans.bad_pixels import PixelReason, find_bad_pixels
+from spectral.scans.bad_pixels import (
+    PixelReason,
+    commonest_reason,
+    find_bad_pixels,
+)
 from spectral.scans.counting_loss import CountingLoss, counting_loss
 from spectral.scans.dispersion import Dispersion, dispersions
 from spectral.scans.exposure_levels import ExposureLevels, exposure_levels
@@ -21,7 +25,7 @@ from spectral.scans.repeats import settings_with_repeats, usable_exposures
 from spectral.scans.scan_verdict import Findings, verdict_on
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Collection
+    from collections.abc import Callable, Collection, Sequence
 
     from numpy.typing import NDArray
 
@@ -119,7 +123,10 @@ class ScanCheck:
 
 
 def check_scan(
-    scan: Scan, *, progress: Callable[[int, int], None] | None = None
+    scan: Scan,
+    *,
+    known: Sequence[str] = (),
+    progress: Callable[[int, int], None] | None = None,
 ) -> ScanCheck:
     """Check a scan for what a calibration or a decomposition needs of it.
 
@@ -127,6 +134,9 @@ def check_scan(
     ----------
     scan : Scan
         Read one exposure at a time, but for the part that bad pixels need.
+    known : sequence of str, optional
+        What is known already to rule the scan out, one sentence each, as
+        `spectral.forward.scan_facts.scan_faults` says of a wedge scan.
     progress : callable, optional
         Called with the exposures done and their number.
     """
@@ -151,8 +161,10 @@ def check_scan(
             drift=np.array([t.drift for t in thresholds]),
             drift_error=np.array([t.drift_error for t in thresholds]),
             bad_share=float(np.mean(reasons != 0)),
+            bad_cause=commonest_reason(reasons),
         )
     )
+    causes = (*known, *causes)
     verdict = Verdict.EXCEPTIONS if exceptions else Verdict.FIT
     return ScanCheck(
         source=scan.source,

@@ -26,6 +26,14 @@ _LOSS_THAT_MATTERS = 0.2
 _DEVIATIONS = 5.0
 _DISPERSION_TOLERANCE = 0.1
 _DARK_SHARE = 1e-3
+_MOST = 0.5
+_USELESS = (
+    ProblemKind.SATURATED,
+    ProblemKind.NOT_COUNTS,
+    ProblemKind.ORDER,
+    ProblemKind.REPEATED,
+    ProblemKind.ROLE,
+)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -37,6 +45,8 @@ class Findings:
     drift, drift_error : array, shape (threshold,)
     bad_share : float
         Share of pixels with any reason.
+    bad_cause : str
+        What most of them have in common.
     """
 
     scan: Scan
@@ -47,6 +57,7 @@ class Findings:
     drift: NDArray[np.float64]
     drift_error: NDArray[np.float64]
     bad_share: float
+    bad_cause: str
 
 
 def verdict_on(findings: Findings) -> tuple[tuple[str, ...], tuple[str, ...]]:
@@ -61,23 +72,44 @@ def _causes(findings: Findings) -> Iterator[str]:
     if len(opens) == 0:
         yield "there is no open exposure to compare the others with"
     elif levels.mean[opens, 0].max() < 1.0:
-        yield "no open exposure counts anything"
-    wrong = {
-        p.exposure
-        for p in findings.problems
-        if p.kind in (ProblemKind.SATURATED, ProblemKind.NOT_COUNTS, ProblemKind.ROLE)
-    }
-    if len(opens) and wrong.issuperset(opens.tolist()):
-        yield "every open exposure has a problem of its own"
-    steps = len(set(scan.exposures("wedge").tolist()) - wrong)
-    if "wedge" in scan.role and steps < len(scan.materials):
+        yield _nothing_counted(levels, opens)
+    yield from _order(findings, opens)
+    wrong = {p.exposure: p.text for p in findings.problems if p.kind in _USELESS}
+    if len(opens) and set(wrong).issuperset(opens.tolist()):
+        first = int(opens[0])
         yield (
-            f"{steps} usable wedge exposures are too few for "
-            f"{len(scan.materials)} materials"
+            "every open exposure has a problem of its own, as exposure "
+            f"{first}: {wrong[first]}"
         )
+    steps = sorted(set(scan.exposures("wedge").tolist()) - set(wrong))
+    if "wedge" in scan.role:
+        yield from _steps(scan, steps)
     if findings.bad_share > _MOST_BAD:
-        yield f"{findings.bad_share:.0%} of the pixels are bad"
-    falls = np.diff(levels.mean[opens].sum(0)) if len(opens) else np.zeros(0)
+        yield f"{findings.bad_share:.0%} of the pixels are bad; of most, {findings.bad_cause}"
+    worst = _not_counts(findings.dispersions)
+    if worst:
+        yield worst
+
+
+def _nothing_counted(levels: ExposureLevels, opens: NDArray[np.int64]) -> str:
+    """Say why no open exposure counts anything."""
+    if np.median(levels.at_limit[opens]) > _MOST:
+        return (
+            "the counts of the open exposures stand at the limit of the counter or of "
+            "the stored numbers; lower the current or store wider numbers"
+        )
+    if np.median(levels.no_count[opens]) > _MOST:
+        return (
+            "the open exposures hold negative numbers, NaN or fractions where counts "
+            "are needed; store the counts as the detector gave them"
+        )
+    return "no open exposure counts anything"
+
+
+def _order(findings: Findings, opens: NDArray[np.int64]) -> Iterator[str]:
+    """Thresholds that count more than the one below."""
+    scan = findings.scan
+    falls = np.diff(findings.levels.mean[opens].sum(0)) if len(opens) else np.zeros(0)
     if np.any(falls > 0):
         k = int(np.argmax(falls > 0))
         low, high = scan.thresholds_kev[k : k + 2]
@@ -85,9 +117,23 @@ def _causes(findings: Findings) -> Iterator[str]:
             f"the threshold at {high:g} keV counts more than the one at {low:g} keV: "
             "are they in the right order?"
         )
-    worst = _not_counts(findings.dispersions)
-    if worst:
-        yield worst
+
+
+def _steps(scan: Scan, steps: list[int]) -> Iterator[str]:
+    """What is missing among the wedge exposures that can be used."""
+    if len(steps) < len(scan.materials):
+        yield (
+            f"{len(steps)} usable wedge exposures are too few for "
+            f"{len(scan.materials)} materials"
+        )
+        return
+    never = [
+        layer.name
+        for layer, mm in zip(scan.materials, scan.thickness_mm[steps].T, strict=True)
+        if not np.any(mm > 0)
+    ]
+    if never:
+        yield f"no usable wedge exposure holds {' or '.join(never)}; add some"
 
 
 def _not_counts(dispersions: tuple[Dispersion, ...]) -> str:
