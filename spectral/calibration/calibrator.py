@@ -12,6 +12,7 @@ from spectral.calibration.assembly import assemble
 from spectral.calibration.pixel_fit import MeasuredShifts, PixelFit, fit_pixels
 from spectral.calibration.population import Population, fit_population
 from spectral.calibration.promise import with_promise
+from spectral.calibration.scan_sentences import told_of
 from spectral.calibration.scan_trends import trends
 from spectral.calibration.step_faults import (
     LARGEST_SHARE,
@@ -104,20 +105,50 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
             If the scan does not say what the forward model must know.
         CalibrationError
             If the data do not determine the calibration.
+        InputError
+            If an exposure to leave out does not exist.
         """
         setup = Setup.from_scan(scan)
+        self._check_excluded(scan)
         reasons = find_bad_pixels(scan)
         suspects = self._suspects(scan, reasons)
+        self._refuse_without_opens(scan, suspects)
         self.progress_ = progress
+        with told_of(scan):
+            self.calibration_ = self._learned(scan, setup, reasons, suspects)
+        return self
+
+    def _learned(
+        self,
+        scan: Scan,
+        setup: Setup,
+        reasons: NDArray[np.uint16],
+        suspects: dict[int, str],
+    ) -> Calibration:
         calibration = self._once(scan, setup, reasons, self.excluded + tuple(suspects))
         if self.faults != "keep":
             calibration = self._without_faults(
                 scan, setup, reasons, calibration, suspects
             )
-        if self.leave_out:
-            calibration = with_promise(calibration)
-        self.calibration_ = calibration
-        return self
+        return with_promise(calibration) if self.leave_out else calibration
+
+    def _check_excluded(self, scan: Scan) -> None:
+        for exposure in self.excluded:
+            if not 0 <= exposure < scan.shape[0]:
+                msg = (
+                    f"{scan.source}: exposure {exposure} cannot be left out; exposures "
+                    f"0 to {scan.shape[0] - 1} exist"
+                )
+                raise InputError(msg)
+
+    def _refuse_without_opens(self, scan: Scan, suspects: dict[int, str]) -> None:
+        opens = [i for i in scan.exposures("open").tolist() if i not in self.excluded]
+        if opens and all(i in suspects for i in opens):
+            msg = (
+                f"{scan.source}: every open exposure has a problem of its own, as "
+                f"exposure {opens[0]}: {suspects[opens[0]]}"
+            )
+            raise CalibrationError(msg)
 
     def _suspects(self, scan: Scan, reasons: NDArray[np.uint16]) -> dict[int, str]:
         """Exposures that a check of the counts alone already finds wrong."""

@@ -6,6 +6,9 @@ from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 
+from spectral.errors import InputError
+from spectral.physics.materials import find_material
+
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
@@ -15,6 +18,8 @@ if TYPE_CHECKING:
 THRESHOLD_TOLERANCE_KEV = 0.01
 VOLTAGE_TOLERANCE_KV = 0.1
 DENSITY_TOLERANCE = 1e-3
+MOST_CURRENTS = 1e3
+"""Between a scan's current and the calibration's largest: more is a wrong unit."""
 
 
 class _Setting(Protocol):
@@ -47,6 +52,43 @@ def calibrations_differ(new: Calibration, old: Calibration) -> str:
         or _setting_differs(new, old)
         or _filters_differ(new.filters, old.filters)
     )
+
+
+def beam_differs(calibration: Calibration, scan: Scan) -> str:
+    """What of tube, sensor and currents cannot be the calibration's; "" if nothing.
+
+    Parameters
+    ----------
+    calibration : Calibration
+    scan : Scan
+        Facts that it does not give are not compared.
+    """
+    if scan.target_material not in {"W", ""}:
+        return f"has the target {scan.target_material} and not W"
+    sensor = calibration.sensor.split(",")[0]
+    if scan.sensor_material is not None and not _same_substance(
+        scan.sensor_material, sensor
+    ):
+        return f"has a sensor of {scan.sensor_material} and not of {sensor}"
+    if scan.current_ma is None:
+        return ""
+    top = calibration.largest_current_ma
+    for i, (role, current) in enumerate(zip(scan.role, scan.current_ma, strict=True)):
+        if role != "dark" and not top / MOST_CURRENTS <= current <= top * MOST_CURRENTS:
+            return (
+                f"has a tube current of {current:g} mA in exposure {i} ({role}) and "
+                f"not one like {top:g} mA"
+            )
+    return ""
+
+
+def _same_substance(one: str, other: str) -> bool:
+    if one == other:
+        return True
+    try:
+        return find_material(one).name == find_material(other).name
+    except InputError:
+        return False
 
 
 def _filters(scan: Scan) -> tuple[str, ...]:

@@ -14,6 +14,7 @@ from spectral.calibration.drift_spread import class_of
 from spectral.calibration.full_scan import full_scan_reasons, refresh_notes
 from spectral.calibration.pixel_drift import PixelDrift, pixel_drift
 from spectral.calibration.promise import with_promise
+from spectral.calibration.scan_sentences import told_of
 from spectral.calibration.short_scan import short_scan_data
 from spectral.scans.bad_pixels import PixelReason, find_bad_pixels
 
@@ -89,7 +90,8 @@ def refresh(calibration: Calibration, scan: Scan) -> Refreshed:
     found = find_bad_pixels(scan) if scan.shape[2:] == calibration.shape else 0
     usable = calibration.good & (found == 0)
     data = short_scan_data(calibration, scan, usable)
-    common = common_drift(calibration, data)
+    with told_of(scan):
+        common = common_drift(calibration, data)
     after = moved(calibration, common)
     pixels = pixel_drift(after, data, common.output)
     sick = _misfits(pixels.deviance, data)
@@ -145,7 +147,8 @@ def updated_by_opens(calibration: Calibration, scan: Scan) -> Calibration:
     data = short_scan_data(
         calibration, scan, calibration.good & (found == 0), roles=("open",)
     )
-    output = common_drift(calibration, data, shift_prior_kev=1e-6).output
+    with told_of(scan):
+        output = common_drift(calibration, data, shift_prior_kev=1e-6).output
     return _with_departures(calibration, data, pixel_drift(calibration, data, output))
 
 

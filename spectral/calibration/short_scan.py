@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.calibration.matching import scan_differs
+from spectral.calibration.matching import beam_differs, scan_differs
 from spectral.calibration.wedge_data import WedgeData
 from spectral.errors import ScanError
 
@@ -41,7 +41,7 @@ def short_scan_data(
         If the scan is of another setting, holds no open exposure or no usable
         pixel, or does not say how thick a step is.
     """
-    differs = scan_differs(calibration, scan)
+    differs = scan_differs(calibration, scan) or beam_differs(calibration, scan)
     if differs:
         msg = f"{scan.source} {differs}, as the calibration has; scan at its setting"
         raise ScanError(msg)

@@ -15,6 +15,9 @@ if TYPE_CHECKING:
 
     from spectral.scans.scan import Scan
 
+LEAST_APART = 1e-3
+"""Smallest over largest singular value of the steps, each material's largest being 1."""
+
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class WedgeData:
@@ -90,7 +93,7 @@ def wedge_data(
     ------
     CalibrationError
         If there is no open exposure, too few steps, a material that never stands
-        in the beam, or no good pixel.
+        in the beam or never changes alone, or no good pixel.
     """
     chosen = np.array(
         [i for i in scan.exposures("open", "wedge") if i not in excluded], np.int64
@@ -113,6 +116,15 @@ def wedge_data(
         if not np.any(values > 0.0):
             msg = f"{scan.source}: no wedge step holds {layer.name}; add some"
             raise CalibrationError(msg)
+    scaled = areal / areal.max(axis=0)
+    apart = np.linalg.svd(scaled, compute_uv=False)
+    if apart[-1] < LEAST_APART * apart[0]:
+        names = " and ".join(layer.name for layer in scan.materials)
+        msg = (
+            f"{scan.source}: the steps hold {names} in one fixed proportion, so they "
+            "cannot be told apart; add steps that change one material alone"
+        )
+        raise CalibrationError(msg)
     good = np.flatnonzero(~bad.ravel())
     if good.size == 0:
         msg = f"{scan.source}: no good pixel is left to calibrate"
