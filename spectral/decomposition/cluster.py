@@ -19,6 +19,8 @@ if TYPE_CHECKING:
     from spectral.scans.scan import Scan
 
 IN_FLIGHT_PER_WORKER = 2
+ANSWER = "20s"
+"""How long to wait for the scheduler's answer."""
 TRIES = 2
 """Times that a block is tried again when reading its counts fails."""
 _ONE_BLOCK_AT_A_TIME = Lock()
@@ -77,7 +79,7 @@ def on_cluster(
         if not blocks:
             return
         try:
-            client = distributed.Client(address, timeout="20s")
+            client = distributed.Client(address, timeout=ANSWER)
         except (OSError, ValueError) as error:
             msg = f"no scheduler answers at {address} ({error})"
             raise InputError(msg) from error
