@@ -155,7 +155,8 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
         if self.faults == "keep":
             return {}
         problems = exposure_problems(scan, exposure_levels(scan, reasons == 0))
-        used = set(scan.exposures("open", "wedge").tolist()) - set(self.excluded)
+        used = set(scan.exposures("dark", "open", "wedge").tolist())
+        used -= set(self.excluded)
         return {p.exposure: p.text for p in problems if p.exposure in used}
 
     def _without_faults(

@@ -13,7 +13,7 @@ if TYPE_CHECKING:
 
 DEGREES = (1, 2, 3, 4)
 SIZES = (3e-4, 1e-3, 3e-3, 1e-2, 3e-2, 0.1)
-DRIFTS = (1e-5, 1e-4, 3e-4, 1e-3, 3e-3)
+DRIFTS = (1e-5, 1e-4, 3e-4, 1e-3, 3e-3, 1e-2, 3e-2)
 REACH = 1.2
 
 

@@ -194,7 +194,7 @@ def build_scenario(
     made = simulate_scan(
         template,
         detector(),
-        VirtualTube(photons_per_mas=16000.0, drift_step=5e-4, heel=0.02),
+        VirtualTube(photons_per_mas=13000.0, drift_step=5e-4, heel=0.02),
         seed=seed,
         object_areal_density=areal,
         progress=tell,
