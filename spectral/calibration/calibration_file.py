@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from spectral.calibration.calibration_shapes import part_at_fault
 from spectral.calibration.residual import ResidualCorrection
 from spectral.calibration.result import Calibration, Promise, StepTable
 from spectral.errors import FileFormatError
@@ -137,8 +138,8 @@ def read_calibration(path: str | Path) -> Calibration:
                 "'wedgewright calibrate'"
             )
             raise FileFormatError(msg)
-        version = int(file.attrs.get("format_version", 0))
-        if version != FORMAT_VERSION:
+        version = plain(file.attrs.get("format_version", 0))
+        if version != str(FORMAT_VERSION):
             msg = (
                 f"{path}: calibration format {version} is not known to this version "
                 f"(it reads {FORMAT_VERSION}); calibrate again or update the package"
@@ -149,6 +150,19 @@ def read_calibration(path: str | Path) -> Calibration:
         except KeyError as error:
             msg = f"{path}: the calibration lacks a part ({error}); calibrate again"
             raise FileFormatError(msg) from error
+        except (OSError, ValueError, TypeError) as error:
+            msg = (
+                f"{path}: the calibration is damaged ({error}); copy it again from "
+                "where it was made, or calibrate again"
+            )
+            raise FileFormatError(msg) from error
+    fault = part_at_fault(found)
+    if fault:
+        msg = (
+            f"{path}: the calibration is damaged: {fault}; copy it again from where it "
+            "was made, or calibrate again"
+        )
+        raise FileFormatError(msg)
     return replace(found, digest=file_digest(path))
 
 

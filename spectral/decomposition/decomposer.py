@@ -26,7 +26,7 @@ from spectral.decomposition.session import Session, current_of, normalise
 from spectral.decomposition.solver import SolveOutcome, solve
 from spectral.errors import InputError, ScanError
 from spectral.forward.counting_model import counts_to_bins
-from spectral.scans.bad_pixels import find_bad_pixels
+from spectral.scans.bad_pixels import commonest_reason, find_bad_pixels
 from spectral.scans.counts_faults import count_faults
 
 if TYPE_CHECKING:
@@ -98,15 +98,16 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
             If scan and calibration are not of one detector setting.
         """
         check_match(self.calibration, scan)
+        self.bad_ = find_bad_pixels(scan)
+        self.usable_ = self.calibration.good & (self.bad_ == 0)
+        if not self.usable_.any():
+            msg = f"{scan.source}: no pixel is sound in both scan and calibration"
+            reason = commonest_reason(self.bad_)
+            raise ScanError(f"{msg}; of most in the scan, {reason}" if reason else msg)
         self.calibration_ = self.calibration
         follow = self.follow_pixels and scan.exposures("open").size > 0
         if follow and not scan_differs(self.calibration, scan):
             self.calibration_ = updated_by_opens(self.calibration, scan)
-        self.bad_ = find_bad_pixels(scan)
-        self.usable_ = self.calibration_.good & (self.bad_ == 0)
-        if not self.usable_.any():
-            msg = f"{scan.source}: no pixel is sound in both scan and calibration"
-            raise ScanError(msg)
         self.flat_ = np.flatnonzero(self.usable_.ravel())
         self.session_: Session = normalise(self.calibration_, scan, self.usable_)
         self.current_ = current_of(scan, self.calibration_)

@@ -6,7 +6,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.errors import ScanError
+from spectral.calibration.matching import beam_differs
+from spectral.errors import InputError, ScanError
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -37,6 +38,10 @@ def chosen_exposures(scan: Scan, exposures: Sequence[int] | None) -> NDArray[np.
             raise ScanError(msg)
         return chosen
     chosen = np.array(exposures, np.int64)
+    distinct, times = np.unique(chosen, return_counts=True)
+    if np.any(times > 1):
+        msg = f"{scan.source}: exposure {distinct[times > 1][0]} is asked for twice"
+        raise InputError(msg)
     wrong = (chosen < 0) | (chosen >= scan.shape[0])
     if wrong.any() or chosen.size == 0:
         named = ", ".join(map(str, chosen[wrong])) or "none"
@@ -81,6 +86,7 @@ def check_match(calibration: Calibration, scan: Scan) -> None:
                 f"has the filters {', '.join(filters)}, the calibration "
                 f"{', '.join(calibration.filters)}"
             )
+    differs = differs or beam_differs(calibration, scan)
     if differs:
         msg = f"{scan.source} {differs}: use the calibration of this setting"
         raise ScanError(msg)
