@@ -16,6 +16,7 @@ from spectral.calibration.threshold_scan.result import threshold_prior
 from spectral.scans.script import open_scan
 
 from ..outcome import SAFETY, UseError, ends_well, json_option, scan_argument, show
+from ..outputs import OutputFile, keep_inputs
 from ..stages import stages
 
 
@@ -24,7 +25,7 @@ from ..stages import stages
 @click.option(
     "-o",
     "--output",
-    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    type=OutputFile(),
     required=True,
     help="Calibration file to write (HDF5).",
 )
@@ -73,6 +74,10 @@ def calibrate(
     tube currents make it better. What was learned, how well, and everything that
     decomposing needs goes into one file.
     """
+    keep_inputs([output], scan_path, energies_path)
+    if settings and energies_path is None:
+        message = "--setting goes with --thresholds; name the file of energies too"
+        raise UseError(message)
     scan = open_scan(scan_path)
     known = None
     if energies_path is not None:

@@ -12,6 +12,7 @@ from spectral.calibration.comparison_summary import comparison_summary, comparis
 from spectral.reporting.comparison_page import write_comparison
 
 from ..outcome import SAFETY, ends_well, json_option, show
+from ..outputs import OutputFile, keep_inputs
 
 _EXISTING = click.Path(exists=True, dir_okay=False, path_type=Path)
 
@@ -22,7 +23,7 @@ _EXISTING = click.Path(exists=True, dir_okay=False, path_type=Path)
 @click.option(
     "-o",
     "--output",
-    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    type=OutputFile(),
     help="Also write a page with pictures (HTML, all in one file).",
 )
 @json_option
@@ -33,6 +34,7 @@ def compare(old_path: Path, new_path: Path, output: Path | None, as_json: bool) 
     Thresholds in keV, areas, flux and dead time in percent, pixels gone bad or
     recovered; each change beside the one that errors alone explain.
     """
+    keep_inputs([output], old_path, new_path)
     old, new = read_calibration(old_path), read_calibration(new_path)
     found = compare_calibrations(old, new)
     summary, text = comparison_summary(found), comparison_text(found)

@@ -25,6 +25,7 @@ from ..outcome import (
     scan_argument,
     show,
 )
+from ..outputs import OutputFile, keep_inputs
 from ..stages import stages
 
 SHOWN = 32
@@ -41,7 +42,7 @@ SHOWN = 32
 @click.option(
     "-o",
     "--output",
-    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    type=OutputFile(),
     required=True,
     help="Maps file to write (NeXus).",
 )
@@ -97,9 +98,7 @@ def decompose(
     filters and thresholds. Open exposures in SCAN set the tube's output. An
     interrupted run goes on when the same command is given again.
     """
-    if output.exists() and any(map(output.samefile, (calibration_path, scan_path))):
-        msg = f"{output} is read by this command; name another output"
-        raise click.UsageError(msg)
+    keep_inputs([output], calibration_path, scan_path)
     calibration = read_calibration(calibration_path)
     scan = open_scan(scan_path)
     options = {

@@ -12,6 +12,7 @@ from spectral.calibration.refresh_summary import refresh_summary, refresh_text
 from spectral.scans.script import open_scan
 
 from ..outcome import SAFETY, ends_well, json_option, scan_argument, show
+from ..outputs import OutputFile, keep_inputs
 
 
 @click.command(epilog=SAFETY)
@@ -24,7 +25,7 @@ from ..outcome import SAFETY, ends_well, json_option, scan_argument, show
 @click.option(
     "-o",
     "--output",
-    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    type=OutputFile(),
     required=True,
     help="Calibration file to write (HDF5).",
 )
@@ -39,6 +40,7 @@ def refresh(
     setting. What moved is said, and whether a full wedge scan is needed; the new
     calibration names the old one and the scan.
     """
+    keep_inputs([output], calibration_path, scan_path)
     old = read_calibration(calibration_path)
     done = refresh_calibration(old, open_scan(scan_path))
     write_calibration(done.calibration, output)

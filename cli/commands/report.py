@@ -11,6 +11,7 @@ import click
 from spectral.reporting.report import write_report
 
 from ..outcome import SAFETY, ends_well, json_option, show
+from ..outputs import OutputFile, keep_inputs
 
 if TYPE_CHECKING:
     from spectral.reporting.page import Page
@@ -25,7 +26,7 @@ if TYPE_CHECKING:
 @click.option(
     "-o",
     "--output",
-    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    type=OutputFile(),
     default="report.html",
     show_default=True,
     help="Page to write (HTML, all in one file).",
@@ -53,6 +54,7 @@ def report(
     finds out which. The page opens with the answer in words and numbers, and ends with
     what was assumed.
     """
+    keep_inputs([output], path)
     page = write_report(path, output, exposure=exposure, row=row)
     show(_summary(page, output), _text(page, output), as_json=as_json)
 

@@ -13,6 +13,7 @@ from spectral.scans.truth_file import write_truth
 from spectral.virtual.script_scan import simulate_script
 
 from ..outcome import SAFETY, ends_well, json_option, show
+from ..outputs import OutputFile, keep_inputs
 from ..stages import stages
 
 if TYPE_CHECKING:
@@ -28,14 +29,14 @@ if TYPE_CHECKING:
 @click.option(
     "-o",
     "--output",
-    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    type=OutputFile(),
     required=True,
     help="Scan file to write (NeXus).",
 )
 @click.option(
     "--truth",
     "truth_path",
-    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    type=OutputFile(),
     help="Also write what is true of pixels, tube and object (HDF5).",
 )
 @click.option(
@@ -65,6 +66,7 @@ def simulate(
     the photons per mA s and the seed; it may plant faults and draw an object. The scan
     says no more than a measured one would. Same seed, same file.
     """
+    keep_inputs([output, truth_path], script)
     with stages() as tell:
         made = simulate_script(
             script,

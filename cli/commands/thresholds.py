@@ -15,6 +15,7 @@ from spectral.calibration.threshold_scan.summary import (
 from spectral.scans.threshold_scan_file import read_threshold_scan
 
 from ..outcome import SAFETY, ends_well, json_option, show
+from ..outputs import OutputFile, keep_inputs
 from ..stages import stages
 
 
@@ -29,7 +30,7 @@ from ..stages import stages
 @click.option(
     "-o",
     "--output",
-    type=click.Path(dir_okay=False, writable=True, path_type=Path),
+    type=OutputFile(),
     required=True,
     help="File of threshold energies to write (HDF5).",
 )
@@ -56,6 +57,7 @@ def thresholds(
     of a tube's spectrum. Two known energies are needed, three show whether the scale
     is straight.
     """
+    keep_inputs([output], *scan_paths)
     scans = [read_threshold_scan(path) for path in scan_paths]
     with stages() as tell:
         energies = threshold_energies(

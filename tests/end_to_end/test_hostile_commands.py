@@ -1,0 +1,195 @@
+"""Every command used wrongly: one sentence, the right exit code, nothing written."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from importlib.metadata import entry_points
+from typing import TYPE_CHECKING
+
+import click
+import pytest
+from click.testing import CliRunner
+
+from spectral.calibration.calibration_file import write_calibration
+from spectral.scans.scan_file import write_scan
+
+if TYPE_CHECKING:
+    from collections.abc import Callable
+    from pathlib import Path
+
+    from click.testing import Result
+
+    from spectral.calibration.result import Calibration
+    from spectral.scans.scan import Scan
+
+pytestmark = pytest.mark.end_to_end
+
+
+def command(*words: object) -> Result:
+    (script,) = entry_points(group="console_scripts", name="wedgewright")
+    group = script.load()
+    assert isinstance(group, click.Group)
+    return CliRunner().invoke(group, list(map(str, words)))
+
+
+@pytest.fixture
+def folder(
+    make_scan: Callable[..., Scan],
+    make_calibration: Callable[..., Calibration],
+    make_series: Callable[..., Scan],
+    tmp_path: Path,
+) -> Path:
+    """A wedge scan, a calibration, an object scan, and files that are none of them."""
+    write_scan(make_scan(pixels=(6, 8)), tmp_path / "wedge.h5")
+    calibration = make_calibration((6, 8))
+    write_calibration(calibration, tmp_path / "calibration.h5")
+    write_scan(make_series(calibration, 2), tmp_path / "object.h5")
+    (tmp_path / "text.h5").write_text("threshold,counts\n")
+    (tmp_path / "empty.h5").write_bytes(b"")
+    (tmp_path / "scan.toml").write_text("[source]\nvoltage_kv = 90\n")
+    whole = (tmp_path / "object.h5").read_bytes()
+    (tmp_path / "half.h5").write_bytes(whole[: len(whole) // 2])
+    return tmp_path
+
+
+def held(folder: Path) -> dict[str, bytes]:
+    return {p.name: p.read_bytes() for p in folder.rglob("*") if p.is_file()}
+
+
+def sentence(done: Result) -> str:
+    """The one line of an error, whatever click says of the usage before it."""
+    lines = [line for line in done.stderr.splitlines() if line.startswith("Error: ")]
+    assert len(lines) == 1, done.stderr
+    assert isinstance(done.exception, SystemExit)
+    return lines[0]
+
+
+WRONG_FILES = [
+    ("check", "half.h5", "the file is truncated; copy it again"),
+    ("check", "empty.h5", "this is not an HDF5 file"),
+    ("check", "text.h5", "this is not an HDF5 file"),
+    ("check", "calibration.h5", "so this is not a scan"),
+    ("check", "scan.toml", "scan.toml, line 1:"),
+    ("calibrate", "calibration.h5", "so this is not a scan"),
+    ("calibrate", "object.h5", "sensor_material and sensor_thickness are needed"),
+    ("simulate", "wedge.h5", "wedge.h5"),
+    ("simulate", "scan.toml", "scan.toml, line 1:"),
+    ("thresholds", "wedge.h5", "wedge.h5"),
+    ("report", "half.h5", "the file is truncated; copy it again"),
+    ("report", "text.h5", "this is not an HDF5 file"),
+    ("decompose wedge.h5", "object.h5", "this is not a calibration file; make one"),
+    ("decompose calibration.h5", "calibration.h5", "so this is not a scan"),
+    ("decompose calibration.h5", "half.h5", "the file is truncated; copy it again"),
+    ("refresh wedge.h5", "object.h5", "this is not a calibration file; make one"),
+    ("refresh calibration.h5", "calibration.h5", "so this is not a scan"),
+    ("compare calibration.h5", "wedge.h5", "this is not a calibration file; make one"),
+    ("compare half.h5", "calibration.h5", "the file is truncated; copy it again"),
+]
+
+
+@pytest.mark.parametrize(("words", "file", "text"), WRONG_FILES)
+def test_the_wrong_file_is_one_sentence_and_writes_nothing(
+    folder: Path, words: str, file: str, text: str
+) -> None:
+    before = held(folder)
+    name, *others = words.split()
+    output = [] if name == "check" else ["-o", folder / "out.h5"]
+    done = command(name, *(folder / o for o in others), folder / file, *output)
+    assert done.exit_code == 1
+    assert text in sentence(done)
+    assert any(f"{folder / read}" in sentence(done) for read in (file, *others))
+    assert held(folder) == before
+
+
+READERS = {
+    "calibrate": ("wedge.h5",),
+    "decompose": ("calibration.h5", "object.h5"),
+    "refresh": ("calibration.h5", "object.h5"),
+    "report": ("object.h5",),
+    "simulate": ("scan.toml",),
+    "thresholds": ("wedge.h5",),
+    "compare": ("calibration.h5", "calibration.h5"),
+}
+
+
+@pytest.mark.parametrize("name", READERS)
+def test_an_input_is_never_written_over(folder: Path, name: str) -> None:
+    before = held(folder)
+    for file in READERS[name]:
+        done = command(name, *(folder / f for f in READERS[name]), "-o", folder / file)
+        assert done.exit_code == 2
+        assert f"{file} is read by this command; name another output" in sentence(done)
+    assert held(folder) == before
+
+
+@pytest.mark.parametrize("name", READERS)
+def test_an_output_without_a_folder_is_refused_at_once(folder: Path, name: str) -> None:
+    before = held(folder)
+    files = [folder / f for f in READERS[name]]
+    done = command(name, *files, "-o", folder / "none" / "out.h5")
+    assert done.exit_code == 2
+    assert "none does not exist; make it, or name another output" in sentence(done)
+    done = command(name, *files, "-o", "/proc/out.h5")
+    assert done.exit_code == 2
+    assert "nothing can be written into the folder /proc" in sentence(done)
+    assert held(folder) == before
+
+
+def test_two_outputs_are_not_one_file(folder: Path) -> None:
+    out = folder / "out.h5"
+    done = command("simulate", folder / "scan.toml", "-o", out, "--truth", out)
+    assert done.exit_code == 2
+    assert "is named for two files; name another output" in sentence(done)
+    assert not out.exists()
+
+
+WRONG_WORDS = [
+    (("--without", 17), "exposure 17 cannot be left out; exposures 0 to 16 exist"),
+    (("--without", -1), "exposure -1 cannot be left out; exposures 0 to 16 exist"),
+    (("--setting", 20), "--setting goes with --thresholds; name the file of energies"),
+]
+
+
+@pytest.mark.parametrize(("words", "text"), WRONG_WORDS)
+def test_words_that_cannot_be_are_wrong_use(
+    folder: Path, words: tuple[object, ...], text: str
+) -> None:
+    done = command("calibrate", folder / "wedge.h5", "-o", folder / "out.h5", *words)
+    assert done.exit_code == 2
+    assert text in sentence(done)
+    assert not (folder / "out.h5").exists()
+
+
+def test_an_exposure_named_twice_is_wrong_use(folder: Path) -> None:
+    before = held(folder)
+    files = (folder / "calibration.h5", folder / "object.h5")
+    twice = ("--exposure", 3, "--exposure", 3)
+    done = command("decompose", *files, "-o", folder / "out.h5", *twice)
+    assert done.exit_code == 2
+    assert "exposure 3 is asked for twice" in sentence(done)
+    assert held(folder) == before
+
+
+def test_check_and_report_say_the_same_of_what_a_model_cannot_take(
+    make_scan: Callable[..., Scan], tmp_path: Path
+) -> None:
+    path = tmp_path / "wedge.h5"
+    write_scan(replace(make_scan(pixels=(6, 8)), voltage_kv=57.0), path)
+    done = command("check", path)
+    assert done.exit_code == 1
+    text = "threshold_energy 58 keV is not below the tube's voltage, 57 kV"
+    assert text in sentence(done)
+    page = tmp_path / "page.html"
+    assert command("report", path, "-o", page).exit_code == 0
+    assert text[1:].replace("'", "&#x27;") in page.read_text(encoding="utf-8")
+
+
+def test_names_beyond_ascii_are_no_trouble(
+    make_scan: Callable[..., Scan], tmp_path: Path
+) -> None:
+    folder = tmp_path / "Röntgen µ 線"
+    folder.mkdir()
+    write_scan(make_scan(pixels=(6, 8)), folder / "ö 1.h5")
+    done = command("check", folder / "ö 1.h5")
+    assert done.exit_code == 0, done.output
+    assert "ö 1.h5: fit" in done.stdout
