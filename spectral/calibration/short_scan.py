@@ -9,6 +9,7 @@ import numpy as np
 from spectral.calibration.matching import beam_differs, scan_differs
 from spectral.calibration.wedge_data import WedgeData
 from spectral.errors import ScanError
+from spectral.scans.bad_pixels import commonest_reason, find_bad_pixels
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -51,7 +52,8 @@ def short_scan_data(
     good = np.flatnonzero(usable.ravel())
     if good.size == 0:
         msg = f"{scan.source}: no pixel is sound in both scan and calibration"
-        raise ScanError(msg)
+        reason = commonest_reason(find_bad_pixels(scan))
+        raise ScanError(f"{msg}; of most in the scan, {reason}" if reason else msg)
     chosen = scan.exposures(*roles)
     areal = scan.areal_density[chosen]
     is_open = np.array([scan.role[int(i)] == "open" for i in chosen])

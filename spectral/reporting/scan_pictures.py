@@ -58,8 +58,9 @@ def course_picture(scan: Scan, figures: ScanFigures) -> Picture:
     )
     sheet.figure.legend(handles=_course_legend(scan), loc="outside right upper")
     lit = [i for i, r in enumerate(scan.role) if r != "dark"]
-    low = float(np.nanmin(figures.median[lit, -1])) if lit else 0.0
-    high = float(np.nanmax(figures.median[lit, 0])) if lit else 0.0
+    low = float(np.min(np.nan_to_num(figures.median[lit, -1]), initial=np.inf))
+    low = low if lit else 0.0
+    high = float(np.max(np.nan_to_num(figures.median[lit, 0]), initial=0.0))
     return sheet.picture(
         alt=(
             f"Counts of the median pixel in {count(n, 'exposure')} at {k} thresholds, "
@@ -193,7 +194,7 @@ def _loss_words(check: ScanCheck) -> str:
 def drift_picture(scan: Scan, figures: ScanFigures) -> Picture | None:
     """Open exposures of the brightest setting, first to last."""
     opens = brightest_opens(scan, figures.mean)
-    if opens.size < 2:
+    if opens.size < 2 or not figures.mean[opens[0], 0] > 0.0:
         return None
     sheet = Sheet(2.5, width=9.0)
     axes = sheet.axes[0]
@@ -255,7 +256,8 @@ def dispersion_picture(scan: Scan, check: ScanCheck) -> Picture | None:
         if i == 0:
             axes.set_ylabel("variance / mean")
             axes.legend(loc="best")
-    worst = max(float(np.nanmax(np.abs(d.ratio - d.expected))) for d in settings)
+    off = [np.nan_to_num(np.abs(d.ratio - d.expected)).max() for d in settings]
+    worst = float(max(off))
     return sheet.picture(
         alt=(
             "Variance over mean of repeated exposures at each threshold, largest "

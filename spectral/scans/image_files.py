@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
@@ -10,6 +11,9 @@ import tifffile
 
 from spectral.errors import FileFormatError
 from spectral.scans.nexus import opened
+
+# what it notices of a damaged file becomes one sentence of our own
+logging.getLogger("tifffile").addHandler(logging.NullHandler())
 
 if TYPE_CHECKING:
     from collections.abc import Sequence

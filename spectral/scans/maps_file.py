@@ -233,7 +233,7 @@ def _field(group: Node, name: str, select: NDArray[np.int64] | None) -> NDArray[
         return np.array([dataset[int(i)] for i in select], kind).reshape(
             len(select), *dataset.shape[1:]
         )
-    except OSError as error:
+    except (OSError, IndexError, ValueError) as error:
         msg = f"{group.name(name)} cannot be read: the file is damaged ({error})"
         raise FileFormatError(msg) from error
 

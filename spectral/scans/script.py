@@ -57,7 +57,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from spectral.errors import InputError, ScanError
+from spectral.errors import FileFormatError, InputError, ScanError
 from spectral.scans.image_files import ImageFile, image_layout, read_pages
 from spectral.scans.scan import MOST_G_CM3, Filter, Layer, Scan
 from spectral.scans.scan_file import file_digest, read_scan
@@ -211,8 +211,12 @@ class ScanScript:
     def _mask(self, shape: tuple[int, ...]) -> NDArray[np.uint32]:
         if self.mask_file is None:
             return np.zeros(shape, np.uint32)
-        layout = image_layout(self.mask_file)
-        raw = read_pages(self.mask_file, [0])[0]
+        try:
+            layout = image_layout(self.mask_file)
+            raw = read_pages(self.mask_file, [0])[0]
+        except FileFormatError as error:
+            msg = f"{self.path}: pixel_mask: {error}"
+            raise FileFormatError(msg) from error
         if raw.shape != shape or layout.pages != 1 or raw.dtype.kind not in "iu":
             msg = (
                 f"{self.path}: pixel_mask {self.mask_file} must be one image of "
@@ -287,7 +291,10 @@ def _detector(root: Table) -> Table:
     if "material" in sensor:
         values["sensor_material"] = sensor["material"]
     if "thickness_um" in sensor:
-        values["sensor_thickness_mm"] = sensor["thickness_um"] / 1000.0
+        thickness = described.checked_number(
+            "thickness_um", sensor["thickness_um"], zero=False
+        )
+        values["sensor_thickness_mm"] = thickness / 1000.0
     if "pitch_um" in sensor:
         values["pixel_size_um"] = [sensor["pitch_um"]] * 2
     if "thresholds_kev" in electronics:
@@ -362,4 +369,6 @@ def open_scan(path: str | Path) -> Scan:
     if path.is_dir():
         msg = f"{path} is a folder; name a scan file or a scan script"
         raise InputError(msg)
-    return read_script(path).scan() if path.suffix == ".toml" else read_scan(path)
+    if path.suffix.lower() == ".toml":
+        return read_script(path).scan()
+    return read_scan(path)

@@ -171,7 +171,11 @@ def _thickness(own: Table, role: str, materials: tuple[str, ...]) -> tuple[float
     if not isinstance(said, dict):
         own.stop("layers_mm", "layers_mm must be a table: { NAME = mm }")
     if role in ("dark", "open") and any(said.values()):
-        msg = f"a {role} exposure has nothing in the beam, but layers_mm says {said}"
+        article = "an" if role == "open" else "a"
+        msg = (
+            f"{article} {role} exposure has nothing in the beam, but layers_mm says "
+            f"{said}"
+        )
         own.stop("layers_mm", msg)
     for name in said:
         if name not in materials:
