@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from tempfile import TemporaryFile
 from time import perf_counter
 from typing import TYPE_CHECKING
 
@@ -11,7 +12,8 @@ import numpy as np
 from spectral.calibration.calibration_file import read_calibration, write_calibration
 from spectral.calibration.calibrator import WedgeCalibrator
 from spectral.decomposition.decomposer import MaterialDecomposer
-from spectral.demo.scenario import REGIONS, Scenario, build_scenario
+from spectral.demo.scenario import REGIONS, WEDGE_TITLE, Scenario, build_scenario
+from spectral.errors import InputError, ScanError
 from spectral.reporting.report import write_report
 from spectral.scans.maps_file import write_maps
 from spectral.scans.scan_check import check_scan
@@ -88,7 +90,6 @@ def run_demo(
     def tell(stage: str) -> Callable[[float], None]:
         return lambda share: progress(stage, share) if progress is not None else None
 
-    folder.mkdir(parents=True, exist_ok=True)
     names = {
         "wedge": "wedge.h5",
         "part": "part.h5",
@@ -99,6 +100,7 @@ def run_demo(
         "page of the maps": "maps.html",
     }
     files = {what: folder / name for what, name in names.items()}
+    _claim(folder, files)
     seconds: dict[str, float] = {}
     clock = perf_counter()
 
@@ -135,6 +137,39 @@ def run_demo(
         bad_true=int(scenario.bad.sum()),
         seconds=seconds,
     )
+
+
+def _claim(folder: Path, files: dict[str, Path]) -> None:
+    """Make the folder; refuse one that takes no files, or holds others' by the names.
+
+    Raises
+    ------
+    InputError
+    """
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+        with TemporaryFile(dir=folder):
+            pass
+    except OSError as error:
+        msg = (
+            f"{folder}: the folder takes no files ({error.strerror or error}); name "
+            "another"
+        )
+        raise InputError(msg) from error
+    taken = [path.name for path in files.values() if path.exists()]
+    if taken and not _made_here(files["wedge"]):
+        msg = (
+            f"{folder} holds {taken[0]}, which the demonstration did not make and would "
+            "replace; name another folder"
+        )
+        raise InputError(msg)
+
+
+def _made_here(wedge: Path) -> bool:
+    try:
+        return read_scan(wedge).title == WEDGE_TITLE
+    except ScanError:
+        return False
 
 
 def _regions(scenario: Scenario, maps: Maps) -> tuple[RegionResult, ...]:

@@ -34,6 +34,7 @@ ALUMINIUM = Layer(name="Al", formula="Al", density_g_cm3=2.70)
 STEEL = Layer(name="steel", formula="Fe", density_g_cm3=7.87)
 REGIONS = ("air", "housing wall", "housing floor", "aluminium insert", "ramp", "pins")
 PIN_MM = 1.0
+WEDGE_TITLE = "demonstration wedge scan (invented)"
 STACKS_MM = (
     (5.0, 0.0), (15.0, 0.0), (30.0, 0.0), (50.0, 0.0),
     (0.0, 0.5), (0.0, 2.0), (0.0, 5.0), (0.0, 9.0),
@@ -203,11 +204,11 @@ def build_scenario(
     everything = np.arange(len(template.role))
     pixels = made.pixels
     return Scenario(
-        wedge=_session(
-            made.scan, everything[everything < last_wedge], "demonstration wedge scan"
-        ),
+        wedge=_session(made.scan, everything[everything < last_wedge], WEDGE_TITLE),
         part=_session(
-            made.scan, everything[everything >= last_wedge], "demonstration part"
+            made.scan,
+            everything[everything >= last_wedge],
+            "demonstration part (invented)",
         ),
         areal_density=areal[:2],
         region=region,
@@ -227,5 +228,5 @@ def _session(scan: Scan, exposures: NDArray[np.int64], title: str) -> Scan:
         materials=scan.materials[:2],
         count_time_s=scan.count_time_s[exposures],
         current_ma=None if current is None else current[exposures],
-        title=f"{title} (invented)",
+        title=title,
     )

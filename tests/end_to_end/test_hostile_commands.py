@@ -7,6 +7,7 @@ from importlib.metadata import entry_points
 from typing import TYPE_CHECKING
 
 import click
+import numpy as np
 import pytest
 from click.testing import CliRunner
 
@@ -193,3 +194,38 @@ def test_names_beyond_ascii_are_no_trouble(
     done = command("check", folder / "ö 1.h5")
     assert done.exit_code == 0, done.output
     assert "ö 1.h5: fit" in done.stdout
+
+
+def test_the_demonstration_replaces_nothing_of_others(folder: Path) -> None:
+    before = held(folder)
+    done = command("demo", folder)
+    assert done.exit_code == 2
+    assert "which the demonstration did not make and would replace" in sentence(done)
+    (folder / "wedge.h5").unlink()
+    assert "holds calibration.h5, which" in sentence(command("demo", folder))
+    assert held(folder) == {k: v for k, v in before.items() if k != "wedge.h5"}
+
+
+def test_the_demonstration_needs_a_folder_that_takes_files() -> None:
+    done = command("demo", "/proc/demonstration")
+    assert done.exit_code == 2
+    assert "/proc/demonstration: the folder takes no files" in sentence(done)
+
+
+@pytest.mark.parametrize("fill", [0, 2**32 - 1, 1000])
+def test_a_report_of_a_useless_scan_leaks_no_warning(
+    make_scan: Callable[..., Scan], tmp_path: Path, fill: int
+) -> None:
+    scan = make_scan(pixels=(6, 8))
+    counts = np.full(scan.shape, fill, np.uint32)
+    write_scan(scan.with_counts(counts), tmp_path / "scan.h5")
+    done = command("report", tmp_path / "scan.h5", "-o", tmp_path / "page.html")
+    assert done.exit_code == 0, done.output
+    assert "not fit" in (tmp_path / "page.html").read_text(encoding="utf-8").lower()
+
+
+def test_a_script_may_be_spelled_in_capitals(folder: Path) -> None:
+    (folder / "scan.toml").rename(folder / "SCAN.TOML")
+    done = command("check", folder / "SCAN.TOML")
+    assert done.exit_code == 1
+    assert "SCAN.TOML, line 1:" in sentence(done)
