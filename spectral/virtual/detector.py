@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import tomllib
 from dataclasses import dataclass, fields
 from pathlib import Path
@@ -169,7 +170,10 @@ class VirtualDetector:
                 f"{', '.join(PULSE_SHAPES)}"
             )
             raise InputError(msg)
-        if self.noise_kev < 0.0 or not self.dead_time_ns > 0.0:
+        if (
+            not 0.0 <= self.noise_kev < math.inf
+            or not 0.0 < self.dead_time_ns < math.inf
+        ):
             msg = (
                 "noise_kev must not be negative and dead_time_ns must be positive, got "
                 f"{self.noise_kev!r} and {self.dead_time_ns!r}"

@@ -38,7 +38,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from spectral.errors import InputError
+from spectral.errors import InputError, ScanError
 from spectral.physics.cross_sections import k_edge_kev
 from spectral.physics.materials import find_material
 from spectral.scans.scan import Layer, Scan
@@ -123,10 +123,22 @@ def simulate_script(
     Raises
     ------
     ScanError
-        If a key of the script is missing, unknown or cannot be.
-    InputError
-        If the detector's description cannot be.
+        If a key of the script is missing, unknown or cannot be, or what it says of
+        tube, materials or detector.
     """
+    try:
+        return _simulated(path, pixels, threads, progress)
+    except InputError as error:
+        msg = f"{path}: {error}"
+        raise ScanError(msg) from error
+
+
+def _simulated(
+    path: Path,
+    pixels: tuple[int, int] | None,
+    threads: int,
+    progress: Callable[[float], None] | None,
+) -> SimulatedScript:
     script = read_script(path)
     root = read_table(path)
     table = root.table("virtual")

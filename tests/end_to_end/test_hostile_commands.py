@@ -229,3 +229,63 @@ def test_a_script_may_be_spelled_in_capitals(folder: Path) -> None:
     done = command("check", folder / "SCAN.TOML")
     assert done.exit_code == 1
     assert "SCAN.TOML, line 1:" in sentence(done)
+
+
+SIMULATED = """
+[source]
+voltage_kv = 40
+filters = [{ material = "Al", thickness_mm = 1.0 }]
+[detector]
+use = "detector.toml"
+rows = 2
+columns = 2
+[[material]]
+name = "PMMA"
+formula = "C5H8O2"
+density_g_cm3 = 1.19
+[[exposure]]
+role = "open"
+count_time_s = 0.01
+[virtual]
+photons_per_mas = 100
+seed = 1
+"""
+DESCRIBED = """
+name = "made up"
+[sensor]
+material = "Si"
+density_g_cm3 = 2.33
+thickness_um = 300.0
+pitch_um = 100.0
+bias_v = 200.0
+pair_energy_ev = 3.62
+fano = 0.115
+relative_permittivity = 11.7
+[electronics]
+thresholds_kev = [10.0, 20.0]
+noise_kev = 0.8
+dead_time_ns = 100.0
+"""
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "text"),
+    [
+        ('"C5H8O2"', '"Foo9"', "'Foo9' is neither a chemical formula nor a known"),
+        ("noise_kev = 0.8", "noise_kev = nan", "noise_kev must not be negative and"),
+        ("dead_time_ns = 100.0", "dead_time_ns = inf", "dead_time_ns must be positive"),
+        ("um = 300.0", 'um = "thick"', "thickness_um must be a number above zero"),
+    ],
+)
+def test_a_simulation_of_what_cannot_be_names_the_script(
+    tmp_path: Path, old: str, new: str, text: str
+) -> None:
+    assert (SIMULATED + DESCRIBED).count(old) == 1
+    (tmp_path / "detector.toml").write_text(DESCRIBED.replace(old, new))
+    (tmp_path / "scan.toml").write_text(SIMULATED.replace(old, new))
+    before = held(tmp_path)
+    done = command("simulate", tmp_path / "scan.toml", "-o", tmp_path / "out.h5")
+    assert done.exit_code == 1
+    assert text in sentence(done)
+    assert ".toml" in sentence(done)
+    assert held(tmp_path) == before
