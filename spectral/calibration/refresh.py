@@ -17,6 +17,7 @@ from spectral.calibration.promise import with_promise
 from spectral.calibration.scan_sentences import told_of
 from spectral.calibration.short_scan import short_scan_data
 from spectral.scans.bad_pixels import PixelReason, find_bad_pixels
+from spectral.scans.pooled_opens import pooled_opens
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -145,7 +146,10 @@ def updated_by_opens(calibration: Calibration, scan: Scan) -> Calibration:
         return calibration
     found = find_bad_pixels(scan) if scan.shape[2:] == calibration.shape else 0
     data = short_scan_data(
-        calibration, scan, calibration.good & (found == 0), roles=("open",)
+        calibration,
+        pooled_opens(scan),
+        calibration.good & (found == 0),
+        roles=("open",),
     )
     with told_of(scan):
         output = common_drift(calibration, data, shift_prior_kev=1e-6).output

@@ -16,6 +16,9 @@ if TYPE_CHECKING:
     from spectral.scans.scan import Scan
 
 
+BLOCK = 8192
+
+
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Session:
     """Output of the tube during a scan, relative to the calibration's.
@@ -88,13 +91,19 @@ def normalise(
     flat = np.flatnonzero(usable.ravel())
     current = current_of(scan, calibration)
     found = np.ones(opens.size)
+    output = 1.0
     seen = np.zeros(bins)
     wanted = np.zeros(bins)
     for i, e in enumerate(opens):
         counts = scan.counts.read([int(e)])[0].reshape(bins, -1)[:, flat]
         measured = counts_to_bins(counts.astype(np.float64), axis=0).sum(axis=1)
         output, expected = _met_by(
-            calibration, measured.sum(), float(current[e]), flat, scan.count_time_s[e]
+            calibration,
+            measured.sum(),
+            float(current[e]),
+            flat,
+            scan.count_time_s[e],
+            start=output,
         )
         found[i] = output
         seen += measured
@@ -114,16 +123,19 @@ def _met_by(
     current_ma: float,
     flat: NDArray[np.int64],
     count_time_s: float,
+    *,
+    start: float,
 ) -> tuple[float, NDArray[np.float64]]:
     """Output at which the pixels' open counts are met, and their sum by bin."""
     nothing = np.zeros((1, calibration.largest.size))
-    output = 1.0
+    output = start
     expected = np.ones(1)
     for _ in range(6):
-        rate = calibration.expected_bins(
-            nothing, np.array([current_ma]), np.array([output]), flat
-        )
-        expected = rate.sum(axis=(0, 1)) * count_time_s
+        at = np.array([current_ma]), np.array([output])
+        expected = np.zeros(calibration.levels_kev.size)
+        for part in np.split(flat, range(BLOCK, flat.size, BLOCK)):
+            rate = calibration.expected_bins(nothing, *at, part)
+            expected += rate.sum(axis=(0, 1)) * count_time_s
         change = counts / expected.sum()
         if abs(change - 1.0) < 1e-7:
             break
