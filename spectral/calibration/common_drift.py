@@ -22,6 +22,8 @@ NOISE_PRIOR_KEV2 = 0.2
 DEAD_TIME_PRIOR = 0.02
 """How far thresholds, noise variance and ln dead time may drift between scans, as
 standard deviations (common practice, no source)."""
+MOST_OUTPUT = 100.0
+"""Times the calibration's output, or below its inverse, is no drift of a tube."""
 LARGEST_SHIFT_KEV = 3.0
 ROUNDS = 12
 AT_REST = 1e-3
@@ -115,7 +117,8 @@ def common_drift(
     Raises
     ------
     ScanError
-        If an exposure holds no counts in a bin, or no small movement meets the counts.
+        If an exposure holds no counts in a bin or absurdly many, or no small movement
+        meets the counts.
 
     Notes
     -----
@@ -162,7 +165,16 @@ def met_by(
     problem = _Problem(calibration, data, np.log(counts), covariance, shift_prior_kev)
     first, _ = problem.at(np.zeros(problem.unknowns))
     nothing = np.zeros(problem.unknowns)
-    nothing[: counts.shape[0]] = np.log(counts.sum(axis=1) / first.sum(axis=1))
+    times = counts.sum(axis=1) / first.sum(axis=1)
+    absurd = (times > MOST_OUTPUT) | (times < 1.0 / MOST_OUTPUT)
+    if absurd.any():
+        e = int(np.argmax(absurd))
+        msg = (
+            f"exposure {data.exposure[e]} counts {times[e]:.3g} times what the "
+            "calibration leads to expect; are its counts, current and count time right?"
+        )
+        raise ScanError(msg)
+    nothing[: counts.shape[0]] = np.log(times)
     values, information, before = nothing, np.eye(1), np.zeros_like(counts)
     for turn in range(ROUNDS):
         expected, slope = problem.at(values)
@@ -171,7 +183,8 @@ def met_by(
             before = left - np.average(left, axis=1, weights=counts)[:, None]
         step, information = problem.step(values, left, slope)
         values = values + step
-        if np.abs(values[problem.shifts]).max() > LARGEST_SHIFT_KEV:
+        # a step that is no number is no small movement either
+        if not np.abs(values[problem.shifts]).max() <= LARGEST_SHIFT_KEV:
             msg = (
                 f"thresholds moved by more than {LARGEST_SHIFT_KEV:g} keV would be "
                 "needed to meet the counts; check the scan, or take a full wedge scan"

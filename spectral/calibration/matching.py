@@ -77,7 +77,7 @@ def beam_differs(calibration: Calibration, scan: Scan) -> str:
         if role != "dark" and not top / MOST_CURRENTS <= current <= top * MOST_CURRENTS:
             return (
                 f"has a tube current of {current:g} mA in exposure {i} ({role}) and "
-                f"not one like {top:g} mA"
+                f"not one like {top:g} mA (is the scan's own current right?)"
             )
     return ""
 

@@ -152,6 +152,15 @@ def test_opens_without_counts_name_the_scan(
         MaterialDecomposer(calibration).fit(scan.with_counts(counts))
 
 
+@pytest.mark.parametrize("times", [1e-3, 1e3])
+def test_opens_that_count_absurdly_are_refused(
+    calibration: Calibration, scan: Scan, times: float
+) -> None:
+    wrong = replace(scan, count_time_s=times * scan.count_time_s)
+    with pytest.raises(ScanError, match=r"^scan in memory: exposure 1 counts .* times"):
+        MaterialDecomposer(calibration).fit(wrong)
+
+
 def test_an_exposure_is_asked_for_once(scan: Scan) -> None:
     with pytest.raises(InputError, match="exposure 3 is asked for twice"):
         chosen_exposures(scan, [3, 4, 3])
