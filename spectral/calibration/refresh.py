@@ -17,7 +17,7 @@ from spectral.calibration.promise import with_promise
 from spectral.calibration.scan_sentences import told_of
 from spectral.calibration.short_scan import short_scan_data
 from spectral.scans.bad_pixels import PixelReason, find_bad_pixels
-from spectral.scans.pooled_opens import pooled_opens
+from spectral.scans.pooled_opens import MOST_BYTES, pooled_opens
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -144,7 +144,9 @@ def updated_by_opens(calibration: Calibration, scan: Scan) -> Calibration:
     """
     if scan.exposures("open").size == 0:
         return calibration
-    found = find_bad_pixels(scan) if scan.shape[2:] == calibration.shape else 0
+    found: int | NDArray[np.uint16] = 0
+    if scan.shape[2:] == calibration.shape:
+        found = find_bad_pixels(scan, most_bytes=2 * MOST_BYTES)
     data = short_scan_data(
         calibration,
         pooled_opens(scan),

@@ -39,6 +39,8 @@ if TYPE_CHECKING:
     from spectral.decomposition.solver import Solution
     from spectral.scans.scan import Scan
 
+OPENS_BYTES = 2**27
+"""Of dark and open counts in which bad pixels are looked for."""
 STRIP = 200_000
 """Pixels whose weights are held at once."""
 ENDED_WELL = (SolveOutcome.CONVERGED, SolveOutcome.FEW_COUNTS)
@@ -98,7 +100,7 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
             If scan and calibration are not of one detector setting.
         """
         check_match(self.calibration, scan)
-        self.bad_ = find_bad_pixels(scan)
+        self.bad_ = find_bad_pixels(scan, most_bytes=OPENS_BYTES)
         self.usable_ = self.calibration.good & (self.bad_ == 0)
         if not self.usable_.any():
             msg = f"{scan.source}: no pixel is sound in both scan and calibration"

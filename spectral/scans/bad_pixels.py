@@ -64,7 +64,9 @@ def commonest_reason(reasons: NDArray[np.uint16]) -> str:
     return max(number, key=lambda meaning: int(number[meaning]))
 
 
-def find_bad_pixels(scan: Scan, *, object_repeats: bool = False) -> NDArray[np.uint16]:
+def find_bad_pixels(
+    scan: Scan, *, object_repeats: bool = False, most_bytes: int = _MOST_BYTES
+) -> NDArray[np.uint16]:
     """Reasons not to use each pixel, from a scan's dark, open and wedge exposures.
 
     The scan of an object will do if it holds dark and open exposures; the more
@@ -73,12 +75,13 @@ def find_bad_pixels(scan: Scan, *, object_repeats: bool = False) -> NDArray[np.u
     Parameters
     ----------
     scan : Scan
-        At most half a GiB of its counts is read; of a longer scan, exposures spread
-        evenly over it.
+        Of a scan whose counts are too many, exposures spread evenly over it are read.
     object_repeats : bool
         Whether to look at repeated exposures of an object too. They count only if
         most pixels repeat to within counting noise, and a pixel among changing
         neighbours is left alone: there, something may have moved.
+    most_bytes : int
+        Of counts to read, by default half a GiB; three times that is in use at once.
 
     Returns
     -------
@@ -88,7 +91,7 @@ def find_bad_pixels(scan: Scan, *, object_repeats: bool = False) -> NDArray[np.u
     _, k, y, x = scan.shape
     reasons = np.zeros(y * x, np.uint16)
     _mark(reasons, scan.pixel_mask.reshape(-1) != 0, PixelReason.MASKED)
-    which = exposures_to_look_at(scan)
+    which = exposures_to_look_at(scan, most_bytes)
     if len(which) == 0:
         return reasons.reshape(y, x)
     counts = scan.counts.read(which).reshape(len(which), k, -1)
@@ -125,11 +128,13 @@ def _mark(
     reasons[where] |= np.uint16(reason)
 
 
-def exposures_to_look_at(scan: Scan) -> NDArray[np.int64]:
-    """Dark, open and wedge exposures, as many as half a gibibyte holds."""
+def exposures_to_look_at(
+    scan: Scan, most_bytes: int = _MOST_BYTES
+) -> NDArray[np.int64]:
+    """Dark, open and wedge exposures, as many as so many bytes hold."""
     which = scan.exposures("dark", "open", "wedge")
     _, k, y, x = scan.shape
-    most = max(8, _MOST_BYTES // (4 * k * y * x))
+    most = max(8, most_bytes // (4 * k * y * x))
     if len(which) > most:
         which = which[np.linspace(0, len(which) - 1, most).astype(np.int64)]
     return which

@@ -9,6 +9,7 @@ import numpy as np
 import pytest
 
 from spectral.calibration.refresh import updated_by_opens
+from spectral.scans.bad_pixels import exposures_to_look_at, find_bad_pixels
 from spectral.scans.pooled_opens import FEWEST, pooled_opens
 from spectral.scans.scan import CountsInMemory
 
@@ -84,3 +85,16 @@ def test_pixels_follow_sums_as_they_follow_single_opens(
     assert np.abs((summed.departures - single.departures) / sd).max() < 0.2
     moved = np.abs((single.departures - calibration.departures) / sd).max()
     assert moved > 0.5
+
+
+def test_bad_pixels_are_looked_for_in_so_many_bytes(
+    make_scan: Callable[..., Scan],
+) -> None:
+    scan = make_scan(opens=24, pixels=(6, 8))
+    every = exposures_to_look_at(scan)
+    assert every.size == scan.shape[0]
+    few = exposures_to_look_at(scan, 12 * 4 * 4 * 48)
+    assert few.size == 12
+    assert (few[0], few[-1]) == (every[0], every[-1])
+    reasons = find_bad_pixels(scan, most_bytes=12 * 4 * 4 * 48)
+    np.testing.assert_array_equal(reasons, 0)
