@@ -62,7 +62,7 @@ def test_what_is_imported_is_required() -> None:
             *PROJECT["project"]["optional-dependencies"]["spekpy"],
         )
     }
-    own_name = {"PIL": "pillow", "sklearn": "scikit_learn"}
+    own_name = {"PIL": "pillow", "llvmlite": "numba", "sklearn": "scikit_learn"}
     ours = {"spectral", "spectral_cli"}
     for folder in SETUPTOOLS["package-dir"].values():
         for path in (ROOT / folder).rglob("*.py"):
