@@ -71,6 +71,12 @@ class MapsParts:
     @contextmanager
     def held(self) -> Iterator[MapsParts]:
         """Hold the output for one run; the hold ends with the process."""
+        if self.folder.exists() and not self.folder.is_dir():
+            msg = (
+                f"{self.path}: {self.folder} is in the way of unfinished maps; move it "
+                "away or name another output"
+            )
+            raise ScanError(msg)
         self.folder.mkdir(exist_ok=True)
         with (self.folder / LOCK).open("w") as lock:
             try:
@@ -92,7 +98,15 @@ class MapsParts:
         """Write down the job, or compare with the one that lies there."""
         record = self.folder / JOB
         if record.exists():
-            differs = _differing(json.loads(record.read_text()), self.job)
+            try:
+                there = json.loads(record.read_text())
+            except ValueError as error:
+                msg = (
+                    f"{self.path}: the record {record} of unfinished maps is damaged; "
+                    f"delete {self.folder} and start again"
+                )
+                raise ScanError(msg) from error
+            differs = _differing(there, self.job)
             if differs:
                 msg = (
                     f"{self.path}: unfinished maps of another job lie in {self.folder} "
