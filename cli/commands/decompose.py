@@ -126,6 +126,7 @@ def decompose(
             exposures=exposures or None,
             compute=compute,
             progress=lambda share: tell("decompose", share),
+            gathering=lambda share: tell("write", share),
         )
     if run.resumed:
         say(f"went on from {run.resumed} of {run.blocks} blocks of an earlier run")

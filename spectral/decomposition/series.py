@@ -59,6 +59,7 @@ def decompose_series(
     exposures: Sequence[int] | None = None,
     compute: Compute | None = None,
     progress: Callable[[float], None] | None = None,
+    gathering: Callable[[float], None] | None = None,
 ) -> SeriesRun:
     """Write the maps of a scan's object exposures to a file.
 
@@ -76,6 +77,8 @@ def decompose_series(
         in this process by default (`spectral.decomposition.cluster` has another).
     progress : callable, optional
         Called with the finished share, first with what an earlier run had left.
+    gathering : callable, optional
+        Called with the share that is in the maps file, once all blocks are there.
 
     Raises
     ------
@@ -107,7 +110,8 @@ def decompose_series(
             lambda done: tell((resumed + done) / len(blocks)),
         )
         material = [m.name for m in decomposer.calibration_.materials]
-        parts.finish(material, len(blocks), {**record, "date": _date()})
+        process = {**record, "date": _date()}
+        parts.finish(material, len(blocks), process, tell=gathering or _silent)
     return SeriesRun(
         path=path, exposures=chosen.size, blocks=len(blocks), resumed=resumed
     )

@@ -27,7 +27,7 @@ from spectral.scans.maps_file import (
 from spectral.scans.nexus import on_disk, written_whole
 
 if TYPE_CHECKING:
-    from collections.abc import Iterator, Mapping, Sequence
+    from collections.abc import Callable, Iterator, Mapping, Sequence
     from pathlib import Path
 
     from spectral.decomposition.maps import Maps
@@ -164,9 +164,17 @@ class MapsParts:
             new.unlink(missing_ok=True)
 
     def finish(
-        self, material: Sequence[str], blocks: int, process: dict[str, str]
+        self,
+        material: Sequence[str],
+        blocks: int,
+        process: dict[str, str],
+        *,
+        tell: Callable[[float], None],
     ) -> None:
-        """Make the maps file of all blocks, in order, and remove them."""
+        """Make the maps file of all blocks, in order, and remove them.
+
+        `tell` is called with the share that is written.
+        """
         exposures = [self._read(b, ("exposure",))["exposure"] for b in range(blocks)]
         with self._kept(), written_whole(self.path, folder=self.folder) as file:
             start = 0
@@ -182,6 +190,7 @@ class MapsParts:
                     )
                 fill_maps(file, maps, start=start)
                 start += len(maps.exposure)
+                tell((block + 1) / blocks)
             write_process(file, process)
         # the job's name goes last: blocks without one would not be known for what they are
         self._remove(lambda name: name not in {JOB, LOCK})

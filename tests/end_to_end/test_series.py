@@ -163,7 +163,15 @@ def test_blocks_give_the_maps_of_single_exposures(
     decomposer: MaterialDecomposer, scan: Scan, tmp_path: Path
 ) -> None:
     told: list[float] = []
-    run = decompose_series(decomposer, scan, tmp_path / "m.h5", progress=told.append)
+    written: list[float] = []
+    run = decompose_series(
+        decomposer,
+        scan,
+        tmp_path / "m.h5",
+        progress=told.append,
+        gathering=written.append,
+    )
+    assert written == pytest.approx([i / BLOCKS for i in range(1, BLOCKS + 1)])
     assert (run.exposures, run.blocks, run.resumed) == (OBJECTS, BLOCKS, 0)
     assert told == pytest.approx([i / BLOCKS for i in range(BLOCKS + 1)])
     whole = decomposer.decompose(scan)
@@ -616,7 +624,8 @@ def test_command_says_what_it_went_on_from(
         patch.setattr(np, "savez", lambda *_, **__: (_ for _ in ()).throw(error))
         full = invoke(*command(folder, output))
     assert full.exit_code == 1
-    assert full.stderr.count("\n") == 3
+    assert full.stderr.splitlines()[:2] == ["prepare", "decompose"]
+    assert len(full.stderr.splitlines()) == 3
     assert "then the same command goes on from them" in full.stderr
     done = invoke(*command(folder, output, "--json"))
     assert done.exit_code == 0
