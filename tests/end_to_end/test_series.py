@@ -5,9 +5,9 @@ from __future__ import annotations
 import errno
 import json
 import os
-import sys
 import time
 from dataclasses import replace
+from importlib import import_module
 from importlib.metadata import entry_points
 from typing import TYPE_CHECKING, Any
 
@@ -375,7 +375,7 @@ def stages_module() -> Any:
     invoke("--help")
     (script,) = entry_points(group="console_scripts", name="wedgewright")
     package = type(script.load()).__module__.rpartition(".")[0]
-    return sys.modules[f"{package}.stages"]
+    return import_module(f"{package}.stages")
 
 
 def test_progress_tells_rate_and_remaining_time() -> None:
