@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.decomposition.likelihood import dead_fraction
 from spectral.kernels import calibration_shift
 from spectral.kernels.node_weights import node_weights
 
@@ -53,8 +54,7 @@ def lost_fraction(dead_time_ns: float, count_time_s: float) -> float:
     2 tau/T - (tau/T)^2: pairs closer than the dead time are missing. Source: D. F.
     Yu, J. A. Fessler, Phys. Med. Biol. 45 (2000) 2043.
     """
-    share = dead_time_ns * NS / count_time_s
-    return float(2.0 * share - share**2)
+    return dead_fraction(dead_time_ns * NS, count_time_s)
 
 
 def responses(

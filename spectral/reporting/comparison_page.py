@@ -18,7 +18,7 @@ from spectral.reporting.comparison_pictures import (
 )
 from spectral.reporting.drawing import page_style
 from spectral.reporting.page import KeyFigure, Page, Section, Table
-from spectral.reporting.report import _write_whole
+from spectral.reporting.report import write_whole
 from spectral.reporting.wording import (
     NONE,
     fixed,
@@ -99,7 +99,7 @@ def write_comparison(
         What was written.
     """
     page = comparison_page(old, new, names=names, comparison=comparison)
-    _write_whole(Path(out_path), page.html())
+    write_whole(Path(out_path), page.html())
     return page
 
 

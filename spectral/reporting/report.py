@@ -78,7 +78,7 @@ def write_report(
         What was written, for a summary.
     """
     page = report_page(source, exposure=exposure, row=row, check=check)
-    _write_whole(Path(out_path), page.html())
+    write_whole(Path(out_path), page.html())
     return page
 
 
@@ -132,7 +132,8 @@ def _nexus_kind(root: Node) -> str:
     raise FileFormatError(msg)
 
 
-def _write_whole(path: Path, text: str) -> None:
+def write_whole(path: Path, text: str) -> None:
+    """Write a page that appears under its name only when it is complete."""
     handle, name = tempfile.mkstemp(
         prefix=f".{path.name}.", suffix=".part", dir=path.parent
     )
