@@ -24,7 +24,7 @@ from spectral.scans.script import open_scan
 from spectral.virtual.script_scan import simulate_script
 
 if TYPE_CHECKING:
-    from spectral.decomposition.maps import Maps
+    from spectral.scans.maps import Maps
     from spectral.scans.truth_file import ScanTruth
 
 HERE = Path(__file__).parent

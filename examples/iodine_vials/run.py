@@ -23,7 +23,7 @@ from spectral.virtual.script_scan import simulate_script
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from spectral.decomposition.maps import Maps
+    from spectral.scans.maps import Maps
     from spectral.scans.truth_file import ScanTruth
 
 HERE = Path(__file__).parent

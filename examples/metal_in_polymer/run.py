@@ -26,7 +26,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from spectral.calibration.result import Calibration
-    from spectral.decomposition.maps import Maps
+    from spectral.scans.maps import Maps
 
 HERE = Path(__file__).parent
 PIXEL_MM = 0.1

@@ -7,8 +7,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.decomposition.flags import PixelFlag
-from spectral.decomposition.maps import Maps
+from spectral.scans.flags import PixelFlag
+from spectral.scans.maps import Maps
 
 if TYPE_CHECKING:
     from collections.abc import Sequence

@@ -14,8 +14,8 @@ if TYPE_CHECKING:
     from pathlib import Path
 
     from spectral.decomposition.decomposer import MaterialDecomposer
-    from spectral.decomposition.maps import Maps
     from spectral.decomposition.series import Compute
+    from spectral.scans.maps import Maps
     from spectral.scans.scan import Scan
 
 IN_FLIGHT_PER_WORKER = 2

@@ -12,7 +12,6 @@ from spectral.calibration.matching import scan_differs
 from spectral.calibration.refresh import updated_by_opens
 from spectral.decomposition.block_maps import BlockMaps, joined, unpacked
 from spectral.decomposition.conditions import Conditions, ConditionsStore
-from spectral.decomposition.flags import PixelFlag
 from spectral.decomposition.judging import (
     domain_facets,
     judge,
@@ -28,6 +27,7 @@ from spectral.errors import InputError, ScanError
 from spectral.forward.counting_model import counts_to_bins
 from spectral.scans.bad_pixels import commonest_reason, find_bad_pixels
 from spectral.scans.counts_faults import count_faults
+from spectral.scans.flags import PixelFlag
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Sequence
@@ -35,8 +35,8 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from spectral.calibration.result import Calibration
-    from spectral.decomposition.maps import Maps
     from spectral.decomposition.solver import Solution
+    from spectral.scans.maps import Maps
     from spectral.scans.scan import Scan
 
 OPENS_BYTES = 2**27

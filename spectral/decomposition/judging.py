@@ -8,7 +8,7 @@ import numpy as np
 from scipy.spatial import ConvexHull, QhullError
 from scipy.stats import chi2
 
-from spectral.decomposition.flags import PixelFlag
+from spectral.scans.flags import PixelFlag
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray

@@ -23,7 +23,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from spectral.decomposition.decomposer import MaterialDecomposer
-    from spectral.decomposition.maps import Maps
+    from spectral.scans.maps import Maps
     from spectral.scans.scan import Scan
 
     Compute = Callable[[list[list[int]]], Generator[tuple[int, Maps]]]

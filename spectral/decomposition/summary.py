@@ -7,10 +7,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
-from spectral.decomposition.flags import MEANING
+from spectral.scans.flags import MEANING
 
 if TYPE_CHECKING:
-    from spectral.decomposition.maps import Maps
+    from spectral.scans.maps import Maps
 
 
 def maps_summary(maps: Maps) -> dict[str, Any]:

@@ -25,7 +25,7 @@ if TYPE_CHECKING:
     from pathlib import Path
 
     from spectral.calibration.result import Calibration
-    from spectral.decomposition.maps import Maps
+    from spectral.scans.maps import Maps
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

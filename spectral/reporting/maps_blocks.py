@@ -8,8 +8,8 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.decomposition.maps import Maps
 from spectral.errors import FileFormatError, InputError
+from spectral.scans.maps import Maps
 from spectral.scans.maps_file import read_maps
 from spectral.scans.nexus import Node, opened
 

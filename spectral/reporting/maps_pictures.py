@@ -7,7 +7,6 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.stats import chi2
 
-from spectral.decomposition.flags import MEANING
 from spectral.reporting import panels
 from spectral.reporting.drawing import Picture, Sheet
 from spectral.reporting.maps_summary import DEVIANCE_EDGES, median, middle_range
@@ -23,6 +22,7 @@ from spectral.reporting.palette import (
 )
 from spectral.reporting.reason_map import Reason, draw_reasons, rarest_note
 from spectral.reporting.wording import GRAMS, count, listed, number, percent
+from spectral.scans.flags import MEANING
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes

@@ -7,13 +7,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.decomposition.flags import MEANING, PixelFlag
+from spectral.scans.flags import MEANING, PixelFlag
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-    from spectral.decomposition.maps import Maps
     from spectral.reporting.maps_blocks import MapsBlocks
+    from spectral.scans.maps import Maps
 
 DEVIANCE_EDGES = np.linspace(0.0, 20.0, 2001)
 _QUARTILES = (25.0, 50.0, 75.0)

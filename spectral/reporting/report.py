@@ -9,13 +9,13 @@ from typing import TYPE_CHECKING
 
 from spectral.calibration.calibration_file import FORMAT_NAME, read_calibration
 from spectral.calibration.result import Calibration
-from spectral.decomposition.maps import Maps
 from spectral.errors import FileFormatError, InputError
 from spectral.reporting.calibration_page import calibration_page
 from spectral.reporting.drawing import page_style
 from spectral.reporting.maps_blocks import MapsBlocks
 from spectral.reporting.maps_page import maps_page
 from spectral.reporting.scan_page import scan_page
+from spectral.scans.maps import Maps
 from spectral.scans.nexus import Node, opened, plain
 from spectral.scans.scan import Scan
 from spectral.scans.script import open_scan

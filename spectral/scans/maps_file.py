@@ -10,9 +10,9 @@ import h5py
 import numpy as np
 
 import spectral
-from spectral.decomposition.flags import MEANING
-from spectral.decomposition.maps import Maps
 from spectral.errors import FileFormatError, InputError
+from spectral.scans.flags import MEANING
+from spectral.scans.maps import Maps
 from spectral.scans.nexus import Node, new_group, opened, plain, put, written_whole
 
 if TYPE_CHECKING:

@@ -17,6 +17,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from spectral.errors import ScanError
+from spectral.scans.maps import Maps
 from spectral.scans.maps_file import (
     CHUNK_EXPOSURES,
     check_flags,
@@ -29,8 +30,6 @@ from spectral.scans.nexus import on_disk, written_whole
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping, Sequence
     from pathlib import Path
-
-    from spectral.decomposition.maps import Maps
 
 FIELDS = (
     "exposure",
@@ -219,8 +218,6 @@ def exposures_at_once(fitting: int) -> int:
 
 
 def _block(material: Sequence[str], arrays: dict[str, Any]) -> Maps:
-    from spectral.decomposition.maps import Maps  # noqa: PLC0415 - maps know no files
-
     return Maps(material=tuple(material), **arrays)
 
 

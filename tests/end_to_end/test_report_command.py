@@ -11,7 +11,7 @@ import numpy as np
 import pytest
 from click.testing import CliRunner
 
-from spectral.decomposition.maps import Maps
+from spectral.scans.maps import Maps
 from spectral.scans.maps_file import write_maps
 from spectral.scans.scan_file import write_scan
 

@@ -16,8 +16,8 @@ import pytest
 from spectral.calibration.calibration_file import read_calibration, write_calibration
 from spectral.calibration.calibrator import WedgeCalibrator
 from spectral.decomposition.decomposer import MaterialDecomposer
-from spectral.decomposition.flags import PixelFlag
 from spectral.errors import ScanError
+from spectral.scans.flags import PixelFlag
 from spectral.scans.scan import CountsInMemory, Filter, Layer, Scan
 from spectral.virtual.detector import (
     BadPixelShares,
@@ -35,7 +35,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from spectral.calibration.result import Calibration
-    from spectral.decomposition.maps import Maps
+    from spectral.scans.maps import Maps
 
 pytestmark = [pytest.mark.end_to_end, pytest.mark.slow]
 

@@ -10,9 +10,9 @@ import numpy as np
 import pytest
 import tifffile
 
-from spectral.decomposition.maps import Maps
 from spectral.errors import FileFormatError, ScanError
 from spectral.scans.image_files import ImageFile, read_pages
+from spectral.scans.maps import Maps
 from spectral.scans.maps_file import read_maps, write_maps
 from spectral.scans.script import open_scan, read_script
 

@@ -7,7 +7,6 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pytest
 
-from spectral.decomposition.flags import MEANING, PixelFlag
 from spectral.decomposition.judging import (
     LEAST_COUNTS,
     domain_facets,
@@ -16,6 +15,7 @@ from spectral.decomposition.judging import (
     rate_share,
     sigmas_outside,
 )
+from spectral.scans.flags import MEANING, PixelFlag
 
 if TYPE_CHECKING:
     from collections.abc import Sequence

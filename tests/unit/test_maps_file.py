@@ -9,9 +9,9 @@ import h5py
 import numpy as np
 import pytest
 
-from spectral.decomposition.flags import MEANING, PixelFlag
-from spectral.decomposition.maps import Maps
 from spectral.errors import FileFormatError, InputError
+from spectral.scans.flags import MEANING, PixelFlag
+from spectral.scans.maps import Maps
 from spectral.scans.maps_file import FIELD_UNITS, read_maps, write_maps
 
 if TYPE_CHECKING:

@@ -10,8 +10,6 @@ import numpy as np
 import pytest
 from scipy.stats import chi2
 
-from spectral.decomposition.flags import MEANING, PixelFlag
-from spectral.decomposition.maps import Maps
 from spectral.errors import FileFormatError, InputError
 from spectral.reporting import maps_blocks
 from spectral.reporting.maps_blocks import MapsBlocks
@@ -21,6 +19,8 @@ from spectral.reporting.maps_record import numbers_in, plain_entry
 from spectral.reporting.maps_summary import DEVIANCE_EDGES, summarise
 from spectral.reporting.maps_tables import scatter_ratio
 from spectral.reporting.report import report_page, write_report
+from spectral.scans.flags import MEANING, PixelFlag
+from spectral.scans.maps import Maps
 from spectral.scans.maps_file import write_maps
 
 if TYPE_CHECKING:
