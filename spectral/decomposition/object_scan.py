@@ -26,7 +26,9 @@ def chosen_exposures(scan: Scan, exposures: Sequence[int] | None) -> NDArray[np.
     Raises
     ------
     ScanError
-        If there is none, or one is named that the scan does not hold, or a dark one.
+        If none is named and the scan holds no object.
+    InputError
+        If one is named that the scan does not hold, a dark one, or one twice.
     """
     if exposures is None:
         chosen = scan.exposures("object")
@@ -46,11 +48,11 @@ def chosen_exposures(scan: Scan, exposures: Sequence[int] | None) -> NDArray[np.
     if wrong.any() or chosen.size == 0:
         named = ", ".join(map(str, chosen[wrong])) or "none"
         msg = f"{scan.source}: exposures 0 to {scan.shape[0] - 1} exist, asked for {named}"
-        raise ScanError(msg)
+        raise InputError(msg)
     dark = np.intersect1d(chosen, scan.exposures("dark"))
     if dark.size:
         msg = f"{scan.source}: exposure {dark[0]} is dark: it shows no object"
-        raise ScanError(msg)
+        raise InputError(msg)
     return chosen
 
 

@@ -21,7 +21,7 @@ from spectral.decomposition import series
 from spectral.decomposition.block_maps import FIELDS
 from spectral.decomposition.decomposer import MaterialDecomposer
 from spectral.decomposition.series import decompose_series, split
-from spectral.errors import ScanError
+from spectral.errors import InputError, ScanError
 from spectral.scans import maps_parts
 from spectral.scans.maps_file import read_maps
 from spectral.scans.scan_file import file_digest
@@ -188,9 +188,9 @@ def test_chosen_exposures_in_their_order(
     assert found.exposure.tolist() == [7, 1, 4]
     alone = decomposer.decompose(scan, exposures=[4])
     np.testing.assert_array_equal(found.areal_density[2], alone.areal_density[0])
-    with pytest.raises(ScanError, match="exposures 0 to 13 exist, asked for 99"):
+    with pytest.raises(InputError, match="exposures 0 to 13 exist, asked for 99"):
         decompose_series(decomposer, scan, tmp_path / "x.h5", exposures=[99])
-    with pytest.raises(ScanError, match="exposure 0 is dark: it shows no object"):
+    with pytest.raises(InputError, match="exposure 0 is dark: it shows no object"):
         decompose_series(decomposer, scan, tmp_path / "x.h5", exposures=[5, 0])
 
 

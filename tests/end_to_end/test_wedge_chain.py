@@ -16,7 +16,7 @@ import pytest
 from spectral.calibration.calibration_file import read_calibration, write_calibration
 from spectral.calibration.calibrator import WedgeCalibrator
 from spectral.decomposition.decomposer import MaterialDecomposer
-from spectral.errors import ScanError
+from spectral.errors import InputError, ScanError
 from spectral.scans.flags import PixelFlag
 from spectral.scans.scan import CountsInMemory, Filter, Layer, Scan
 from spectral.virtual.detector import (
@@ -288,5 +288,5 @@ def test_scan_of_another_setting_is_refused(
         decomposer.decompose(moved)
     with pytest.raises(ScanError, match="no exposure has the role 'object'"):
         decomposer.decompose(bench.wedge)
-    with pytest.raises(ScanError, match="exposures 0 to 12 exist, asked for 40"):
+    with pytest.raises(InputError, match="exposures 0 to 12 exist, asked for 40"):
         decomposer.decompose(bench.object, exposures=[40])
