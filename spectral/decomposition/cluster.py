@@ -75,17 +75,25 @@ def on_cluster(
         digests,
     )
 
+    def client() -> Any:
+        try:
+            return distributed.Client(address, timeout=ANSWER)
+        except (OSError, ValueError) as error:
+            msg = (
+                f"no scheduler answers at {address} ({error}); start one, correct the "
+                "address, or leave it out to work here"
+            )
+            raise InputError(msg) from error
+
+    with client():
+        pass  # answers: anything else is better known before the work
+
     def run(blocks: list[list[int]]) -> Generator[tuple[int, Maps]]:
         if not blocks:
             return
-        try:
-            client = distributed.Client(address, timeout=ANSWER)
-        except (OSError, ValueError) as error:
-            msg = f"no scheduler answers at {address} ({error})"
-            raise InputError(msg) from error
-        with client:
+        with client() as connected:
             try:
-                yield from _stream(client, distributed.as_completed(), blocks, job)
+                yield from _stream(connected, distributed.as_completed(), blocks, job)
             except distributed.KilledWorker as error:
                 msg = (
                     f"several workers of {address} died with the same block, perhaps "

@@ -88,10 +88,22 @@ class MapsParts:
                 raise ScanError(msg) from error
             with self._kept():
                 self._claim()
-            yield self
+            try:
+                yield self
+            except BaseException:
+                self._leave_if_empty()
+                raise
         # a disk shared by several machines may keep the name of a file while it is open
         with suppress(OSError):
             self.folder.rmdir()
+
+    def _leave_if_empty(self) -> None:
+        """Remove the folder of a run that ends before its first block."""
+        with suppress(OSError):
+            if not any(self.folder.glob("block_*.npz")):
+                self._remove(lambda name: name != LOCK)
+                (self.folder / LOCK).unlink()
+                self.folder.rmdir()
 
     def _claim(self) -> None:
         """Write down the job, or compare with the one that lies there."""
