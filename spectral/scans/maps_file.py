@@ -185,7 +185,8 @@ def read_maps(
     Raises
     ------
     FileFormatError
-        If the file holds no maps, or a field is missing or has the wrong shape.
+        If the file holds no maps, a field is missing or has the wrong shape, or a
+        pixel without an estimate carries no flag.
     """
     with opened(Path(path)) as file:
         entries = Node(str(path), file).children("NXentry")
@@ -205,10 +206,14 @@ def read_maps(
     if select is not None:
         exposure = exposure[select]
     try:
-        return Maps(material=material, exposure=exposure, process=process, **fields)
+        maps = Maps(material=material, exposure=exposure, process=process, **fields)
+        check_flags(maps)
     except InputError as error:
-        msg = f"{path}: {error}; the maps file is damaged"
+        msg = (
+            f"{path}: {error}; the maps file is damaged or was changed: decompose again"
+        )
         raise FileFormatError(msg) from error
+    return maps
 
 
 def _selection(

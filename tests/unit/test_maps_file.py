@@ -102,6 +102,18 @@ def test_nan_without_a_flag_is_refused(maps: Maps, tmp_path: Path) -> None:
     assert list(tmp_path.iterdir()) == []
 
 
+def test_nan_without_a_flag_in_a_file_is_refused(maps: Maps, tmp_path: Path) -> None:
+    path = tmp_path / "maps.h5"
+    write_maps(maps, path)
+    with h5py.File(path, "r+") as file:
+        file["entry/maps/flags"][1, 2, 3] = 0
+    words = "maps.h5: areal_density of exposure 5 is not a number in row 2, column 3 "
+    with pytest.raises(FileFormatError, match=words) as said:
+        read_maps(path)
+    assert "no flag says why; the maps file is damaged" in str(said.value)
+    assert read_maps(path, which=[0, 2]).exposure.tolist() == [4, 9]
+
+
 def test_files_that_are_no_maps(maps: Maps, tmp_path: Path) -> None:
     path = tmp_path / "maps.h5"
     write_maps(maps, path)
