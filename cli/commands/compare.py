@@ -36,12 +36,11 @@ def compare(old_path: Path, new_path: Path, output: Path | None, as_json: bool) 
     """
     keep_inputs([output], old_path, new_path)
     old, new = read_calibration(old_path), read_calibration(new_path)
-    found = compare_calibrations(old, new)
+    names = str(old_path), str(new_path)
+    found = compare_calibrations(old, new, names=names)
     summary, text = comparison_summary(found), comparison_text(found)
     if output is not None:
-        write_comparison(
-            old, new, output, names=(str(old_path), str(new_path)), comparison=found
-        )
+        write_comparison(old, new, output, names=names, comparison=found)
         summary["page"] = str(output)
         text = f"{text}\npage: {output}"
     show(summary, text, as_json=as_json)

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import click
 
+from spectral.errors import InputError
 from spectral.reporting.report import write_report
 
 from ..outcome import SAFETY, ends_well, json_option, show
@@ -55,7 +56,11 @@ def report(
     what was assumed.
     """
     keep_inputs([output], path)
-    page = write_report(path, output, exposure=exposure, row=row)
+    try:
+        page = write_report(path, output, exposure=exposure, row=row)
+    except InputError as error:
+        said = str(error)
+        raise InputError(said if str(path) in said else f"{path}: {said}") from error
     show(_summary(page, output), _text(page, output), as_json=as_json)
 
 

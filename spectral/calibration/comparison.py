@@ -126,12 +126,19 @@ class CalibrationComparison:
         return np.asarray(self.spread_kev / self.expected_spread_kev)
 
 
-def compare(old: Calibration, new: Calibration) -> CalibrationComparison:
+def compare(
+    old: Calibration,
+    new: Calibration,
+    *,
+    names: tuple[str, str] = ("the old calibration", "the new calibration"),
+) -> CalibrationComparison:
     """What changed from an old calibration to a new one.
 
     Parameters
     ----------
     old, new : Calibration
+    names : (str, str)
+        What errors call the old and the new one: their files, where they have any.
 
     Raises
     ------
@@ -142,13 +149,16 @@ def compare(old: Calibration, new: Calibration) -> CalibrationComparison:
     differs = calibrations_differ(new, old)
     if differs:
         msg = (
-            f"the new calibration {differs}, as the old one has; "
-            "compare calibrations of one setting"
+            f"{names[1]} cannot be compared with {names[0]}: it {differs}; compare "
+            "calibrations of one setting"
         )
         raise CalibrationError(msg)
     both = old.good & new.good
     if not both.any():
-        msg = "no pixel is good in both calibrations; there is nothing to compare"
+        msg = (
+            f"no pixel is good in both {names[0]} and {names[1]}: there is nothing to "
+            "compare; calibrate again from a scan with sound pixels"
+        )
         raise CalibrationError(msg)
     average = mean_change(old, new)
     change = new.departures[both] - old.departures[both]

@@ -7,6 +7,7 @@ from importlib.metadata import entry_points
 from typing import TYPE_CHECKING
 
 import click
+import h5py
 import numpy as np
 import pytest
 from click.testing import CliRunner
@@ -161,14 +162,81 @@ def test_words_that_cannot_be_are_wrong_use(
     assert not (folder / "out.h5").exists()
 
 
-def test_an_exposure_named_twice_is_wrong_use(folder: Path) -> None:
+WRONG_EXPOSURES = [
+    ((3, 3), "exposure 3 is asked for twice"),
+    ((99,), "exposures 0 to 6 exist, asked for 99"),
+    ((3, -1), "exposures 0 to 6 exist, asked for -1"),
+    ((0,), "exposure 0 is dark: it shows no object"),
+]
+
+
+@pytest.mark.parametrize(("numbers", "text"), WRONG_EXPOSURES)
+def test_exposures_that_cannot_be_are_wrong_use(
+    folder: Path, numbers: tuple[int, ...], text: str
+) -> None:
     before = held(folder)
     files = (folder / "calibration.h5", folder / "object.h5")
-    twice = ("--exposure", 3, "--exposure", 3)
-    done = command("decompose", *files, "-o", folder / "out.h5", *twice)
+    words = [word for n in numbers for word in ("--exposure", n)]
+    done = command("decompose", *files, "-o", folder / "out.h5", *words)
     assert done.exit_code == 2
-    assert "exposure 3 is asked for twice" in sentence(done)
+    assert f"{folder / 'object.h5'}: {text}" in sentence(done)
     assert held(folder) == before
+
+
+def test_calibrations_of_two_settings_are_both_named(
+    folder: Path, make_calibration: Callable[..., Calibration]
+) -> None:
+    write_calibration(make_calibration((6, 9)), folder / "wide.h5")
+    before = held(folder)
+    files = folder / "calibration.h5", folder / "wide.h5"
+    done = command("compare", *files, "-o", folder / "out.html")
+    assert done.exit_code == 1
+    text = "it has 6 x 9 pixels and not 6 x 8; compare calibrations of one setting"
+    wanted = f"{files[1]} cannot be compared with {files[0]}: {text}"
+    assert wanted in sentence(done)
+    assert held(folder) == before
+
+
+def test_a_report_names_the_file_that_lacks_a_row(folder: Path) -> None:
+    files = (folder / "calibration.h5", folder / "object.h5")
+    assert command("decompose", *files, "-o", folder / "maps.h5").exit_code == 0
+    before = held(folder)
+    for name, text in (
+        ("maps.h5", "row 6 is not in the maps, which have rows 0 to 5"),
+        ("calibration.h5", "exposure and row choose among maps"),
+    ):
+        path = folder / name
+        done = command("report", path, "--row", 6, "-o", folder / "page.html")
+        assert done.exit_code == 2
+        assert f"{path}: {text}" in sentence(done)
+    assert held(folder) == before
+
+
+def test_a_report_of_maps_with_unexplained_gaps_is_refused(folder: Path) -> None:
+    files = (folder / "calibration.h5", folder / "object.h5")
+    assert command("decompose", *files, "-o", folder / "maps.h5").exit_code == 0
+    with h5py.File(folder / "maps.h5", "r+") as file:
+        file["entry/maps/areal_density"][1, 0, 2, 3] = np.nan
+    before = held(folder)
+    done = command("report", folder / "maps.h5", "-o", folder / "page.html")
+    assert done.exit_code == 1
+    assert f"{folder / 'maps.h5'}: areal_density of exposure 4" in sentence(done)
+    assert "no flag says why" in sentence(done)
+    assert held(folder) == before
+
+
+def test_a_scheduler_that_is_not_there_leaves_nothing(
+    folder: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    pytest.importorskip("distributed")
+    monkeypatch.setattr("spectral.decomposition.cluster.ANSWER", "1s")
+    before = sorted(folder.iterdir())
+    files = (folder / "calibration.h5", folder / "object.h5")
+    words = ("-o", folder / "out.h5", "--scheduler", "tcp://127.0.0.1:9")
+    done = command("decompose", *files, *words)
+    assert done.exit_code == 2
+    assert "no scheduler answers at tcp://127.0.0.1:9" in sentence(done)
+    assert sorted(folder.iterdir()) == before
 
 
 def test_check_and_report_say_the_same_of_what_a_model_cannot_take(
