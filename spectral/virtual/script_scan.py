@@ -48,6 +48,7 @@ from spectral.scans.truth_file import ScanTruth
 from spectral.virtual.detector import BadPixelShares, VirtualDetector, read_detector
 from spectral.virtual.pulse_library import build_library, energy_borders
 from spectral.virtual.script_object import FieldOfView, object_maps
+from spectral.virtual.simulated_counts import TooManyPhotonsError
 from spectral.virtual.tube import VirtualTube
 from spectral.virtual.virtual_scan import simulate_scan
 
@@ -165,27 +166,32 @@ def _simulated(
             layer.formula, density_g_cm3=layer.density_g_cm3
         ).weight_fractions
     }
-    made = simulate_scan(
-        template,
-        detector,
-        _tube(table),
-        seed=seed,
-        detector_seed=own_seed,
-        object_areal_density=areal if objects else None,
-        correlated_neighbours=together,
-        threshold_drift_kev=planted.threshold_drift_kev,
-        true_current_ma=planted.current_ma,
-        true_thickness_mm=planted.thickness_mm,
-        library=_library(
-            detector.sensor,
-            template.voltage_kv,
-            tuple(sorted(elements)),
-            seed=own_seed,
-            keep_events=together,
-        ),
-        threads=threads,
-        progress=tell,
+    library = _library(
+        detector.sensor,
+        template.voltage_kv,
+        tuple(sorted(elements)),
+        seed=own_seed,
+        keep_events=together,
     )
+    try:
+        made = simulate_scan(
+            template,
+            detector,
+            _tube(table),
+            seed=seed,
+            detector_seed=own_seed,
+            object_areal_density=areal if objects else None,
+            correlated_neighbours=together,
+            threshold_drift_kev=planted.threshold_drift_kev,
+            true_current_ma=planted.current_ma,
+            true_thickness_mm=planted.thickness_mm,
+            library=library,
+            threads=threads,
+            progress=tell,
+        )
+    except TooManyPhotonsError as error:
+        named = script.exposures[error.exposure].label
+        table.stop("photons_per_mas", f"{named} {error.why}")
     basis = len(script.materials)
     return SimulatedScript(
         scan=replace(

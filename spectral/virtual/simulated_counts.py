@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.errors import InputError
 from spectral.virtual.exposure import Beam, VirtualBench
 
 if TYPE_CHECKING:
@@ -16,6 +17,29 @@ if TYPE_CHECKING:
 
     from spectral.scans.scan import Scan
     from spectral.virtual.tube import VirtualTube
+
+MOST_PHOTONS = 1e8
+"""Upon one pixel in one exposure: each is followed, which takes some ten seconds."""
+
+
+class TooManyPhotonsError(InputError):
+    """More photons fall upon a pixel than can be followed one by one.
+
+    Attributes
+    ----------
+    exposure : int
+    why : str
+        The sentence without its subject, the exposure.
+    """
+
+    def __init__(self, exposure: int, role: str, photons: float) -> None:
+        self.exposure = exposure
+        self.why = (
+            f"would send {photons:.2g} photons upon a pixel, and the simulator follows "
+            f"each, up to {MOST_PHOTONS:.0e}: lower photons_per_mas, the current or the "
+            "count time"
+        )
+        super().__init__(f"exposure {exposure} ({role}) {self.why}")
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -85,6 +109,28 @@ class SimulatedCounts:
                 ]
             ),
         )
+
+    def refuse_too_many(self) -> None:
+        """Refuse exposures whose photons would take hours to follow.
+
+        Raises
+        ------
+        TooManyPhotonsError
+            Naming the first such exposure.
+        """
+        brightest = float(self.tube.over_rows(self.shape[2]).max())
+        for i, role in enumerate(self.template.role):
+            charge = float(self.current_ma[i]) * float(self.template.count_time_s[i])
+            free = charge * float(self.output[i]) * brightest
+            free *= self.tube.photons_per_mas
+            if role == "dark" or free <= MOST_PHOTONS:
+                continue
+            areal = self.beam(i).areal_density
+            thinnest = areal.reshape(len(areal), -1).min(axis=1)
+            passed = self.bench.spectrum @ np.exp(-thinnest @ self.bench.attenuation)
+            photons = free * float(passed)
+            if not photons <= MOST_PHOTONS:
+                raise TooManyPhotonsError(i, role, photons)
 
     def _counted_on(self, place: int, exposures: int) -> Callable[[int], None] | None:
         """Progress within one exposure, counted on from those before."""

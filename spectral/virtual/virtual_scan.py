@@ -113,7 +113,8 @@ def simulate_scan(
     Raises
     ------
     InputError
-        If the template lacks currents, an object is missing, or shapes disagree.
+        If the template lacks currents, an object is missing, shapes disagree, or more
+        photons would fall upon a pixel than can be followed.
     """
     run = _prepare(
         template, detector, tube, seed, detector_seed, object_areal_density,
@@ -204,7 +205,7 @@ def _prepare(
         threads=threads,
         recorded=recorded_photons(library) if correlated_neighbours else None,
     )
-    return SimulatedCounts(
+    counts = SimulatedCounts(
         bench=bench,
         template=template,
         tube=tube,
@@ -215,6 +216,8 @@ def _prepare(
         output=tube.output(n, rng),
         progress=progress,
     )
+    counts.refuse_too_many()
+    return counts
 
 
 def _check_shapes(

@@ -314,6 +314,7 @@ density_g_cm3 = 1.19
 [[exposure]]
 role = "open"
 count_time_s = 0.01
+current_ma = 1.0
 [virtual]
 photons_per_mas = 100
 seed = 1
@@ -343,6 +344,11 @@ dead_time_ns = 100.0
         ("noise_kev = 0.8", "noise_kev = nan", "noise_kev must not be negative and"),
         ("dead_time_ns = 100.0", "dead_time_ns = inf", "dead_time_ns must be positive"),
         ("um = 300.0", 'um = "thick"', "thickness_um must be a number above zero"),
+        (
+            "photons_per_mas = 100",
+            "photons_per_mas = 1e15",
+            "scan.toml, line 18: exposure 1 would send 1e+13 photons upon a pixel",
+        ),
     ],
 )
 def test_a_simulation_of_what_cannot_be_names_the_script(

@@ -273,6 +273,29 @@ def test_exposures_on_demand_are_those_of_the_whole_scan(
         assert np.array_equal(single.read([i]), whole.read([i]))
 
 
+def test_photons_too_many_to_follow_are_refused(
+    template: Scan, library: PulseLibrary
+) -> None:
+    bright = VirtualTube(photons_per_mas=4e9)
+    words = (
+        r"exposure 1 \(open\) would send 2e\+08 photons upon a pixel, .* up to 1e\+08"
+    )
+    with pytest.raises(InputError, match=words):
+        simulate_scan(
+            template, DETECTOR, bright, seed=1, library=library,
+            object_areal_density=thing(),
+        )  # fmt: skip
+    behind = replace(
+        template,
+        role=("dark", "wedge", "wedge", "wedge", "wedge"),
+        thickness_mm=np.full((len(ROLES), 2), 80.0),
+    )
+    dim = simulate_scan(
+        behind, DETECTOR, bright, seed=1, library=library, on_demand=True
+    )
+    assert dim.scan.shape == template.shape
+
+
 def test_a_scan_builds_its_own_library(template: Scan) -> None:
     small = replace(
         template,
