@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import ast
+from graphlib import CycleError, TopologicalSorter
 from pathlib import Path
 
 import pytest
@@ -93,6 +94,34 @@ def test_data_flow_one_way(path: Path) -> None:
         head, _, inner = name.partition(".")
         if head == "spectral" and inner:
             assert allowed(inner, folder), f"{place(path)} looks up at {name}"
+
+
+def in_a_circle(imports: dict[str, set[str]]) -> list[str]:
+    """Modules that import each other in a circle, if only for types."""
+    looks_at = {
+        module: {
+            other
+            for name in names
+            for other in (name, name.rpartition(".")[0])
+            if other in imports
+        }
+        for module, names in imports.items()
+    }
+    try:
+        TopologicalSorter(looks_at).prepare()
+    except CycleError as error:
+        return list(error.args[1])
+    return []
+
+
+def test_no_modules_import_each_other_in_a_circle() -> None:
+    named = {place(p).removesuffix(".py").replace("/", "."): p for p in LIBRARY}
+    assert in_a_circle({name: imported(path) for name, path in named.items()}) == []
+
+
+def test_a_circle_would_be_found() -> None:
+    two = {"spectral.a": {"spectral.b.One"}, "spectral.b": {"spectral.a"}}
+    assert set(in_a_circle(two)) == {"spectral.a", "spectral.b"}
 
 
 @pytest.mark.parametrize("path", LIBRARY, ids=place)

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 from spectral.errors import ScanError
 from spectral.scans.scan import ROLES
-from spectral.scans.script_images import PAGE_ORDER, pattern_fault
+from spectral.scans.script_patterns import PAGE_ORDER, pattern_fault
 
 if TYPE_CHECKING:
     from pathlib import Path

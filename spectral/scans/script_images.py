@@ -2,10 +2,9 @@
 
 from __future__ import annotations
 
-import string
 from collections import defaultdict
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 
@@ -27,34 +26,27 @@ if TYPE_CHECKING:
 
     from numpy.typing import NDArray
 
-    from spectral.scans.script import ScanScript
     from spectral.scans.script_exposures import ScriptExposure
 
-#: What a name pattern may stand for.
-PLACEHOLDERS = ("exposure", "threshold", "threshold_kev", "frame", "step", "repeat")
-#: What the pages of one file may run through, slowest first by default.
-PAGE_ORDER = ("exposure", "threshold", "frame")
 
+class ImageList(Protocol):
+    """What of a scan script says where its images are."""
 
-def pattern_fault(pattern: str) -> str:
-    """What is wrong with a name pattern, "" if nothing is."""
-    try:
-        fields = [name for _, name, _, _ in string.Formatter().parse(pattern)]
-    except ValueError as error:
-        return f"the pattern {pattern!r} cannot be read: {error}"
-    for name in fields:
-        if name is not None and name not in PLACEHOLDERS:
-            return f"the pattern {pattern!r} holds {{{name}}}; known are " + ", ".join(
-                f"{{{p}}}" for p in PLACEHOLDERS
-            )
-    sample: dict[str, object] = dict.fromkeys(PLACEHOLDERS, 1)
-    sample["step"] = "name"
-    sample["threshold_kev"] = 20.0
-    try:
-        pattern.format(**sample)
-    except (ValueError, TypeError) as error:
-        return f"the pattern {pattern!r} cannot be filled in: {error}"
-    return ""
+    @property
+    def path(self) -> Path:
+        """The script itself."""
+
+    @property
+    def exposures(self) -> tuple[ScriptExposure, ...]:
+        """In order."""
+
+    @property
+    def thresholds_kev(self) -> NDArray[np.float64]:
+        """Rising."""
+
+    @property
+    def pixels(self) -> tuple[int, int] | None:
+        """Rows and columns, None if only the images tell."""
 
 
 @dataclass(frozen=True, slots=True, order=True)
@@ -123,7 +115,7 @@ class CountsInImages:
         return total
 
 
-def images_of(script: ScanScript) -> CountsInImages:
+def images_of(script: ImageList) -> CountsInImages:
     """Find every image of a script and say which page holds what.
 
     Raises
@@ -167,7 +159,7 @@ def images_of(script: ScanScript) -> CountsInImages:
     )
 
 
-def _planes_by_file(script: ScanScript) -> dict[ImageFile, list[Plane]]:
+def _planes_by_file(script: ImageList) -> dict[ImageFile, list[Plane]]:
     """Planes that each image file holds, in the order of its pages."""
     users: dict[ImageFile, list[Plane]] = defaultdict(list)
     for i, exposure in enumerate(script.exposures):
@@ -204,7 +196,7 @@ def _image(
 
 
 def _wrong_pages(
-    script: ScanScript, image: ImageFile, held: int, planes: list[Plane]
+    script: ImageList, image: ImageFile, held: int, planes: list[Plane]
 ) -> ScanError:
     """Say why the pages of a file are not those the script needs."""
     first = script.exposures[planes[0].exposure]
@@ -221,7 +213,7 @@ def _wrong_pages(
 
 
 def _frame_limit(
-    script: ScanScript, pages: Mapping[Plane, tuple[ImageFile, int]], storage: int
+    script: ImageList, pages: Mapping[Plane, tuple[ImageFile, int]], storage: int
 ) -> int:
     """Where a frame's counting stops, from a few exposures spread over the scan."""
     highest = []
