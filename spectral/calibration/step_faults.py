@@ -50,6 +50,11 @@ SIMPLER_BY = 6.0
 UNEXPLAINED = 3.0
 """Chi-square over the limit from which on the best explanation is none."""
 TREND_ROUNDS = 3
+MAD_TO_SIGMA = 1.4826
+"""Standard deviation over median absolute deviation of a normal distribution."""
+SPREAD_DOUBT = 2.5
+"""By so much over the square root of their number, exposures may understate their
+spread: two standard errors of a median absolute deviation."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -97,7 +102,9 @@ def find_step_faults(calibration: Calibration) -> tuple[StepFault, ...]:
     One exposure after the other leaves, the worst first, as long as a left-out
     exposure departs from the prediction of the rest by more than chi-square allows
     (robustly scaled); then those that left are compared with the final prediction.
-    What the tube's output did smoothly in the course of the scan is no fault.
+    What the tube's output did smoothly in the course of the scan is no fault. How much
+    it scatters between exposures is told by the half of them that scatters least: a
+    wrong current must not be its own excuse.
     """
     seen = seen_in_fit(calibration)
     bins = seen[0].total.size
@@ -105,9 +112,10 @@ def find_step_faults(calibration: Calibration) -> tuple[StepFault, ...]:
     limit = float(chi2.isf(FALSE_ALARM, bins))
     for _ in range(int(LARGEST_SHARE * len(seen))):
         level = _without_trend(calibration, seen, kept)
+        form = _steadied(calibration.residual, level, kept)
         away = np.zeros(len(seen))
         for e in np.flatnonzero(kept):
-            smooth = _smooth_without(calibration, level, kept, int(e))
+            smooth = _smooth_without(form, level, kept, int(e))
             away[e] = distance(smooth, level[e])
         usual = float(np.median(away[kept])) / chi2.median(bins)
         away /= max(usual, 1.0)
@@ -116,10 +124,11 @@ def find_step_faults(calibration: Calibration) -> tuple[StepFault, ...]:
             break
         kept[worst] = False
     level = _without_trend(calibration, seen, kept)
+    form = _steadied(calibration.residual, level, kept)
     listed = {one.exposure: one.areal_density for one in seen}
     faults = []
     for e in np.flatnonzero(~kept):
-        smooth = _smooth_without(calibration, level, kept, int(e))
+        smooth = _smooth_without(form, level, kept, int(e))
         faults.append(_named(calibration, smooth, level[e], listed))
     return _with_swaps(calibration, [f for f in faults if f is not None], seen)
 
@@ -140,8 +149,19 @@ def name_faults(
     return _with_swaps(calibration, [f for f in faults if f is not None], seen)
 
 
+def _steadied(
+    form: ResidualCorrection, seen: list[SeenExposure], kept: NDArray[np.bool_]
+) -> ResidualCorrection:
+    """The correction with no more spread of the output than most exposures show."""
+    smooth = _smooth_without(form, seen, kept, -1)
+    output = [_output(smooth, one) for e, one in enumerate(seen) if kept[e]]
+    spread = MAD_TO_SIGMA * float(np.median(np.abs(output - np.median(output))))
+    spread *= 1.0 + SPREAD_DOUBT / np.sqrt(len(output))
+    return replace(form, drift_spread=min(form.drift_spread, spread))
+
+
 def _smooth_without(
-    calibration: Calibration,
+    form: ResidualCorrection,
     seen: list[SeenExposure],
     kept: NDArray[np.bool_],
     step: int,
@@ -149,7 +169,7 @@ def _smooth_without(
     """Smooth correction from the kept exposures but one."""
     others = [one for e, one in enumerate(seen) if kept[e] and e != step]
     return refit_residual(
-        calibration.residual,
+        form,
         np.stack([one.total for one in others]),
         np.stack([one.error for one in others]),
         np.stack([one.areal_density for one in others]),
@@ -164,7 +184,7 @@ def _without_trend(
     place = np.array([one.exposure for one in seen])
     level = seen
     for _ in range(TREND_ROUNDS):
-        smooth = _smooth_without(calibration, level, kept, -1)
+        smooth = _smooth_without(calibration.residual, level, kept, -1)
         output = np.array([_output(smooth, one) for one in level])
         course = output_trend(place[kept], output[kept], at=place)
         # what is common to the whole scan is the calibration's flux
