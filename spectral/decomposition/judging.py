@@ -65,9 +65,9 @@ def sigmas_outside(
     """
     normal = facets[:, :-1]
     beyond = estimate @ normal.T + facets[:, -1]
-    spread = np.sqrt(
-        np.maximum(np.einsum("fi,pij,fj->pf", normal, covariance, normal), 1e-30)
-    )
+    across = np.einsum("fi,fj->ijf", normal, normal).reshape(-1, len(facets))
+    variance = covariance.reshape(len(covariance), -1) @ across
+    spread = np.sqrt(np.maximum(variance, 1e-30))
     return np.asarray((beyond / spread).max(axis=1))
 
 

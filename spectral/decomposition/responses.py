@@ -161,7 +161,7 @@ def calibration_spread(
         -1, *calibration.departure_covariance.shape[2:]
     )
     departures = calibration.pixels(flat).brightened(output).values
-    table = stacked(tables)
+    table = stacked(tables).astype(np.float32)  # six digits do for an error
 
     def block(first: int) -> None:
         part = slice(first, first + BLOCK)

@@ -17,13 +17,14 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     Array = NDArray[np.float64]
+    Weights = NDArray[np.float64] | NDArray[np.float32]
 
 LEAST = 1e-6
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
 def cubic_weights(
-    level: float, step: float, grid: int, value: Array, slope: Array
+    level: float, step: float, grid: int, value: Weights, slope: Weights
 ) -> int:
     """Lagrange's cubic through four grid points; the first point's index."""
     place = min(max(level / step, 1.0), grid - 2.001)
