@@ -16,7 +16,14 @@ import numpy as np
 
 from spectral.errors import FileFormatError, ScanError
 from spectral.scans.nexus import Node, opened, plain
-from spectral.scans.scan import MOST_G_CM3, ROLES, Filter, Layer, Scan
+from spectral.scans.scan import (
+    MOST_G_CM2,
+    MOST_G_CM3,
+    ROLES,
+    Filter,
+    Layer,
+    Scan,
+)
 from spectral.scans.scan_writing import write_scan
 from spectral.scans.stored_counts import (
     CountsInFile,
@@ -269,7 +276,7 @@ def _layers(
             f"{n} exposures and {m} materials need ({n}, {m})"
         )
         raise FileFormatError(msg)
-    _check_thickness(sample.name("thickness"), thickness, role, names)
+    _check_thickness(sample.name("thickness"), thickness, density, role, names)
     layers = zip(names, formulas, density.tolist(), strict=True)
     return (
         tuple(Layer(name=a, formula=f, density_g_cm3=d) for a, f, d in layers),
@@ -280,10 +287,11 @@ def _layers(
 def _check_thickness(
     field: str,
     thickness: NDArray[np.float64],
+    density: NDArray[np.float64],
     role: tuple[str, ...],
     names: tuple[str, ...],
 ) -> None:
-    """Refuse negative thicknesses, and unknown ones where they must be known."""
+    """Refuse thicknesses that cannot be, and unknown ones where they must be known."""
     known = np.array([r != "object" for r in role])[:, None]
     wrong = (thickness < 0) | np.isinf(thickness) | (known & np.isnan(thickness))
     if wrong.any():
@@ -292,6 +300,15 @@ def _check_thickness(
             f"{field} of {names[j]} in exposure {i} ({role[i]}) is "
             f"{thickness[i, j]:g} mm; it must be zero or more, and only an object's "
             "may be unknown (NaN)"
+        )
+        raise ScanError(msg)
+    opaque = 0.1 * thickness * density > MOST_G_CM2
+    if opaque.any():
+        i, j = (int(v) for v in np.argwhere(opaque)[0])
+        msg = (
+            f"{field} of {names[j]} in exposure {i} ({role[i]}) is "
+            f"{thickness[i, j]:g} mm, behind which nothing counts; correct it or its "
+            "unit"
         )
         raise ScanError(msg)
     opened_up = np.array([r == "open" for r in role])[:, None] & (thickness > 0)

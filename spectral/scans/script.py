@@ -273,7 +273,7 @@ def read_script(path: str | Path) -> ScanScript:
         pixel_size_um=_pair(detector, "pixel_size_um"),
         pixels=_pixels(detector),
         mask_file=_mask_file(detector),
-        exposures=read_exposures(root, tuple(m.name for m in materials)),
+        exposures=read_exposures(root, materials),
         virtual=dict(root.values.get("virtual", {})),
     )
 

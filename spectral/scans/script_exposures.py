@@ -7,12 +7,13 @@ from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 from spectral.errors import ScanError
-from spectral.scans.scan import ROLES
+from spectral.scans.scan import MOST_G_CM2, ROLES
 from spectral.scans.script_patterns import PAGE_ORDER, pattern_fault
 
 if TYPE_CHECKING:
     from pathlib import Path
 
+    from spectral.scans.scan import Layer
     from spectral.scans.script_table import Table
 
 _DEFAULTS = (
@@ -85,7 +86,7 @@ class ScriptExposure:
 
 
 def read_exposures(
-    root: Table, materials: tuple[str, ...]
+    root: Table, materials: tuple[Layer, ...]
 ) -> tuple[ScriptExposure, ...]:
     """Exposures of a script in order, repeats written out.
 
@@ -126,7 +127,12 @@ def read_exposures(
 
 
 def _exposure(
-    own: Table, defaults: Table, materials: tuple[str, ...], *, number: int, repeat: int
+    own: Table,
+    defaults: Table,
+    materials: tuple[Layer, ...],
+    *,
+    number: int,
+    repeat: int,
 ) -> ScriptExposure:
     """One exposure, its own keys before the defaults."""
     table = replace(own, base=defaults)
@@ -161,7 +167,9 @@ def _current(own: Table, table: Table, role: str) -> float | None:
     return table.number("current_ma", zero=True)
 
 
-def _thickness(own: Table, role: str, materials: tuple[str, ...]) -> tuple[float, ...]:
+def _thickness(
+    own: Table, role: str, materials: tuple[Layer, ...]
+) -> tuple[float, ...]:
     """Thickness of each material in mm."""
     said = own.values.get("layers_mm")
     if said is None:
@@ -177,16 +185,24 @@ def _thickness(own: Table, role: str, materials: tuple[str, ...]) -> tuple[float
             f"{said}"
         )
         own.stop("layers_mm", msg)
+    names = [layer.name for layer in materials]
     for name in said:
-        if name not in materials:
-            known = ", ".join(materials) or "none"
+        if name not in names:
+            known = ", ".join(names) or "none"
             msg = f"layers_mm names {name!r}, which is no [[material]]; known: {known}"
             own.stop("layers_mm", msg)
     mm = {
         name: own.checked_number("layers_mm", value, zero=True)
         for name, value in said.items()
     }
-    return tuple(mm.get(name, 0.0) for name in materials)
+    for layer in materials:
+        if 0.1 * mm.get(layer.name, 0.0) * layer.density_g_cm3 > MOST_G_CM2:
+            msg = (
+                f"layers_mm says {mm[layer.name]:g} mm of {layer.name}, behind which "
+                "nothing counts; correct it (1 cm is 10 mm)"
+            )
+            own.stop("layers_mm", msg)
+    return tuple(mm.get(name, 0.0) for name in names)
 
 
 def _pattern(table: Table, key: str) -> str:

@@ -16,7 +16,7 @@ from spectral.errors import CalibrationError, FileFormatError, InputError, ScanE
 from spectral.forward.scan_facts import scan_faults
 from spectral.forward.setup import Setup
 from spectral.scans.nexus import plain
-from spectral.scans.scan import CountsInMemory, Filter, Layer
+from spectral.scans.scan import MOST_G_CM2, CountsInMemory, Filter, Layer
 from spectral.scans.scan_check import Verdict, check_scan
 from spectral.scans.scan_file import read_scan, write_scan
 
@@ -77,6 +77,14 @@ FAULTS: list[tuple[Callable[[h5py.File], object], str]] = [
         "PMMA in exposure 2 is 10 mm, but its role is open; make it zero, or give",
     ),
     (
+        lambda f: changed(f, f"{SAMPLE}/thickness", (5, 0), 1e9),
+        r"PMMA in exposure 5 \(wedge\) is 1e\+09 mm, behind which nothing counts; corr",
+    ),
+    (
+        lambda f: changed(f, f"{SAMPLE}/thickness", (6, 1), 1200.0),
+        r"Al in exposure 6 \(wedge\) is 1200 mm, behind which nothing counts; correct",
+    ),
+    (
         lambda f: stored(f, f"{SAMPLE}/role", np.array([b"op\xe9n"] + [b"open"] * 16)),
         "role of exposure 0 is 'opén'; it must be one of dark, open, wedge, object",
     ),
@@ -85,6 +93,13 @@ FAULTS: list[tuple[Callable[[h5py.File], object], str]] = [
         "2 groups with NX_class 'NXentry' hold an instrument; name the scan's in the",
     ),
 ]
+
+
+def test_behind_the_most_that_is_believed_nothing_counts() -> None:
+    """By the total cross sections of the library xraylib."""
+    xraylib = pytest.importorskip("xraylib")
+    least = min(xraylib.CS_Total(z, 160.0) for z in range(1, 93))
+    assert 1e10 * np.exp(-least * MOST_G_CM2) < 0.01
 
 
 @pytest.mark.parametrize(("spoil", "sentence"), FAULTS)

@@ -63,6 +63,13 @@ def test_an_open_exposure_with_a_layer_is_refused(tmp_path: Path) -> None:
         read_script(written(tmp_path, layer))
 
 
+def test_a_step_behind_which_nothing_counts_is_refused(tmp_path: Path) -> None:
+    step = ('role = "open"', 'role = "wedge"\nlayers_mm = { PMMA = 1e9 }')
+    words = r"line 15: layers_mm says 1e\+09 mm of PMMA, behind which nothing counts"
+    with pytest.raises(ScanError, match=words):
+        read_script(written(tmp_path, step))
+
+
 def test_a_detector_of_text_is_refused(tmp_path: Path) -> None:
     (tmp_path / "detector.toml").write_text("[sensor]\nthickness_um = 'thick'\n")
     use = ("[detector]", '[detector]\nuse = "detector.toml"')
