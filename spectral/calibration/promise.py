@@ -81,6 +81,24 @@ def with_promise(calibration: Calibration) -> Calibration:
     return replace(calibration, promise=promise(calibration))
 
 
+def pattern_of_shifts(calibration: Calibration) -> NDArray[np.float64]:
+    """Fixed pattern were every threshold of every pixel wrong by 1 keV of its own.
+
+    Returns
+    -------
+    array, shape (material,), in single-exposure errors a keV
+        Median over the wedge steps, as `Promise.fixed_pattern`; small shifts alone
+        follow it.
+    """
+    areal = calibration.steps.areal_density
+    patterns = []
+    for e in np.flatnonzero((areal > 0.0).any(axis=1)):
+        gain, covariance, moved, _ = _average_pixel(calibration, int(e))
+        change = (gain @ moved)[:, 1:-2]
+        patterns.append(np.sqrt((change**2).sum(axis=1) / np.diag(covariance)))
+    return np.asarray(np.median(patterns, axis=0))
+
+
 def _middle_covariance(calibration: Calibration) -> NDArray[np.float64]:
     """Mean posterior covariance of the good pixels' departures."""
     good = calibration.departure_covariance[calibration.good]

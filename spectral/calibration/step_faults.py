@@ -154,9 +154,9 @@ def _steadied(
 ) -> ResidualCorrection:
     """The correction with no more spread of the output than most exposures show."""
     smooth = _smooth_without(form, seen, kept, -1)
-    output = [_output(smooth, one) for e, one in enumerate(seen) if kept[e]]
+    output = np.array([_output(smooth, one) for e, one in enumerate(seen) if kept[e]])
     spread = MAD_TO_SIGMA * float(np.median(np.abs(output - np.median(output))))
-    spread *= 1.0 + SPREAD_DOUBT / np.sqrt(len(output))
+    spread *= 1.0 + SPREAD_DOUBT / np.sqrt(output.size)
     return replace(form, drift_spread=min(form.drift_spread, spread))
 
 
