@@ -20,9 +20,14 @@ from spectral.scans.bad_pixels import (
 from spectral.scans.counting_loss import CountingLoss, counting_loss
 from spectral.scans.dispersion import Dispersion, dispersions
 from spectral.scans.exposure_levels import ExposureLevels, exposure_levels
-from spectral.scans.exposure_problems import ExposureProblem, exposure_problems
+from spectral.scans.exposure_problems import (
+    ExposureProblem,
+    ProblemKind,
+    exposure_problems,
+)
 from spectral.scans.repeats import settings_with_repeats, usable_exposures
 from spectral.scans.scan_verdict import Findings, verdict_on
+from spectral.scans.threshold_covariance import shared_pulses
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Collection, Sequence
@@ -151,6 +156,7 @@ def check_scan(
     dead_time = loss.median_ns if loss is not None else 0.0
     spread_tests = dispersions(scan, sound, dead_time_ns=dead_time, without=troubled)
     thresholds = _thresholds(scan, levels, sound, troubled)
+    unlike = {p.exposure for p in problems if p.kind is not ProblemKind.ORDER}
     causes, exceptions = verdict_on(
         Findings(
             scan=scan,
@@ -158,6 +164,7 @@ def check_scan(
             problems=tuple(problems),
             loss=loss,
             dispersions=tuple(spread_tests),
+            shared=shared_pulses(scan, sound, without=unlike),
             drift=np.array([t.drift for t in thresholds]),
             drift_error=np.array([t.drift_error for t in thresholds]),
             bad_share=float(np.mean(reasons != 0)),

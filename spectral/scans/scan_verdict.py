@@ -18,6 +18,7 @@ if TYPE_CHECKING:
     from spectral.scans.dispersion import Dispersion
     from spectral.scans.exposure_levels import ExposureLevels
     from spectral.scans.scan import Scan
+    from spectral.scans.threshold_covariance import SharedPulses
 
 _MOST_BAD = 0.2
 _MANY_BAD = 0.02
@@ -42,6 +43,7 @@ class Findings:
 
     Attributes
     ----------
+    shared : SharedPulses or None
     drift, drift_error : array, shape (threshold,)
     bad_share : float
         Share of pixels with any reason.
@@ -54,6 +56,7 @@ class Findings:
     problems: tuple[ExposureProblem, ...]
     loss: CountingLoss | None
     dispersions: tuple[Dispersion, ...]
+    shared: SharedPulses | None
     drift: NDArray[np.float64]
     drift_error: NDArray[np.float64]
     bad_share: float
@@ -73,7 +76,10 @@ def _causes(findings: Findings) -> Iterator[str]:
         yield "there is no open exposure to compare the others with"
     elif levels.mean[opens, 0].max() < 1.0:
         yield _nothing_counted(levels, opens)
-    yield from _order(findings, opens)
+    if findings.shared is not None and findings.shared.none:
+        yield _per_bin(findings.shared)
+    else:
+        yield from _order(findings, opens)
     wrong = {p.exposure: p.text for p in findings.problems if p.kind in _USELESS}
     if len(opens) and set(wrong).issuperset(opens.tolist()):
         first = int(opens[0])
@@ -115,8 +121,30 @@ def _order(findings: Findings, opens: NDArray[np.int64]) -> Iterator[str]:
         low, high = scan.thresholds_kev[k : k + 2]
         yield (
             f"the threshold at {high:g} keV counts more than the one at {low:g} keV: "
-            "are they in the right order?"
+            "are they in the right order, and are these counts above thresholds, not "
+            "per bin?"
         )
+        return
+    lit = [i for i, role in enumerate(scan.role) if role != "dark"]
+    kinds = {p.exposure for p in findings.problems if p.kind is ProblemKind.ORDER}
+    rising = kinds.intersection(lit)
+    if len(rising) > _MOST * len(lit):
+        yield (
+            f"in {len(rising)} of {len(lit)} exposures with a beam many pixels count "
+            "more above a higher threshold than above a lower one: are these counts "
+            "per bin? Store the counts above each threshold"
+        )
+
+
+def _per_bin(shared: SharedPulses) -> str:
+    """Say that thresholds count different pulses."""
+    return (
+        f"the repeats {_listed(sorted(shared.exposures))} show that neighbouring "
+        f"thresholds share {max(shared.share, 0.0):.0%} of the pulses that they must: "
+        "unless most pulses are lost to dead time, these are counts per bin, or "
+        "thresholds exposed one after the other; store the counts above each "
+        "threshold, of one exposure"
+    )
 
 
 def _steps(scan: Scan, steps: list[int]) -> Iterator[str]:

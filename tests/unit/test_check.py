@@ -18,6 +18,7 @@ from spectral.scans.scan import CountsInMemory
 from spectral.scans.scan_check import ScanCheck, Verdict, check_scan
 from spectral.scans.scan_check_text import check_summary, check_text
 from spectral.scans.stored_counts import NOT_A_COUNT
+from spectral.scans.threshold_covariance import shared_pulses
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -169,6 +170,48 @@ def test_what_rules_a_scan_out(make_scan: Callable[..., Scan]) -> None:
     dead = counts_of(scan)
     dead[:, :, :, :10] = 0
     assert "25% of the pixels are bad" in causes(scan.with_counts(dead))
+
+
+def per_bin(scan: Scan) -> Scan:
+    """The scan with what was counted in bins where counts above thresholds belong."""
+    counts = counts_of(scan)
+    counts[:, :-1] -= counts[:, 1:]
+    return scan.with_counts(counts)
+
+
+@pytest.mark.parametrize("loss", [0.0, 0.4])
+def test_counts_per_bin_share_no_pulses(
+    make_scan: Callable[..., Scan], loss: float
+) -> None:
+    scan = make_scan(pixels=(12, 16), loss=loss)
+    sound = np.ones((12, 16), bool)
+    above, alone = shared_pulses(scan, sound), shared_pulses(per_bin(scan), sound)
+    assert above is not None
+    assert above.share == pytest.approx(1.0, abs=5 * above.standard_error)
+    assert not above.none
+    assert alone is not None
+    assert alone.share == pytest.approx(0.0, abs=5 * alone.standard_error)
+    assert alone.none
+    check = check_scan(per_bin(scan))
+    assert check.verdict is Verdict.NOT_FIT
+    assert (
+        "the repeats 2, 3, 15, 16 show that neighbouring thresholds share"
+        in (check.causes[0])
+    )
+    assert "these are counts per bin, or thresholds exposed one" in check.causes[0]
+
+
+def test_counts_per_bin_without_repeats_rise(make_scan: Callable[..., Scan]) -> None:
+    scan = replace(make_scan(pixels=(12, 16)), current_ma=np.linspace(3.0, 3.5, 17))
+    bins = counts_of(per_bin(scan))
+    bins[scan.exposures("open")] += np.array([9999, 6666, 3333, 0], np.uint32)[
+        :, None, None
+    ]
+    assert shared_pulses(scan, np.ones((12, 16), bool)) is None
+    check = check_scan(scan.with_counts(bins))
+    assert check.verdict is Verdict.NOT_FIT
+    assert "in 11 of 15 exposures with a beam many pixels count more" in said(check)
+    assert "are these counts per bin? Store the counts above" in said(check)
 
 
 def test_averaged_images_are_no_counts(make_scan: Callable[..., Scan]) -> None:

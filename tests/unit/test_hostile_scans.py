@@ -157,7 +157,7 @@ def test_the_check_says_what_is_wrong_with_the_counts(scan: Scan) -> None:
         ),
         (
             counted(scan, lambda c: c[:, [0, 2, 1, 3]]),
-            "the threshold at 45 keV counts more than the one at 32 keV: are they in",
+            "the threshold at 45 keV counts more than the one at 32 keV: are they in the right order, and are these counts above",
         ),
         (
             replace(scan, pixel_mask=np.ones((6, 8), np.uint32)),
