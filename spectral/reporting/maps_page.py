@@ -129,7 +129,7 @@ def _said(summary: MapsSummary) -> list[str]:
             ),
             reverse=True,
         )
-        most = [f"{n} {name}" for n, name in reasons if n][:4]
+        most = [f"{name} ({n})" for n, name in reasons if n][:4]
         said.append(
             f"{percent(summary.sound_share)} of the pixels carry no flag; "
             f"{count(int(flagged), 'pixel')} of {summary.flags.size} do: "
@@ -213,7 +213,8 @@ def _key_figures(summary: MapsSummary, freedom: int | None) -> list[KeyFigure]:
 
 def _sections(summary: MapsSummary, row: int, freedom: int | None) -> list[Section]:
     maps: list[str | Picture | Table] = [
-        pictures.material_picture(summary, i) for i in range(len(summary.material))
+        pictures.material_picture(summary, i, row=row)
+        for i in range(len(summary.material))
     ]
     sections = [
         Section(title="Maps", parts=maps),

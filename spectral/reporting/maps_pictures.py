@@ -9,7 +9,12 @@ from scipy.stats import chi2
 
 from spectral.reporting import panels
 from spectral.reporting.drawing import Picture, Sheet
-from spectral.reporting.maps_summary import DEVIANCE_EDGES, median, middle_range
+from spectral.reporting.maps_summary import (
+    DEVIANCE_EDGES,
+    median,
+    middle_range,
+    quartile_errors,
+)
 from spectral.reporting.palette import (
     ACCENT,
     INK,
@@ -51,8 +56,8 @@ def map_height(shape: tuple[int, ...], columns: int) -> float:
     return min(_TALLEST, max(_FLAT_HEIGHT, each * y / x) + around)
 
 
-def material_picture(summary: MapsSummary, index: int) -> Picture:
-    """Areal density of a material, beside its errors."""
+def material_picture(summary: MapsSummary, index: int, *, row: int) -> Picture:
+    """Areal density of a material, beside its errors; the profile's row is marked."""
     name = summary.material[index]
     shape = summary.flags.shape
     many = len(summary.exposure) > 1
@@ -66,6 +71,7 @@ def material_picture(summary: MapsSummary, index: int) -> Picture:
         label=GRAMS,
         title=f"{name}, {'mean of the exposures' if many else 'areal density'}",
     )
+    panels.mark_row(sheet.axes[0], row)
     for axes, values, title in (
         (sheet.axes[1], summary.single_error[index], "error of a single exposure"),
         (sheet.axes[2], summary.calibration_error[index], "error from the calibration"),
@@ -87,8 +93,8 @@ def material_picture(summary: MapsSummary, index: int) -> Picture:
             f"calibration: median {common} {GRAMS}."
         ),
         caption=(
-            f"{name}. Errors are one standard deviation, each with a scale of its "
-            f"own. {panels.LIMITS_NOTE}{panels.block_note(shape)}"
+            f"{name}. Arrowheads mark row {row}, that of the profile below. Errors are "
+            f"one standard deviation, each with a scale of its own. {panels.LIMITS_NOTE}{panels.block_note(shape)}"
         ),
     )
 
@@ -306,8 +312,9 @@ def course_picture(summary: MapsSummary) -> Picture:
             f"{percent(float(summary.flagged_share[worst]))}."
         ),
         caption=(
-            "Each quartile over the pixels, minus its own mean over the exposures. "
-            "Repeats of one object should stay near zero; a slope is a drift of tube, "
+            "Each quartile over the pixels, minus its own mean over the exposures; "
+            "bars: one standard deviation of it by the errors of the pixels. Repeats "
+            "of one object should stay near zero; a slope is a drift of tube, "
             "thresholds or object."
         ),
     )
@@ -316,12 +323,15 @@ def course_picture(summary: MapsSummary) -> Picture:
 def _draw_course(axes: Axes, summary: MapsSummary, index: int) -> None:
     """Quartiles of one material in each exposure, minus their own means."""
     axes.axhline(0.0, color=MUTED, linewidth=0.8)
+    error = quartile_errors(summary.density[index], summary.single_error[index])
     for q, words in enumerate(("lower quartile", "median", "upper quartile")):
         values = summary.quartiles[:, index, q]
         middle = float(np.nanmean(values)) if np.isfinite(values).any() else np.nan
-        axes.plot(
+        axes.errorbar(
             summary.exposure,
             values - middle,
+            yerr=error[q],
+            capsize=2.0,
             color=rank_colours(3)[q],
             marker=marker(q),
             label=f"{words} of the pixels, minus {number(middle, 4)}",

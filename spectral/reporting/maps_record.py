@@ -11,6 +11,9 @@ from spectral.reporting.wording import listed, number
 if TYPE_CHECKING:
     from spectral.reporting.maps_summary import MapsSummary
 
+_UNITS = {"_kv": "kV", "_g_cm3": "g/cm3"}
+_FEW = 0.001
+
 
 def record_table(summary: MapsSummary) -> Table:
     """All entries of the record."""
@@ -38,15 +41,30 @@ def plain_entry(text: str) -> str:
 def _spelled(value: object) -> str:
     if isinstance(value, dict):
         return "\n".join(
-            f"{str(k).replace('_', ' ')}: {_spelled(v)}" for k, v in value.items()
+            f"{_unit_apart(str(k))}: {_within_a_line(v)}" for k, v in value.items()
         )
     if isinstance(value, list):
         return ", ".join(_spelled(v) for v in value) if value else "none"
     if isinstance(value, bool):
         return "yes" if value else "no"
     if isinstance(value, float):
-        return number(value, 6)
+        return f"{value:g}" if abs(value) >= _FEW else number(value, 3)
     return str(value)
+
+
+def _within_a_line(value: object) -> str:
+    """An entry in an entry: names beside their values, with commas between."""
+    if isinstance(value, dict):
+        return ", ".join(f"{k} {_within_a_line(v)}" for k, v in value.items())
+    return _spelled(value)
+
+
+def _unit_apart(name: str) -> str:
+    """A field's name with its unit as people write it."""
+    for ending, unit in _UNITS.items():
+        if name.endswith(ending):
+            return f"{name.removesuffix(ending).replace('_', ' ')} ({unit})"
+    return name.replace("_", " ")
 
 
 def sources_and_assumptions(

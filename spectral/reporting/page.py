@@ -192,11 +192,14 @@ def _table(table: Table) -> str:
         for i, text in enumerate(table.header)
     )
     rows = "".join(_row(table, i, wordy) for i in range(len(table.rows)))
-    long = " long" if len(table.rows) > _LONG_TABLE else ""
+    long, more = "", ""
+    if len(table.rows) > _LONG_TABLE:
+        long = " long"
+        more = f' <span class="screen">({len(table.rows)} rows: scroll)</span>'
     return (
         f'<div class="scroll{long}" tabindex="0" role="group" '
         f'aria-label="{html.escape(table.caption)}"><table>'
-        f"<caption>{html.escape(table.caption)}</caption>"
+        f"<caption>{html.escape(table.caption)}{more}</caption>"
         f"<thead><tr>{head}</tr></thead><tbody>{rows}</tbody></table></div>"
     )
 

@@ -55,6 +55,8 @@ def robust_limits(values: NDArray[np.floating]) -> Limits:
         return Limits(0.0, 1.0)
     low, high = (float(v) for v in np.percentile(finite, [_LOW_PERCENT, _HIGH_PERCENT]))
     if high - low < 1e-9 * max(abs(high), abs(low), 1e-12):
+        if high == 0.0 and finite.min() == 0.0:  # nothing, but for a few that show
+            return Limits(0.0, float(np.min(finite[finite > 0.0], initial=1.0)))
         half = 0.01 * abs(high) if high else 0.5
         return Limits(low - half, high + half)
     return Limits(low, high)
@@ -268,6 +270,16 @@ def note(axes: Axes, text: str, *, height: float = 0.98) -> None:
         fontsize=7.5,
         color=MUTED,
     )
+
+
+def mark_row(axes: Axes, row: int) -> None:
+    """Arrowheads at both sides of a map, at a row."""
+    left, right = axes.get_xlim()
+    for place, shape in ((left, 5), (right, 4)):  # carets that point inwards
+        axes.plot(
+            place, row, marker=shape, markersize=6.0, color=ACCENT, linestyle="none",
+            clip_on=False, zorder=5,
+        )  # fmt: skip
 
 
 def mark_value(axes: Axes, value: float, text: str) -> None:

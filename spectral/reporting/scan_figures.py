@@ -7,11 +7,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.reporting.wording import number, percent, with_error
 from spectral.scans.stored_counts import NOT_A_COUNT
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+    from spectral.scans.counting_loss import CountingLoss
     from spectral.scans.scan import Scan
 
 
@@ -113,3 +115,29 @@ def attenuations(
     if not (level > 0.0).all():
         return wedge[:0], np.empty((0, scan.shape[1]))
     return wedge, -np.log(figures.per_mas[wedge] / level)
+
+
+def loss_sentence(loss: CountingLoss) -> str:
+    """Dead time and loss; a loss that the dead time's error covers is not called one.
+
+    The counts above the lowest threshold fall by dead time and rise by pulses that
+    pile up over it, so what is left may be zero, or less.
+    """
+    rate = f"{number(loss.highest_rate_per_s)} counts per second and pixel"
+    dead = f"{with_error(loss.median_ns, loss.standard_error_ns)} ns"
+    if loss.median_ns > 2.0 * loss.standard_error_ns and loss.loss > 0.0:
+        lost = f"{percent(loss.loss)} of the pulses are lost at {rate}"
+        return f"dead time {dead} above the lowest threshold: {lost}"
+    return (
+        "the counts above the lowest threshold rise with the tube current as they "
+        f"would without dead time ({dead}), up to {rate}"
+    )
+
+
+def middle_half_width(values: NDArray[np.float64]) -> float:
+    """Half the width of the middle 68 % of the finite values."""
+    finite = values[np.isfinite(values)]
+    if finite.size == 0:
+        return float("nan")
+    low, high = np.percentile(finite, [15.87, 84.13])
+    return float(0.5 * (high - low))

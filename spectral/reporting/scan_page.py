@@ -13,7 +13,7 @@ from spectral.reporting import scan_pictures as pictures
 from spectral.reporting.calibration_pictures import reasons_picture
 from spectral.reporting.calibration_tables import reasons_table
 from spectral.reporting.page import KeyFigure, Page, Section, Table
-from spectral.reporting.scan_figures import ScanFigures, scan_figures
+from spectral.reporting.scan_figures import ScanFigures, loss_sentence, scan_figures
 from spectral.reporting.wording import (
     NONE,
     count,
@@ -87,12 +87,7 @@ def _said(scan: Scan, check: ScanCheck) -> list[str]:
     )
     said = [_VERDICT_WORDS[check.verdict], content]
     if check.loss is not None:
-        said.append(
-            f"Dead time {_dead_time(check.loss)}: {percent(check.loss.loss)} of the "
-            "pulses are lost in the brightest "
-            f"open exposure, at {number(check.loss.highest_rate_per_s)} counts per "
-            "second and pixel."
-        )
+        said.append(_sentence(loss_sentence(check.loss)))
     return said
 
 
@@ -129,7 +124,7 @@ def _key_figures(check: ScanCheck) -> list[KeyFigure]:
             KeyFigure(
                 name="dead time",
                 text=_dead_time(check.loss),
-                remark=f"{percent(check.loss.loss)} lost at the brightest",
+                remark="above the lowest threshold, from open exposures",
                 value=check.loss.median_ns,
             )
         )

@@ -19,8 +19,19 @@ from spectral.reporting.palette import (
     marker,
     rank_colours,
 )
-from spectral.reporting.scan_figures import attenuations, brightest_opens
-from spectral.reporting.wording import GRAMS, count, fixed, listed, number
+from spectral.reporting.scan_figures import (
+    attenuations,
+    brightest_opens,
+    loss_sentence,
+    middle_half_width,
+)
+from spectral.reporting.wording import (
+    GRAMS,
+    count,
+    fixed,
+    listed,
+    number,
+)
 from spectral.scans.scan import ROLES
 
 if TYPE_CHECKING:
@@ -184,11 +195,7 @@ def current_picture(
 def _loss_words(check: ScanCheck) -> str:
     if check.loss is None:
         return "no dead time was found"
-    return (
-        f"dead time {fixed(check.loss.median_ns, 0)} ns, "
-        f"{fixed(100 * check.loss.loss, 1)} % of the pulses lost at "
-        f"{number(check.loss.highest_rate_per_s)} counts per second and pixel"
-    )
+    return loss_sentence(check.loss)
 
 
 def drift_picture(scan: Scan, figures: ScanFigures) -> Picture | None:
@@ -255,7 +262,8 @@ def dispersion_picture(scan: Scan, check: ScanCheck) -> Picture | None:
         panels.light_grid(axes)
         if i == 0:
             axes.set_ylabel("variance / mean")
-            axes.legend(loc="best")
+    handles, names = sheet.axes[0].get_legend_handles_labels()
+    sheet.figure.legend(handles, names, loc="outside right upper")
     off = [np.nan_to_num(np.abs(d.ratio - d.expected)).max() for d in settings]
     worst = float(max(off))
     return sheet.picture(
@@ -290,6 +298,13 @@ def images_picture(
     shape = scan.shape[2:]
     sheet = Sheet(map_height(shape, 3), columns=3)
     words = []
+    single = ""
+    if check.loss is not None:
+        scatter = number(middle_half_width(check.loss.dead_time_ns), 2)
+        single = (
+            f" One pixel's dead time scatters by {scatter} ns here: only structure in "
+            "its map means something."
+        )
     for axes, (image, title, unit) in zip(sheet.axes, found, strict=False):
         panels.draw_map(
             axes,
@@ -305,7 +320,7 @@ def images_picture(
     return sheet.picture(
         alt=f"Maps of the pixels. {listed(words)}.",
         caption=(
-            f"Above the lowest threshold, {number(float(scan.thresholds_kev[0]))} keV. "
-            f"{panels.LIMITS_NOTE}{panels.block_note(shape)}"
+            f"Above the lowest threshold, {number(float(scan.thresholds_kev[0]))} keV."
+            f"{single} {panels.LIMITS_NOTE}{panels.block_note(shape)}"
         ),
     )

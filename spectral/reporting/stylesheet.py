@@ -44,13 +44,14 @@ figure{margin:1rem 0}
 .sheet img{display:block;max-width:100%;height:auto}
 figcaption{font-size:.86rem;color:var(--muted);max-width:56rem;margin-top:.3rem}
 .scroll{overflow-x:auto;margin:1rem 0}
-.scroll.long{max-height:32rem;overflow-y:auto}
+.scroll.long{max-height:32rem;overflow-y:auto;border-bottom:2px solid var(--muted)}
 table{border-collapse:collapse;font-size:.86rem;font-variant-numeric:tabular-nums}
 caption{text-align:left;font-weight:600;padding:.2rem 0 .4rem;font-size:.92rem}
 th,td{padding:.24rem .75rem .24rem 0;text-align:left;vertical-align:top;
  border-bottom:1px solid var(--rule)}
 thead th{border-bottom:2px solid var(--muted);vertical-align:bottom}
 thead th.n{white-space:normal;max-width:8.5rem}
+.screen{font-weight:400;color:var(--muted)}
 .long thead th{position:sticky;top:0;background:var(--paper)}
 tbody th{font-weight:400}
 .n{text-align:right;white-space:nowrap}
@@ -67,7 +68,7 @@ code{font-family:"DejaVu Sans Mono",monospace;font-size:.92em;overflow-wrap:anyw
 @media print{
  body{background:#fff;font-size:9.5pt}
  .wrap{max-width:none;padding:0}
- nav,.jump{display:none}
+ nav,.jump,.screen{display:none}
  figure,dl.key,tr{break-inside:avoid}
  h2{break-after:avoid}
  .scroll,.scroll.long,.sheet{overflow:visible;max-height:none}

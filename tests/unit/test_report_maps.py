@@ -16,7 +16,11 @@ from spectral.reporting.maps_blocks import MapsBlocks
 from spectral.reporting.maps_page import degrees_of_freedom
 from spectral.reporting.maps_pictures import thinned
 from spectral.reporting.maps_record import numbers_in, plain_entry
-from spectral.reporting.maps_summary import DEVIANCE_EDGES, summarise
+from spectral.reporting.maps_summary import (
+    DEVIANCE_EDGES,
+    quartile_errors,
+    summarise,
+)
 from spectral.reporting.maps_tables import scatter_ratio
 from spectral.reporting.report import report_page, write_report
 from spectral.scans.flags import MEANING, PixelFlag
@@ -281,10 +285,36 @@ def test_a_file_of_none_of_the_three(tmp_path: Path, maps: Maps) -> None:
 
 def test_entries_of_the_record() -> None:
     assert plain_entry('{"bias_correction": true, "x": [1, 2.5]}') == (
-        "bias correction: yes\nx: 1, 2.50000"
+        "bias correction: yes\nx: 1, 2.5"
     )
     assert plain_entry("[]") == "none"
     assert plain_entry("plain words") == "plain words"
     assert numbers_in("[1, 2.5]") == [1.0, 2.5]
     assert numbers_in("words") == []
     assert numbers_in("{}") == []
+
+
+def test_an_entry_within_an_entry_stays_on_its_line() -> None:
+    text = '{"voltage_kv": 90.0, "densities_g_cm3": {"PMMA": 1.19, "Al": 2.7}}'
+    assert plain_entry(text) == (
+        "voltage (kV): 90\ndensities (g/cm3): PMMA 1.19, Al 2.7"
+    )
+
+
+def test_the_summary_names_each_flag_with_its_pixels(maps: Maps) -> None:
+    said = report_page(maps).said[-1]
+    assert "bad pixel (1)" in said
+    assert said.endswith(").")
+
+
+def test_quartiles_err_as_repeats_of_them_do() -> None:
+    """Against simulation: 400 exposures of an object of two thicknesses."""
+    rng = np.random.default_rng(21)
+    truth = np.where(np.arange(600) < 350, 1.0, 2.0) + 0.2 * rng.random(600)
+    error = np.full(600, 0.3)
+    repeats = truth + error * rng.normal(size=(400, 600))
+    seen = np.percentile(repeats, [25, 50, 75], axis=1).std(axis=1, ddof=1)
+    expected = quartile_errors(truth[None], error[None])
+    # a standard deviation of 400 is known to 4 %; quantiles move to first order only
+    np.testing.assert_allclose(expected, seen, rtol=0.25)
+    assert np.isnan(quartile_errors(np.full((2, 2), np.nan), np.ones((2, 2)))).all()

@@ -215,6 +215,11 @@ def test_limits_leave_out_the_extremes() -> None:
     assert panels.signed_limits(-values).low == -panels.signed_limits(values).high
     flat = panels.robust_limits(np.full(5, 3.0))
     assert flat.low < 3.0 < flat.high
+    dark = np.zeros(500)
+    dark[3:5] = 0.4, 7000.0  # counts in the dark of two pixels: both are to be seen
+    dim = panels.robust_limits(dark)
+    assert (dim.low, dim.high) == (0.0, 0.4)
+    assert panels.robust_limits(np.zeros(5)) == panels.Limits(0.0, 1.0)
     nothing = panels.robust_limits(np.full(3, np.nan))
     assert (nothing.low, nothing.high) == (0.0, 1.0)
     assert panels.signed_limits(np.zeros(3)).high == 1.0

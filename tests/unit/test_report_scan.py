@@ -10,7 +10,13 @@ import pytest
 
 from spectral.errors import FileFormatError, InputError
 from spectral.reporting.report import report, report_page
-from spectral.reporting.scan_figures import attenuations, scan_figures
+from spectral.reporting.scan_figures import (
+    attenuations,
+    loss_sentence,
+    middle_half_width,
+    scan_figures,
+)
+from spectral.scans.counting_loss import CountingLoss
 from spectral.scans.scan import CountsInMemory
 from spectral.scans.scan_check import check_scan
 from spectral.scans.stored_counts import NOT_A_COUNT
@@ -141,3 +147,28 @@ def test_files_that_are_none_of_the_three(tmp_path: Path) -> None:
     words.write_text("words")
     with pytest.raises(FileFormatError, match="this is not an HDF5 file"):
         report(words)
+
+
+def test_a_dead_time_within_its_error_is_no_loss() -> None:
+    sure = CountingLoss(
+        dead_time_ns=np.array([[100.0]]), median_ns=100.0, standard_error_ns=20.0,
+        highest_rate_per_s=50000.0, loss=0.005,
+    )  # fmt: skip
+    assert loss_sentence(sure) == (
+        "dead time 100 ± 20 ns above the lowest threshold: 0.5\u202f% of the pulses "
+        "are lost at 50000 counts per second and pixel"
+    )
+    for unsure in (
+        replace(sure, standard_error_ns=60.0),
+        replace(sure, median_ns=-8.0, loss=-0.001),
+    ):
+        assert "as they would without dead time" in loss_sentence(unsure)
+        assert "lost" not in loss_sentence(unsure)
+
+
+def test_the_spread_of_pixels_is_that_of_most_of_them() -> None:
+    values = np.random.default_rng(3).normal(5.0, 2.0, 20000)
+    values[:100] = 1e6
+    values[100:110] = np.nan
+    assert middle_half_width(values) == pytest.approx(2.0, rel=0.05)
+    assert np.isnan(middle_half_width(np.full(3, np.nan)))
