@@ -1,7 +1,8 @@
 """How a command ends: what it prints, where, and with which exit code.
 
 0: done. 1: the data do not allow it, said in one sentence on standard error. 2: wrong
-use. 130: interrupted from the keyboard, as shells have it. The result goes to standard output; progress and messages to standard error.
+use. 130: interrupted from the keyboard, as shells have it. The result goes to standard
+output; progress and messages to standard error.
 """
 
 from __future__ import annotations
@@ -17,6 +18,8 @@ from typing import TYPE_CHECKING, Any, ParamSpec
 import click
 
 from spectral.errors import InputError, QualityWarning, SpectralError
+
+from .kinds import hint
 
 if TYPE_CHECKING:
     from collections.abc import Callable, Iterator, Mapping
@@ -70,7 +73,9 @@ def ends_well(command: Callable[P, None]) -> Callable[P, None]:
         except InputError as error:
             raise UseError(one_line(error)) from error
         except SpectralError as error:
-            raise DataError(one_line(error)) from error
+            message = one_line(error)
+            instead = hint(message, kwargs)
+            raise DataError(f"{message}; {instead}" if instead else message) from error
         except OSError as error:
             where = f"{error.filename}: " if error.filename else ""
             message = f"{where}{error.strerror or error}"

@@ -107,16 +107,26 @@ def report_page(
 
 def _found_in(path: Path) -> Scan | Calibration | Path:
     """What a file holds; maps stay in their file, which may be long."""
-    if path.suffix.lower() == ".toml":
-        return open_scan(path)
-    with opened(path) as file:
-        if plain(file.attrs.get("format", "")) == FORMAT_NAME:
-            kind = "calibration"
-        else:
-            kind = _nexus_kind(Node(str(path), file))
+    kind = file_kind(path)
     if kind == "calibration":
         return read_calibration(path)
     return open_scan(path) if kind == "scan" else path
+
+
+def file_kind(path: Path) -> str:
+    """Whether a file holds a "scan" (or scan script), a "calibration" or "maps".
+
+    Raises
+    ------
+    FileFormatError
+        If it is none of the three.
+    """
+    if path.suffix.lower() == ".toml":
+        return "scan"
+    with opened(path) as file:
+        if plain(file.attrs.get("format", "")) == FORMAT_NAME:
+            return "calibration"
+        return _nexus_kind(Node(str(path), file))
 
 
 def _nexus_kind(root: Node) -> str:
