@@ -20,7 +20,7 @@ if TYPE_CHECKING:
     Array = NDArray[np.float64]
     Weight = NDArray[np.float64] | NDArray[np.float32]
 
-_PIXELS_PER_TASK = 64 * LANES
+_PIXELS_PER_TASK = 32 * LANES
 
 
 class SolveOutcome(enum.IntEnum):
@@ -89,7 +89,9 @@ def solve(
     counts : array, shape (pixel, bin), in counts
     weight : array of float64 or float32, shape (pixel or 1, bin, node), in counts
         Share of each energy node in each bin at no attenuation; entries may be
-        negative (pile-up), sums over the nodes may not.
+        negative (pile-up), sums over the nodes may not. float32 is solved in single
+        precision, half again as fast; it costs less than 0.01 standard errors as long
+        as 6e-8 sqrt(counts) sum |weight| / |sum weight| stays below 0.003 in all bins.
     attenuation : array, shape (node, material), in cm2/g
     start : StartRegression or array of shape (material,) or (pixel, material), optional
         Default: a regression fitted to the mean weight.
@@ -150,9 +152,11 @@ def solve(
     if dead.shape not in {(1,), (pixels,)}:
         msg = f"dead_fraction must be a number or {pixels} of them, got {dead.shape}"
         raise InputError(msg)
-    minus, factor = _node_factors(attenuation)
+    minus: Any
+    factor: Any
+    minus, factor = (part.astype(kind) for part in _node_factors(attenuation))
     given, regression = _resolve_start(start, pixels, own, attenuation)
-    coefficients = np.array(regression.coefficients)
+    coefficients: Any = np.array(regression.coefficients, kind)
     lowest, highest = np.array(regression.lowest), np.array(regression.highest)
     if nonnegative:
         lowest = np.maximum(lowest, 0.0)

@@ -13,6 +13,8 @@ from spectral.errors import InputError
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
+RIDGE = 1e-6
+
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class NodeBasis:
@@ -88,7 +90,7 @@ def choose_nodes(
     targets: NDArray[np.float64],
     *,
     count: int = 16,
-    ridge: float = 1e-11,
+    ridge: float = RIDGE,
 ) -> NodeBasis:
     """Nodes chosen by matching pursuit and exchange, with the map onto them.
 
@@ -102,8 +104,8 @@ def choose_nodes(
     count : int
         Number of nodes.
     ridge : float
-        Singular values below this share of the largest are damped: it keeps the
-        weights from growing large with alternating signs.
+        What a weight costs beside an error, both relative: nodes and weights are
+        chosen so that the weights do not grow large with alternating signs.
 
     Returns
     -------
@@ -119,23 +121,29 @@ def choose_nodes(
     Rows are divided by the middle target, so that errors are relative.
     Source: orthogonal matching pursuit, Y. C. Pati, R. Rezaiifar, P. S.
     Krishnaprasad, Asilomar Conf. Signals Syst. Comput. 27 (1993) 40 (from memory);
-    exchange as in V. V. Fedorov, Theory of Optimal Experiments (1972).
+    exchange as in V. V. Fedorov, Theory of Optimal Experiments (1972); the cost of
+    weights, A. N. Tikhonov, Sov. Math. Dokl. 4 (1963) 1035 (from memory).
     """
     if not np.all(targets > 0.0):
         msg = "choose_nodes needs positive targets; a curve is zero or negative"
         raise InputError(msg)
     scale = np.exp(-np.mean(np.log(targets), axis=1))
     columns = np.exp(-points @ candidates.T) * scale[:, None]
-    columns /= np.linalg.norm(columns, axis=0)
+    length = np.linalg.norm(columns, axis=0)
+    columns /= length
     wanted = targets * scale[:, None]
     wanted /= np.linalg.norm(wanted, axis=0)
-    chosen = _exchange(columns, wanted, _pursue(columns, wanted, count))
-    attenuation = candidates[np.sort(chosen)]
-    matrix = np.exp(-points @ attenuation.T) * scale[:, None]
-    u, s, vt = np.linalg.svd(matrix, full_matrices=False)
-    damped = s / (s**2 + (ridge * s[0]) ** 2)
-    projection = (vt.T * damped) @ u.T * scale[None, :]
-    return NodeBasis(attenuation=attenuation, points=points, projection=projection)
+    cost = ridge * np.eye(candidates.shape[0])
+    priced = np.concatenate([columns, cost])
+    goal = np.concatenate([wanted, np.zeros((len(cost), wanted.shape[1]))])
+    chosen = np.sort(_exchange(priced, goal, _pursue(priced, goal, count)))
+    u, s, vt = np.linalg.svd(columns[:, chosen], full_matrices=False)
+    projection = (vt.T * (s / (s**2 + ridge**2))) @ u.T * scale
+    return NodeBasis(
+        attenuation=candidates[chosen],
+        points=points,
+        projection=projection / length[chosen, None],
+    )
 
 
 def _pursue(

@@ -65,7 +65,9 @@ def inflate(f: Array, v: Array, y: Array, extra: Array, share: Array) -> None:
     Methods in Statistics, Springer, chapter 4 (from memory). share[l] is its mean
     ratio to v; above LARGEST_INFLATION the series is no guide and is cut there.
     """
-    materials = f.shape[0]
+    materials, real = f.shape[0], f.dtype.type
+    one, half, part = real(1.0), real(0.5), real(1.0 / materials)
+    largest, tiny = real(LARGEST_INFLATION), real(1e-30)
     for lane in range(LANES):
         share[lane] = 0.0
     for j in range(materials):
@@ -76,11 +78,11 @@ def inflate(f: Array, v: Array, y: Array, extra: Array, share: Array) -> None:
                 for e in range(materials):
                     for lane in range(LANES):
                         product = y[j, k, e, lane] * y[i, e, k, lane]
-                        extra[j, i, lane] += 0.5 * product
+                        extra[j, i, lane] += half * product
             for lane in range(LANES):
-                share[lane] += extra[j, i, lane] * f[j, i, lane] / materials
+                share[lane] += extra[j, i, lane] * f[j, i, lane] * part
     for j in range(materials):
         for i in range(materials):
             for lane in range(LANES):
-                cut = min(1.0, LARGEST_INFLATION / max(share[lane], 1e-30))
+                cut = min(one, largest / max(share[lane], tiny))
                 v[j, i, lane] += cut * extra[j, i, lane]

@@ -49,7 +49,7 @@ if TYPE_CHECKING:
     Whole = NDArray[np.int64]
 
 CROWDED = 4  # a block with fewer than one lane in so many still walking breaks up
-_HUGE = 1e290
+_HUGE = 1e30
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
@@ -75,7 +75,7 @@ def _load(
             usable = usable and 0.0 <= n[b, lane] < _HUGE
         i = min(i, weight.shape[0] - 1)
         for b in range(bins):
-            total = 0.0
+            total = w.dtype.type(0.0)
             for k in range(nodes):
                 w[b, k, lane] = weight[i, b, k]
                 total += w[b, k, lane]
@@ -201,33 +201,33 @@ def fit_pixels(
     """
     pixels, bins = counts.shape
     nodes, materials = minus_attenuation.shape
-    n, opened = np.empty((bins, ROW)), np.empty((bins, ROW))
-    w, c = np.zeros((bins, nodes, ROW)), np.empty(ROW)
-    t = np.empty((nodes, ROW))
-    moment = np.empty((bins + 1, factor.shape[0], ROW))
-    scale, residual = np.empty((bins + 1, ROW)), np.empty((bins + 1, ROW))
-    pseudo = np.empty((bins + 1, ROW))
-    f, v = (
-        np.empty((materials, materials, ROW)),
-        np.empty((materials, materials, ROW)),
-    )
+    real = weight.dtype
+    n, opened = np.empty((bins, ROW), real), np.empty((bins, ROW), real)
+    w, c = np.zeros((bins, nodes, ROW), real), np.empty(ROW, real)
+    t = np.empty((nodes, ROW), real)
+    moment = np.empty((bins + 1, factor.shape[0], ROW), real)
+    scale, residual = np.empty((bins + 1, ROW), real), np.empty((bins + 1, ROW), real)
+    pseudo = np.empty((bins + 1, ROW), real)
+    f = np.empty((materials, materials, ROW), real)
+    v, extra = np.empty_like(f), np.empty_like(f)
     observed, observed_inverse = np.empty_like(f), np.empty_like(f)
-    scored, newton = np.empty((materials, ROW)), np.empty((materials, ROW))
-    along, decrement, straight = np.empty(ROW), np.empty(ROW), np.empty(ROW)
-    u, sound, regular = np.empty((materials, ROW)), np.empty(ROW), np.empty(ROW)
-    ahead = np.empty((bins + 1, 1 + materials, ROW))
+    u = np.empty((materials, ROW), real)
+    scored, newton = np.empty_like(u), np.empty_like(u)
+    u_ahead, shift, second = np.empty_like(u), np.empty_like(u), np.empty_like(u)
+    along, decrement = np.empty(ROW, real), np.empty(ROW, real)
+    straight, second_straight = np.empty(ROW, real), np.empty(ROW, real)
+    sound, regular = np.empty(ROW, real), np.empty(ROW, real)
+    bias, blur, looked = np.empty(ROW, real), np.empty(ROW, real), np.zeros(ROW, real)
+    ahead = np.empty((bins + 1, 1 + materials, ROW), real)
     ahead_scale, ahead_residual = np.empty_like(scale), np.empty_like(scale)
-    u_ahead, shift = np.empty((materials, ROW)), np.empty((materials, ROW))
-    second, second_straight = np.empty((materials, ROW)), np.empty(ROW)
-    bias, blur, looked = np.empty(ROW), np.empty(ROW), np.zeros(ROW)
-    walk = np.empty((3 * materials + 4, ROW))
+    walk = np.empty((3 * materials + 4, ROW), real)
     a, base = walk[:materials], walk[materials : 2 * materials]
     move, slope = walk[2 * materials : 3 * materials], walk[3 * materials]
     last, halved, steps = walk[-3], walk[-2], walk[-1]
-    chi, share, outcome = np.empty(ROW), np.zeros(ROW), np.empty(ROW, np.int64)
-    g = np.empty((materials, materials, materials, ROW))
-    y, extra = np.empty_like(g), np.empty_like(f)
-    queue, state = np.arange(pixels), np.empty((pixels, walk.shape[0]))
+    chi, share, outcome = np.empty(ROW), np.zeros(ROW, real), np.empty(ROW, np.int64)
+    g = np.empty((materials, materials, materials, ROW), real)
+    y = np.empty_like(g)
+    queue, state = np.arange(pixels), np.empty((pixels, walk.shape[0]), real)
     todo, fresh = pixels, True
     while todo > 0:
         waiting = 0

@@ -32,7 +32,7 @@ if TYPE_CHECKING:
     Array = NDArray[np.float64]
     Mask = NDArray[np.bool_]
 
-_TINY, _HUGE = 1e-290, 1e290
+_TINY, _HUGE = 1e-30, 1e30
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)

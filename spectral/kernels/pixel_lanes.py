@@ -3,7 +3,7 @@
 Every inner loop runs over `LANES` pixels, so that one instruction serves several.
 Arrays end in the lane axis: counts n[b, l], weights w[b, k, l], moments
 moment[b, q, l] with q = expected counts, first derivatives, second derivatives (upper
-triangle, row by row). A last row b = B holds the sum over the bins; with
+triangle, row by row), all in single or all in double precision. A last row b = B holds the sum over the bins; with
 scale[b] = 1 / lambda_b and scale[B] = c / (1 - c sum lambda), x' C^-1 y is
 sum_b x_b y_b scale_b over all B + 1 rows, for the covariance of the counts
 C = diag(lambda) - c lambda lambda'.
@@ -26,23 +26,26 @@ if TYPE_CHECKING:
     Array = NDArray[np.float64]
 
 # A multiple of all vector lengths: no pixel is left to a loop of another rounding.
-LANES = 64
-# 9 cache lines of 64 bytes: an odd number, so rows spread over all cache sets.
-ROW = 72
+LANES = 128
+# 9 cache lines of 64 bytes in single precision: rows spread over all cache sets.
+ROW = 144
 MOMENTS = 6  # computed in one pass: all of two materials
-SMALLEST_PIVOT = 1e-13  # of the diagonal: a share of information not to be told from 0
-_TINY = 1e-290
-_HUGE = 1e290
+# Of the diagonal: a share of information not to be told from 0, in either precision.
+SMALLEST_PIVOT = 1e-13
+SMALLEST_SINGLE_PIVOT = 3e-6
+_TINY = 1e-30
+_HUGE = 1e30
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
 def regress(n: Array, opened: Array, x: Array, coefficients: Array, a: Array) -> None:
     """Start values: quadratic polynomial in ln((N + 1/2) / open counts)."""
-    bins = n.shape[0]
+    bins, real = n.shape[0], n.dtype.type
+    half, low, high = real(0.5), real(_TINY), real(_HUGE)
     for b in range(bins):
         for lane in range(LANES):
-            ratio = (n[b, lane] + 0.5) / opened[b, lane]
-            x[b, lane] = logarithm(min(max(ratio, 1e-30), 1e30))
+            ratio = (n[b, lane] + half) / opened[b, lane]
+            x[b, lane] = logarithm(min(max(ratio, low), high))
     for j in range(a.shape[0]):
         for lane in range(LANES):
             a[j, lane] = coefficients[0, j]
@@ -150,16 +153,17 @@ def expect(factor: Array, w: Array, t: Array, moment: Array) -> None:
 @njit(nogil=True, cache=True, error_model="numpy")
 def inform(moment: Array, c: Array, scale: Array, sound: Array, f: Array) -> None:
     """Fisher information f[j, i]; sound[l] is 0 where lambda or C cannot be."""
-    rows, materials = scale.shape[0], f.shape[0]
+    rows, materials, one = scale.shape[0], f.shape[0], f.dtype.type(1.0)
+    tiny, huge = f.dtype.type(_TINY), f.dtype.type(_HUGE)
     for lane in range(LANES):
-        live = 1.0 - c[lane] * moment[rows - 1, 0, lane]
-        good = live > 0.0 and moment[rows - 1, 0, lane] < _HUGE
+        live = one - c[lane] * moment[rows - 1, 0, lane]
+        good = live > 0.0 and moment[rows - 1, 0, lane] < huge
         sound[lane] = 1.0 if good else 0.0
         scale[rows - 1, lane] = c[lane] / live
     for b in range(rows - 1):
         for lane in range(LANES):
-            sound[lane] = sound[lane] if moment[b, 0, lane] > _TINY else 0.0
-            scale[b, lane] = 1.0 / moment[b, 0, lane]
+            sound[lane] = sound[lane] if moment[b, 0, lane] > tiny else 0.0
+            scale[b, lane] = one / moment[b, 0, lane]
     for j in range(materials):
         for i in range(j, materials):
             for lane in range(LANES):
@@ -175,7 +179,8 @@ def inform(moment: Array, c: Array, scale: Array, sound: Array, f: Array) -> Non
 @njit(nogil=True, cache=True, error_model="numpy")
 def invert(f: Array, v: Array, sound: Array) -> None:
     """Inverse v of f by Gauss-Jordan elimination; sound[l] turns 0 where f is singular."""
-    materials = f.shape[0]
+    materials, one = f.shape[0], f.dtype.type(1.0)
+    smallest = f.dtype.type(SMALLEST_PIVOT if f.itemsize > 4 else SMALLEST_SINGLE_PIVOT)
     for j in range(materials):
         for i in range(materials):
             for lane in range(LANES):
@@ -183,9 +188,9 @@ def invert(f: Array, v: Array, sound: Array) -> None:
     for k in range(materials):
         for lane in range(LANES):
             pivot = v[k, k, lane]
-            good = pivot > SMALLEST_PIVOT * f[k, k, lane]
+            good = pivot > smallest * f[k, k, lane]
             sound[lane] = sound[lane] if good else 0.0
-            v[k, k, lane] = 1.0 / pivot
+            v[k, k, lane] = one / pivot
         for j in range(materials):
             if j != k:
                 for lane in range(LANES):
@@ -211,7 +216,7 @@ def compare(
     residual: Array,
 ) -> None:
     """Residuals with the pseudo-counts q / 2, which are 0 if not corrected."""
-    rows, materials = scale.shape[0], v.shape[0]
+    rows, materials, real = scale.shape[0], v.shape[0], v.dtype.type
     for lane in range(LANES):
         residual[rows - 1, lane] = pseudo[rows - 1, lane] = 0.0
     for b in range(rows - 1):
@@ -221,7 +226,7 @@ def compare(
             q = 1 + materials
             for j in range(materials):
                 for i in range(j, materials):
-                    share = 0.5 if i == j else 1.0
+                    share = real(0.5 if i == j else 1.0)
                     for lane in range(LANES):
                         pseudo[b, lane] += share * v[j, i, lane] * moment[b, q, lane]
                     q += 1
@@ -260,7 +265,8 @@ def look_ahead(
     With x the relative change of an expectation, the series leaves about x^3 / 6 of it
     and x^2 / 2 of its derivatives; blur is what that makes of chi-square.
     """
-    rows, materials = ahead_scale.shape[0], move.shape[0]
+    rows, materials, real = ahead_scale.shape[0], move.shape[0], move.dtype.type
+    one, none, quarter, ninth = real(1.0), real(np.nan), real(0.25), real(1.0 / 9.0)
     for lane in range(LANES):
         blur[lane] = 0.0
     for b in range(rows):
@@ -273,7 +279,7 @@ def look_ahead(
                 ahead[b, 0, lane] += moment[b, 1 + j, lane] * move[j, lane]
         for j in range(materials):
             for i in range(j, materials):
-                share = 0.5 if i == j else 1.0
+                share = real(0.5 if i == j else 1.0)
                 for lane in range(LANES):
                     turn = moment[b, q, lane] * move[i, lane]
                     ahead[b, 1 + j, lane] += turn
@@ -285,33 +291,33 @@ def look_ahead(
         for lane in range(LANES):
             expected = ahead[b, 0, lane]
             ahead_residual[b, lane] = residual[b, lane] - expected + moment[b, 0, lane]
-            live = 1.0 - c[lane] * expected
-            last = c[lane] / live if live > 0.0 else np.nan
-            first = 1.0 / expected if expected > 0.0 else np.nan
+            live = one - c[lane] * expected
+            last = c[lane] / live if live > 0.0 else none
+            first = one / expected if expected > 0.0 else none
             ahead_scale[b, lane] = last if b == rows - 1 else first
         if b < rows - 1:
             for lane in range(LANES):
                 x = (ahead[b, 0, lane] - moment[b, 0, lane]) * scale[b, lane]
                 pull = residual[b, lane] * residual[b, lane] * scale[b, lane]
-                curve = x * x * moment[b, 0, lane] / 9.0 + pull
-                blur[lane] += 0.25 * x * x * x * x * curve
+                curve = x * x * moment[b, 0, lane] * ninth + pull
+                blur[lane] += quarter * x * x * x * x * curve
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
 def observe(moment: Array, scale: Array, residual: Array, observed: Array) -> None:
     """Observed information: minus the slope of the score, q held."""
-    rows, materials = scale.shape[0], observed.shape[0]
-    q = 1 + materials
+    rows, materials, real = scale.shape[0], observed.shape[0], scale.dtype.type
+    one, q = real(1.0), 1 + materials
     for j in range(materials):
         for i in range(j, materials):
             for lane in range(LANES):
                 observed[j, i, lane] = 0.0
             for b in range(rows):
-                sign = 1.0 if b < rows - 1 else -1.0
+                sign = real(1.0 if b < rows - 1 else -1.0)
                 for lane in range(LANES):
                     first = moment[b, 1 + j, lane] * moment[b, 1 + i, lane]
                     pull = residual[b, lane] * scale[b, lane]
-                    slope = first * (1.0 + sign * pull) * scale[b, lane]
+                    slope = first * (one + sign * pull) * scale[b, lane]
                     observed[j, i, lane] += slope - moment[b, q, lane] * pull
             for lane in range(LANES):
                 observed[i, j, lane] = observed[j, i, lane]
@@ -353,17 +359,20 @@ def settle(looked: Array, ahead: Array, moment: Array) -> None:
 
 @njit(nogil=True, cache=True, error_model="numpy")
 def misfit(n: Array, moment: Array, scale: Array, dof: float, chi: Array) -> None:
-    """Deviance per degree of freedom, with the dead time's share of C^-1."""
+    """Deviance per degree of freedom, with the dead time's share of C^-1.
+
+    chi is double: a difference of large numbers.
+    """
     rows = scale.shape[0]
     for lane in range(LANES):
         chi[lane] = 0.0
     for b in range(rows - 1):
         for lane in range(LANES):
-            count, expected = n[b, lane], moment[b, 0, lane]
-            ratio = min(max(max(count, 1e-30) / expected, 1e-300), 1e300)
+            count, expected = np.float64(n[b, lane]), np.float64(moment[b, 0, lane])
+            ratio = min(max(count / expected, 1e-300), 1e300)
             chi[lane] += 2.0 * (count * logarithm(ratio) - count + expected)
     for lane in range(LANES):
-        excess = -moment[rows - 1, 0, lane]
+        excess = -np.float64(moment[rows - 1, 0, lane])
         for b in range(rows - 1):
             excess += n[b, lane]
         chi[lane] = (chi[lane] + scale[rows - 1, lane] * excess * excess) / dof

@@ -30,6 +30,17 @@ def test_exponential_and_logarithm_match_numpy() -> None:
     np.testing.assert_allclose(ln, np.log(y), rtol=4e-16, atol=3e-16)
 
 
+def test_single_precision_functions_match_numpy() -> None:
+    x = np.linspace(-86.0, 86.0, 200_001).astype(np.float32)
+    y = np.concatenate((np.logspace(-30, 30, 100_001), np.linspace(0.5, 2, 100_000)))
+    y = y.astype(np.float32)
+    e, ln = np.empty_like(x), np.empty_like(y)
+    _both(x, y, e, ln)
+    np.testing.assert_allclose(e, np.exp(x.astype(np.float64)), rtol=2e-7)
+    exact = np.log(y.astype(np.float64))
+    np.testing.assert_allclose(ln, exact, rtol=2e-7, atol=2e-7)
+
+
 def test_exponential_is_held_within_the_range_of_doubles() -> None:
     x = np.array([-1e300, -701.0, 701.0, 1e300])
     e, ln = np.empty_like(x), np.empty_like(x)
@@ -120,9 +131,21 @@ def test_twin_agrees_for_one_shared_weight_and_given_starts(
     np.testing.assert_allclose(ours.areal_density, twin.areal_density, rtol=1e-9)
 
 
-def test_single_precision_weights_change_little() -> None:
-    n, weight, attenuation = _scene(2, 16, 1e4)
+@pytest.mark.parametrize("materials", [2, 3])
+@pytest.mark.parametrize("counts", [60.0, 1e4, 1e6])
+def test_single_precision_costs_no_accuracy(materials: int, counts: float) -> None:
+    n, weight, attenuation = _scene(materials, 16, counts)
     exact = solver.solve(n, weight, attenuation)
     single = solver.solve(n, weight.astype(np.float32), attenuation)
+    # 6e-8 of 1e6 counts is 6e-5 standard errors of one bin; the bins' differences
+    # tell materials apart with a smaller lever
+    good = exact.outcome == solver.SolveOutcome.CONVERGED
     shift = (single.areal_density - exact.areal_density) / exact.standard_error
-    assert np.abs(shift).max() < 1e-3  # 6e-8 of 1e4 counts is 6e-6 standard errors
+    assert np.abs(shift[good]).max() < 0.01
+    assert np.sqrt((shift[good] ** 2).mean()) < 1e-3
+    np.testing.assert_allclose(
+        single.standard_error[good], exact.standard_error[good], rtol=2e-3
+    )
+    np.testing.assert_allclose(single.deviance[good], exact.deviance[good], atol=0.02)
+    assert good.mean() > 0.9
+    assert (single.outcome[good] == exact.outcome[good]).mean() > 0.99
