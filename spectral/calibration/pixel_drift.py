@@ -87,9 +87,7 @@ def pixel_drift(
     likelihood = _Likelihood.build(calibration, data, output, threads=threads)
     values, covariance = start.copy(), own.copy()
     variance, error = 1e-4 * largest, np.zeros(len(CLASSES))
-    ratio = likelihood.ratio(
-        likelihood.at(values, np.ones(likelihood.counts.shape[1:]))
-    )
+    ratio = likelihood.ratio(values)
     for _ in range(rounds):
         seen = likelihood.at(values, ratio)
         variance, error = drift_variance(
@@ -102,7 +100,7 @@ def pixel_drift(
                 own[part].astype(np.float64), variance,
             )  # fmt: skip
         values += (start - values).mean(axis=0)
-        ratio = likelihood.ratio(likelihood.at(values, ratio))
+        ratio = likelihood.ratio(values)
     spread = np.sqrt(variance)
     by_first_order = error / np.maximum(2.0 * spread, 1e-12)
     return PixelDrift(
@@ -116,12 +114,11 @@ def pixel_drift(
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class _Seen:
-    """Quadratic form of each pixel's log-likelihood, and sums over pixels."""
+    """Quadratic form of each pixel's log-likelihood, and its deviance."""
 
     information: NDArray[np.float64]
     pull: NDArray[np.float64]
     deviance: NDArray[np.float64]
-    expected: NDArray[np.float64]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -154,9 +151,25 @@ class _Likelihood:
             threads=threads,
         )
 
-    def ratio(self, seen: _Seen) -> NDArray[np.float64]:
+    def ratio(self, values: NDArray[np.float64]) -> NDArray[np.float64]:
         """Counts over expected counts of all pixels, shape (exposure, bin)."""
-        return np.asarray(self.counts.sum(axis=0) / np.maximum(seen.expected, 1e-9))
+        tables = self.tables
+        shape = self.counts.shape[1:]
+
+        def block(first: int) -> NDArray[np.float64]:
+            expected = np.zeros(shape)
+            pixel_likelihood.add_expected(
+                tables.curve, tables.by_rate, tables.by_variance, tables.by_dead_time,
+                self.levels_kev, tables.step_kev, values[first : first + CHUNK],
+                self.time, expected,
+            )  # fmt: skip
+            return expected
+
+        with ThreadPoolExecutor(self.threads) as pool:
+            expected = sum(
+                pool.map(block, range(0, values.shape[0], CHUNK)), np.zeros(shape)
+            )
+        return np.asarray(self.counts.sum(axis=0) / np.maximum(expected, 1e-9))
 
     def at(self, values: NDArray[np.float64], ratio: NDArray[np.float64]) -> _Seen:
         """The likelihood near values of the departures."""
@@ -166,25 +179,19 @@ class _Likelihood:
         deviance = np.empty(pixels)
         tables = self.tables
 
-        def block(first: int) -> NDArray[np.float64]:
+        def block(first: int) -> None:
             part = slice(first, first + CHUNK)
-            expected = np.zeros(ratio.shape)
             pixel_likelihood.summarise(
                 self.counts[part], tables.curve, tables.by_rate, tables.by_variance,
                 tables.by_dead_time, self.levels_kev, tables.step_kev, values[part],
                 ratio, self.lost, self.time, information[part], score[part],
-                deviance[part], expected,
+                deviance[part], np.zeros(ratio.shape),
             )  # fmt: skip
-            return expected
 
         with ThreadPoolExecutor(self.threads) as pool:
-            expected = sum(
-                pool.map(block, range(0, pixels, CHUNK)), np.zeros(ratio.shape)
-            )
+            list(pool.map(block, range(0, pixels, CHUNK)))
         pull = score + (information @ values[..., None])[..., 0]
-        return _Seen(
-            information=information, pull=pull, deviance=deviance, expected=expected
-        )
+        return _Seen(information=information, pull=pull, deviance=deviance)
 
 
 def _by_class(values: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from concurrent.futures import ThreadPoolExecutor
 from typing import TYPE_CHECKING
 
 import numpy as np
 
 from spectral.forward.counting_model import counts_to_bins
-from spectral.forward.pixel_response import curve_tables, expected_above
+from spectral.forward.pixel_response import curve_tables
+from spectral.kernels import pooled_reading
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -15,7 +17,7 @@ if TYPE_CHECKING:
     from spectral.calibration.result import Calibration
     from spectral.calibration.wedge_data import WedgeData
 
-CHUNK = 2048
+BLOCK = 8192
 
 
 def pooled(
@@ -36,20 +38,68 @@ def pooled(
     change : array, shape (exposure, bin, parameter)
         With ln output, each threshold's shift, noise variance and ln dead time.
     """
-    areal, current = data.areal_density, data.current_ma
-    rate = calibration.photons_per_mas * current * output
-    tables = curve_tables(calibration.model, areal, rate)
-    bins = calibration.levels_kev.size
-    total = np.zeros((data.exposure.size, bins))
-    change = np.zeros((data.exposure.size, bins, bins + 3))
-    for first in range(0, data.pixel.size, CHUNK):
-        pixels = calibration.pixels(data.pixel[first : first + CHUNK])
-        above, slope = expected_above(tables, calibration.levels_kev, pixels)
-        total += counts_to_bins(above.sum(axis=0))
-        change += counts_to_bins(slope.sum(axis=0), axis=1)
-    factor = np.exp(calibration.residual.log_factor(areal, current))
-    factor *= data.count_time_s[:, None]
-    return np.asarray(total * factor), np.asarray(change * factor[..., None])
+    return pooled_at(
+        calibration,
+        data.areal_density,
+        data.current_ma,
+        data.count_time_s,
+        output,
+        data.pixel,
+    )
+
+
+def pooled_at(
+    calibration: Calibration,
+    areal_density: NDArray[np.float64],
+    current_ma: NDArray[np.float64],
+    count_time_s: NDArray[np.float64],
+    output: NDArray[np.float64],
+    pixel: NDArray[np.int64],
+    *,
+    threads: int = 2,
+) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+    """Expected counts of pixels together in given exposures.
+
+    Parameters
+    ----------
+    calibration : Calibration
+    areal_density : array, shape (exposure, material), in g/cm2
+    current_ma, count_time_s, output : arrays, shape (exposure,)
+    pixel : array of int64, shape (pixel,)
+        Flat indices.
+    threads : int
+        The sums do not depend on it.
+
+    Returns
+    -------
+    expected, change : arrays, as `pooled`
+    """
+    levels = calibration.levels_kev
+    rate = calibration.photons_per_mas * current_ma * output
+    tables = curve_tables(calibration.model, areal_density, rate)
+    shape = (output.size, levels.size)
+
+    def block(first: int) -> NDArray[np.float64]:
+        sums = np.zeros(shape), np.zeros((*shape, 4))
+        pooled_reading.add_up(
+            tables.curve, tables.by_rate, tables.by_variance, tables.by_dead_time,
+            levels, tables.step_kev,
+            calibration.pixels(pixel[first : first + BLOCK]).values, *sums,
+        )  # fmt: skip
+        return np.concatenate([sums[0][..., None], sums[1]], axis=-1)
+
+    with ThreadPoolExecutor(threads) as pool:
+        parts = pool.map(block, range(0, pixel.size, BLOCK))
+        total = sum(parts, np.zeros((*shape, 5)))
+    change = np.zeros((*shape, levels.size + 3))
+    own = np.arange(levels.size)
+    change[..., 0] = total[..., 1]
+    change[:, own, 1 + own] = total[..., 2]
+    change[..., -2:] = total[..., 3:]
+    factor = np.exp(calibration.residual.log_factor(areal_density, current_ma))
+    factor *= count_time_s[:, None]
+    expected = counts_to_bins(total[..., 0]) * factor
+    return expected, counts_to_bins(change, axis=1) * factor[..., None]
 
 
 def log_covariance(

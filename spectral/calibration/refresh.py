@@ -125,7 +125,9 @@ def refresh(calibration: Calibration, scan: Scan) -> Refreshed:
     )
 
 
-def updated_by_opens(calibration: Calibration, scan: Scan) -> Calibration:
+def updated_by_opens(
+    calibration: Calibration, scan: Scan, *, bad: NDArray[np.uint16] | None = None
+) -> Calibration:
     """The calibration with each pixel's departures told better by a scan's opens.
 
     Nothing that all pixels share is changed: an object scan's own open exposures make
@@ -136,6 +138,8 @@ def updated_by_opens(calibration: Calibration, scan: Scan) -> Calibration:
     calibration : Calibration
     scan : Scan
         Of an object, with open exposures; without any the calibration comes back.
+    bad : array of uint16, shape (row, column), optional
+        Its pixels' reasons, if they have been looked for (`find_bad_pixels`).
 
     Raises
     ------
@@ -146,7 +150,7 @@ def updated_by_opens(calibration: Calibration, scan: Scan) -> Calibration:
         return calibration
     found: int | NDArray[np.uint16] = 0
     if scan.shape[2:] == calibration.shape:
-        found = find_bad_pixels(scan, most_bytes=2 * MOST_BYTES)
+        found = find_bad_pixels(scan, most_bytes=2 * MOST_BYTES) if bad is None else bad
     data = short_scan_data(
         calibration,
         pooled_opens(scan),

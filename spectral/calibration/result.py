@@ -7,14 +7,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.forward.counting_model import counts_to_bins
 from spectral.forward.node_response import NodeTables, node_tables
 from spectral.forward.pixel_response import (
     PixelDepartures,
     curve_tables,
     departure_names,
-    expected_above,
 )
+from spectral.kernels.node_weights import node_weights
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -209,9 +208,19 @@ class Calibration:
         """
         rate = self.photons_per_mas * current_ma * output
         tables = curve_tables(self.model, areal_density, rate)
-        above, _ = expected_above(tables, self.levels_kev, self.pixels(flat))
+        kinds = [tables.curve, tables.by_rate, tables.by_variance, tables.by_dead_time]
+        bins = self.levels_kev.size
+        found = np.empty((flat.size, bins, areal_density.shape[0]))
+        node_weights(
+            np.ascontiguousarray([[kind.T for kind in kinds]] * bins),
+            self.levels_kev,
+            tables.step_kev,
+            self.pixels(flat).values,
+            1.0,
+            found,
+        )
         factor = np.exp(self.residual.log_factor(areal_density, current_ma))
-        return counts_to_bins(above) * factor
+        return np.asarray(found.transpose(0, 2, 1) * factor)
 
     def nodes(self, current_ma: float, output: float = 1.0) -> NodeTables:
         """Node tables at one tube current and relative output of the tube."""

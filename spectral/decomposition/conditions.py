@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.decomposition.responses import BLOCK, Responses, responses
+from spectral.decomposition.responses import Responses, responses
 from spectral.decomposition.start_values import StartRegression
 from spectral.forward.node_response import pixel_weights
 
@@ -133,11 +133,8 @@ class ConditionsStore:
         """Counts per second above the lowest threshold at the highest current."""
         nothing = np.zeros((1, self._calibration.largest.size))
         current = np.array([self._calibration.largest_current_ma])
-        found = [
-            self._calibration.expected_bins(nothing, current, np.ones(1), part)
-            for part in np.split(flat, range(BLOCK, flat.size, BLOCK))
-        ]
-        return np.asarray(np.concatenate(found)[:, 0].sum(axis=1))
+        found = self._calibration.expected_bins(nothing, current, np.ones(1), flat)
+        return np.asarray(found[:, 0].sum(axis=1))
 
 
 def _steps(current_ma: float, output: float) -> tuple[int, int, int]:

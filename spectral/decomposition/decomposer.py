@@ -109,7 +109,7 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
         self.calibration_ = self.calibration
         follow = self.follow_pixels and scan.exposures("open").size > 0
         if follow and not scan_differs(self.calibration, scan):
-            self.calibration_ = updated_by_opens(self.calibration, scan)
+            self.calibration_ = updated_by_opens(self.calibration, scan, bad=self.bad_)
         self.flat_ = np.flatnonzero(self.usable_.ravel())
         self.session_: Session = normalise(self.calibration_, scan, self.usable_)
         self.current_ = current_of(scan, self.calibration_)

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from spectral.calibration.pooled_counts import pooled_at
 from spectral.forward.counting_model import counts_to_bins
 
 if TYPE_CHECKING:
@@ -15,8 +16,8 @@ if TYPE_CHECKING:
     from spectral.calibration.result import Calibration
     from spectral.scans.scan import Scan
 
-
-BLOCK = 8192
+LEAST_RISE = 0.3
+"""Of counts with the output, as a power, that a step reckons with."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -128,18 +129,20 @@ def _met_by(
 ) -> tuple[float, NDArray[np.float64]]:
     """Output at which the pixels' open counts are met, and their sum by bin."""
     nothing = np.zeros((1, calibration.largest.size))
+    current, time_s = np.array([current_ma]), np.array([count_time_s])
     output = start
     expected = np.ones(1)
     for _ in range(6):
-        at = np.array([current_ma]), np.array([output])
-        expected = np.zeros(calibration.levels_kev.size)
-        for part in np.split(flat, range(BLOCK, flat.size, BLOCK)):
-            rate = calibration.expected_bins(nothing, *at, part)
-            expected += rate.sum(axis=(0, 1)) * count_time_s
-        change = counts / expected.sum()
-        if abs(change - 1.0) < 1e-7:
+        found, slope = pooled_at(
+            calibration, nothing, current, time_s, np.array([output]), flat
+        )
+        expected = found[0]
+        total = expected.sum()
+        if abs(counts / total - 1.0) < 1e-7:
             break
-        output *= change
+        # pile-up flattens the rise, and beyond its top no step would lead back
+        rise = max(slope[0, :, 0].sum(), LEAST_RISE * total)
+        output *= float(np.exp((counts - total) / rise))
     return output, expected
 
 

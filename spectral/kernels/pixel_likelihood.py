@@ -157,3 +157,49 @@ def summarise(
             for j in range(i):
                 info[i, j] = info[j, i]
         deviance[p] = total_deviance / (exposures * bins)
+
+
+@njit(nogil=True, cache=True, error_model="numpy")
+def add_expected(
+    curve: Array,
+    by_rate: Array,
+    by_variance: Array,
+    by_dead: Array,
+    levels: Array,
+    step: float,
+    values: Array,
+    time: Array,
+    total_expected: Array,
+) -> None:
+    """Add up the expected counts of `summarise`, bit by bit, and nothing else."""
+    pixels = values.shape[0]
+    exposures, bins = total_expected.shape
+    size = bins + 3
+    grid = curve.shape[1]
+    value = np.empty((bins, 4))
+    slope = np.empty(4)
+    first = np.empty(bins, np.int64)
+    for p in range(pixels):
+        ln_area = values[p, 0]
+        area = math.exp(ln_area)
+        variance = values[p, size - 2]
+        ln_dead = values[p, size - 1]
+        for k in range(bins):
+            first[k] = cubic_weights(
+                levels[k] + values[p, 1 + k], step, grid, value[k], slope
+            )
+        for e in range(exposures):
+            scale = area * time[e]
+            higher = 0.0
+            for k in range(bins - 1, -1, -1):
+                c = r = v = d = 0.0
+                for q in range(4):
+                    g = first[k] + q
+                    w = value[k, q]
+                    c += w * curve[e, g]
+                    r += w * by_rate[e, g]
+                    v += w * by_variance[e, g]
+                    d += w * by_dead[e, g]
+                above = scale * (c + ln_area * r + variance * v + ln_dead * d)
+                total_expected[e, k] += max(above - higher, LEAST)
+                higher = above

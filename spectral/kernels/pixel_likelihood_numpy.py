@@ -102,3 +102,27 @@ def summarise(
     total = 2.0 * (logs - left).sum(axis=(1, 2))
     total += (boost * left.sum(axis=2) ** 2).sum(axis=1)
     deviance[...] = total / (exposures * bins)
+
+
+def add_expected(
+    curve: Array,
+    by_rate: Array,
+    by_variance: Array,
+    by_dead: Array,
+    levels: Array,
+    step: float,
+    values: Array,
+    time: Array,
+    total_expected: Array,
+) -> None:
+    """Add the same sums as the compiled function, for a few pixels at a time."""
+    first, value, _ = cubic_weights(levels + values[:, 1:-2], step, curve.shape[1])
+
+    def read(of: Array) -> Array:
+        return np.asarray(sum(of[:, first + q] * value[q] for q in range(4)))
+
+    mixed = read(curve) + values[:, :1] * read(by_rate)
+    mixed += values[:, -2:-1] * read(by_variance) + values[:, -1:] * read(by_dead)
+    above = np.exp(values[:, :1]) * time[:, None, None] * mixed
+    bins = -np.diff(above, axis=2, append=0.0)
+    total_expected += np.maximum(bins, LEAST).sum(axis=1)

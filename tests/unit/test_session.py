@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Protocol
 import numpy as np
 import pytest
 
+from spectral.decomposition.decomposer import MaterialDecomposer
 from spectral.decomposition.session import current_of, normalise
 from spectral.scans.scan import CountsInMemory, Scan
 
@@ -180,3 +181,21 @@ def test_output_is_as_good_as_the_counts(
     # pile-up hides part of a change of the output: its error is a little larger
     assert abs(np.mean(pulls)) < 5.0 / np.sqrt(40) * 1.3
     assert 0.75 < np.std(pulls) < 1.6
+
+
+def test_bad_pixels_are_looked_for_once(
+    calibration: Calibration,
+    make_series: Callable[..., Scan],
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    looked: list[Scan] = []
+
+    def found(scan: Scan, **_: int) -> np.ndarray:
+        looked.append(scan)
+        return np.zeros(PIXELS, np.uint16)
+
+    for module in ("decomposition.decomposer", "calibration.refresh"):
+        monkeypatch.setattr(f"spectral.{module}.find_bad_pixels", found)
+    decomposer = MaterialDecomposer(calibration).fit(make_series(calibration, 1))
+    assert decomposer.calibration_ is not calibration
+    assert len(looked) == 1
