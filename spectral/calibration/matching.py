@@ -35,13 +35,23 @@ class _Setting(Protocol):
     def voltage_kv(self) -> float: ...
 
 
-def scan_differs(calibration: Calibration, scan: Scan) -> str:
-    """What keeps a scan from a calibration's setting, in words; "" if nothing."""
+def scan_differs(calibration: Calibration, scan: Scan, *, layers: bool = True) -> str:
+    """What keeps a scan from a calibration's setting, in words; "" if nothing.
+
+    Parameters
+    ----------
+    calibration : Calibration
+    scan : Scan
+    layers : bool
+        Whether the scan's layers are looked at, and so must be of the same materials.
+    """
     rows, columns = scan.shape[2:]
     return (
         _pixels_differ((rows, columns), calibration.shape)
         or _setting_differs(scan, calibration)
+        or (_materials_differ(scan, calibration) if layers else "")
         or _filters_differ(_filters(scan), calibration.filters)
+        or _beam_differs(calibration, scan)
     )
 
 
@@ -50,11 +60,12 @@ def calibrations_differ(new: Calibration, old: Calibration) -> str:
     return (
         _pixels_differ(new.shape, old.shape)
         or _setting_differs(new, old)
+        or _materials_differ(new, old)
         or _filters_differ(new.filters, old.filters)
     )
 
 
-def beam_differs(calibration: Calibration, scan: Scan) -> str:
+def _beam_differs(calibration: Calibration, scan: Scan) -> str:
     """What of tube, sensor and currents cannot be the calibration's; "" if nothing.
 
     Parameters
@@ -109,9 +120,14 @@ def _setting_differs(one: _Setting, other: _Setting) -> str:
         return f"has thresholds at {_energies(first)} and not at {_energies(second)}"
     if abs(one.voltage_kv - other.voltage_kv) > VOLTAGE_TOLERANCE_KV:
         return f"was taken at {one.voltage_kv:g} kV and not at {other.voltage_kv:g} kV"
-    if not _same_materials(one.materials, other.materials):
-        return f"is of {_names(one.materials)} and not of {_names(other.materials)}"
     return ""
+
+
+def _materials_differ(one: _Setting, other: _Setting) -> str:
+    if _same_materials(one.materials, other.materials):
+        return ""
+    named = _names(one.materials) or "no material"
+    return f"is of {named} and not of {_names(other.materials)}"
 
 
 def _same_materials(one: tuple[Layer, ...], other: tuple[Layer, ...]) -> bool:

@@ -153,13 +153,19 @@ def updated_by_opens(
         found = find_bad_pixels(scan, most_bytes=2 * MOST_BYTES) if bad is None else bad
     data = short_scan_data(
         calibration,
-        pooled_opens(scan),
+        _without_layers(pooled_opens(scan), calibration),
         calibration.good & (found == 0),
         roles=("open",),
     )
     with told_of(scan):
         output = common_drift(calibration, data, shift_prior_kev=1e-6).output
     return _with_departures(calibration, data, pixel_drift(calibration, data, output))
+
+
+def _without_layers(scan: Scan, calibration: Calibration) -> Scan:
+    """The scan told as of the calibration's materials: its opens hold none of any."""
+    nothing = np.zeros((scan.shape[0], len(calibration.materials)))
+    return replace(scan, materials=calibration.materials, thickness_mm=nothing)
 
 
 def _misfits(deviance: NDArray[np.float64], data: WedgeData) -> NDArray[np.bool_]:

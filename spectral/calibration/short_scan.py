@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.calibration.matching import beam_differs, scan_differs
+from spectral.calibration.matching import scan_differs
 from spectral.calibration.wedge_data import WedgeData
 from spectral.errors import ScanError
 from spectral.scans.bad_pixels import commonest_reason, find_bad_pixels
@@ -42,9 +42,12 @@ def short_scan_data(
         If the scan is of another setting, holds no open exposure or no usable
         pixel, or does not say how thick a step is.
     """
-    differs = scan_differs(calibration, scan) or beam_differs(calibration, scan)
+    differs = scan_differs(calibration, scan)
     if differs:
-        msg = f"{scan.source} {differs}, as the calibration has; scan at its setting"
+        msg = (
+            f"{scan.source} does not go with the calibration: it {differs}; scan at the "
+            "calibration's setting"
+        )
         raise ScanError(msg)
     if scan.exposures("open").size == 0:
         msg = f"{scan.source}: no open exposure; add at least one without a step"

@@ -8,7 +8,6 @@ from typing import TYPE_CHECKING
 import numpy as np
 from sklearn.base import BaseEstimator, TransformerMixin
 
-from spectral.calibration.matching import scan_differs
 from spectral.calibration.refresh import updated_by_opens
 from spectral.decomposition.block_maps import BlockMaps, joined, unpacked
 from spectral.decomposition.conditions import Conditions, ConditionsStore
@@ -108,7 +107,7 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
             raise ScanError(f"{msg}; of most in the scan, {reason}" if reason else msg)
         self.calibration_ = self.calibration
         follow = self.follow_pixels and scan.exposures("open").size > 0
-        if follow and not scan_differs(self.calibration, scan):
+        if follow:
             self.calibration_ = updated_by_opens(self.calibration, scan, bad=self.bad_)
         self.flat_ = np.flatnonzero(self.usable_.ravel())
         self.session_: Session = normalise(self.calibration_, scan, self.usable_)

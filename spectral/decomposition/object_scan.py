@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.calibration.matching import beam_differs
+from spectral.calibration.matching import scan_differs
 from spectral.errors import InputError, ScanError
 
 if TYPE_CHECKING:
@@ -16,8 +16,6 @@ if TYPE_CHECKING:
 
     from spectral.calibration.result import Calibration
     from spectral.scans.scan import Scan
-
-THRESHOLD_TOLERANCE_KEV = 0.01
 
 
 def chosen_exposures(scan: Scan, exposures: Sequence[int] | None) -> NDArray[np.int64]:
@@ -64,31 +62,10 @@ def check_match(calibration: Calibration, scan: Scan) -> None:
     ScanError
         Saying what differs.
     """
-    _, thresholds, y, x = scan.shape
-    wanted = calibration.thresholds_kev
-    differs = ""
-    if (y, x) != calibration.shape:
-        differs = f"has {y} x {x} pixels, the calibration {calibration.shape}"
-    elif thresholds != wanted.size:
-        differs = f"has {thresholds} thresholds, the calibration {wanted.size}"
-    elif np.abs(scan.thresholds_kev - wanted).max() > THRESHOLD_TOLERANCE_KEV:
-        differs = (
-            f"has thresholds at {scan.thresholds_kev.tolist()} keV, the calibration at "
-            f"{wanted.tolist()} keV"
-        )
-    elif abs(scan.voltage_kv - calibration.voltage_kv) > 0.1:
-        differs = (
-            f"was taken at {scan.voltage_kv:g} kV, the calibration at "
-            f"{calibration.voltage_kv:g} kV"
-        )
-    elif scan.filters and calibration.filters:
-        filters = tuple(f"{f.material} {f.thickness_mm:g} mm" for f in scan.filters)
-        if sorted(filters) != sorted(calibration.filters):
-            differs = (
-                f"has the filters {', '.join(filters)}, the calibration "
-                f"{', '.join(calibration.filters)}"
-            )
-    differs = differs or beam_differs(calibration, scan)
+    differs = scan_differs(calibration, scan, layers=False)
     if differs:
-        msg = f"{scan.source} {differs}: use the calibration of this setting"
+        msg = (
+            f"{scan.source} does not go with the calibration: it {differs}; use the "
+            "calibration of its setting"
+        )
         raise ScanError(msg)

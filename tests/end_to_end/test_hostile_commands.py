@@ -170,6 +170,20 @@ WRONG_EXPOSURES = [
 ]
 
 
+def test_an_object_scan_of_another_setting_is_refused(
+    folder: Path, make_calibration: Callable[..., Calibration]
+) -> None:
+    write_calibration(make_calibration((6, 9)), folder / "wide.h5")
+    before = held(folder)
+    files = folder / "wide.h5", folder / "object.h5"
+    done = command("decompose", *files, "-o", folder / "out.h5")
+    assert done.exit_code == 1
+    text = "it has 6 x 8 pixels and not 6 x 9; use the calibration of its setting"
+    wanted = f"{files[1]} does not go with the calibration: {text}"
+    assert wanted in sentence(done)
+    assert held(folder) == before
+
+
 @pytest.mark.parametrize(("numbers", "text"), WRONG_EXPOSURES)
 def test_exposures_that_cannot_be_are_wrong_use(
     folder: Path, numbers: tuple[int, ...], text: str

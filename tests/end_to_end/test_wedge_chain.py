@@ -281,7 +281,7 @@ def test_scan_of_another_setting_is_refused(
     bench: Bench, calibration: Calibration
 ) -> None:
     decomposer = MaterialDecomposer(calibration)
-    with pytest.raises(ScanError, match="was taken at 80 kV, the calibration at 90 kV"):
+    with pytest.raises(ScanError, match="was taken at 80 kV and not at 90 kV; use"):
         decomposer.decompose(replace(bench.object, voltage_kv=80.0))
     moved = replace(bench.object, thresholds_kev=bench.object.thresholds_kev + 1.0)
     with pytest.raises(ScanError, match="has thresholds at"):

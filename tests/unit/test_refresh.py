@@ -387,6 +387,9 @@ def test_opens_of_an_object_scan_make_pixels_better_known() -> None:
     assert after < before
     objects = replace(scan, role=("object",) * 6)
     assert updated_by_opens(OLD, objects) is OLD
+    unnamed = replace(scan, materials=(), thickness_mm=np.zeros((6, 0)))
+    same = updated_by_opens(OLD, unnamed)
+    np.testing.assert_array_equal(same.departures, better.departures)
 
 
 def test_scans_of_another_setting_are_refused() -> None:
