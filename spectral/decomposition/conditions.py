@@ -18,6 +18,8 @@ if TYPE_CHECKING:
     from spectral.calibration.result import Calibration
     from spectral.forward.node_response import NodeTables
 
+    Precision = type[np.float32 | np.float64]
+
 CURRENT_STEP = 1e-3
 """Steps of ln(current) within which exposures share what depends on current alone."""
 OUTPUT_STEP = 2e-4
@@ -27,6 +29,8 @@ TABLE_STEP = 0.05
 KEPT = 2
 """Sets of weights held at once: each is the largest array of a decomposition."""
 KEPT_TABLES = 24
+SINGLE_ERROR = 3e-3
+"""Standard errors of a bin's open counts that the rounding of weights may cost."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -65,7 +69,8 @@ class ConditionsStore:
         self._threads = threads
         self._nodes: OrderedDict[tuple[int, int], NodeTables] = OrderedDict()
         self._held: OrderedDict[tuple[float, ...], Conditions] = OrderedDict()
-        self._starts: dict[tuple[int, int, float], StartRegression] = {}
+        self._starts: dict[tuple[int, int, float], tuple[StartRegression, Precision]]
+        self._starts = {}
         self._highest: dict[tuple[int, int], NDArray[np.float64]] = {}
 
     def tables(self, current_ma: float, output: float) -> tuple[NodeTables, float]:
@@ -109,9 +114,12 @@ class ConditionsStore:
         if regression not in self._starts:
             if len(self._starts) >= KEPT_TABLES:
                 self._starts.clear()
-            self._starts[regression] = start_regression(
-                self._calibration, tables, count_time_s
+            average = average_weight(self._calibration, tables, count_time_s)
+            self._starts[regression] = (
+                start_regression(self._calibration, tables, average),
+                precision_for(average),
             )
+        start, precision = self._starts[regression]
         made = Conditions(
             tables=tables,
             output=fine,
@@ -122,8 +130,9 @@ class ConditionsStore:
                 count_time_s=count_time_s,
                 output=fine,
                 threads=self._threads,
+                precision=precision,
             ),
-            start=self._starts[regression],
+            start=start,
             rate_limit=self._highest[ends] * count_time_s,
         )
         self._held[key] = made
@@ -145,15 +154,35 @@ def _steps(current_ma: float, output: float) -> tuple[int, int, int]:
     return current, step, round(step * OUTPUT_STEP / TABLE_STEP)
 
 
-def start_regression(
+def average_weight(
     calibration: Calibration, tables: NodeTables, count_time_s: float
-) -> StartRegression:
-    """Start values from the average pixel, the same whatever pixels are solved."""
+) -> NDArray[np.float64]:
+    """Weights of the average pixel, shape (bin, node), in counts."""
     weight, _ = pixel_weights(
         tables, calibration.levels_kev, calibration.average_pixel()
     )
-    return StartRegression.fit(
-        count_time_s * weight[0], tables.attenuation, _grid(calibration.largest)
+    return np.asarray(count_time_s * weight[0])
+
+
+def start_regression(
+    calibration: Calibration, tables: NodeTables, average: NDArray[np.float64]
+) -> StartRegression:
+    """Start values from the average pixel, the same whatever pixels are solved."""
+    return StartRegression.fit(average, tables.attenuation, _grid(calibration.largest))
+
+
+def precision_for(average: NDArray[np.float64]) -> Precision:
+    """Single precision, unless its rounding would show in the counts of a bin.
+
+    Parameters
+    ----------
+    average : array, shape (bin, node), in counts
+        Weights of alternating signs lose more than the digits of their sum.
+    """
+    counts = np.maximum(average.sum(axis=1), 1.0)
+    rounding = 0.5 * np.finfo(np.float32).eps * np.abs(average).sum(axis=1)
+    return (
+        np.float32 if (rounding / np.sqrt(counts)).max() < SINGLE_ERROR else np.float64
     )
 
 

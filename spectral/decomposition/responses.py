@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -30,7 +30,7 @@ class Responses:
     ----------
     flat : array of int64, shape (pixel,)
         Flat indices of the pixels.
-    weight : array, shape (pixel, bin, node)
+    weight : array of float64 or float32, shape (pixel, bin, node)
         Counts of each node without an object.
     attenuation : array, shape (node, material), in cm2/g
     lost_fraction : float
@@ -40,7 +40,7 @@ class Responses:
     """
 
     flat: NDArray[np.int64]
-    weight: NDArray[np.float64]
+    weight: NDArray[np.float64] | NDArray[np.float32]
     attenuation: NDArray[np.float64]
     lost_fraction: float
     node_error: float
@@ -65,6 +65,7 @@ def responses(
     count_time_s: float,
     output: float = 1.0,
     threads: int = 1,
+    precision: type[np.float32 | np.float64] = np.float64,
 ) -> Responses:
     """Node weights of pixels, from node tables near the exposure's photon rate.
 
@@ -78,9 +79,12 @@ def responses(
     output : float
         Photon rate over the tables' own; within a few percent of 1.
     threads : int
+    precision : type
+        Of the weights, and with them of the solver's arithmetic.
     """
     levels = calibration.levels_kev
-    weight = np.empty((flat.size, levels.size, tables.attenuation.shape[0]))
+    shape = flat.size, levels.size, tables.attenuation.shape[0]
+    weight: Any = np.empty(shape, precision)
     table = stacked(tables)
 
     def block(first: int) -> None:

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
 
     Array = NDArray[np.float64]
     Single = NDArray[np.float32]
+    Weight = NDArray[np.float64] | NDArray[np.float32]
 
 
 # Sums may be taken in any order here, so that one instruction serves several nodes.
@@ -71,7 +72,7 @@ def _read(
 @njit(nogil=True, cache=True, error_model="numpy", fastmath=ANY_ORDER)
 def _expect(
     p: int,
-    weight: Array,
+    weight: Weight,
     attenuation: Array,
     passed: Array,
     counts: Array,
@@ -152,7 +153,7 @@ def shifts(
     attenuation: Array,
     departures: Array,
     spread: NDArray[np.float32],
-    weight: Array,
+    weight: Weight,
     estimate: Array,
     covariance: Array,
     lost: float,

@@ -103,7 +103,7 @@ def compiled(scene: Scene, **options: object) -> Method:
     """Our kernel."""
     start = StartRegression.fit(scene.weight[:2000], scene.attenuation)
     shared = bool(options.pop("shared", False))
-    kind = np.float32 if options.pop("single", False) else np.float64
+    kind = np.float64 if options.pop("double", False) else np.float32
     weight = scene.weight.mean(axis=0, keepdims=True) if shared else scene.weight
     weight = np.ascontiguousarray(weight, kind)
 
@@ -245,7 +245,7 @@ def methods(scene: Scene, pixels: int) -> list[tuple[str, Method, int, bool]]:
             pixels,
             False,
         ),
-        ("  single-precision weights", compiled(scene, single=True), pixels, False),
+        ("  in double precision", compiled(scene, double=True), pixels, False),
         ("  one shared weight", compiled(scene, shared=True), pixels, False),
         ("  two threads (wall time)", compiled(scene, threads=2), pixels, True),
         ("NumPy Fisher scoring", vectorised(scene), pixels // 4, False),

@@ -7,7 +7,11 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pytest
 
-from spectral.decomposition.conditions import KEPT_TABLES, ConditionsStore
+from spectral.decomposition.conditions import (
+    KEPT_TABLES,
+    ConditionsStore,
+    precision_for,
+)
 from spectral.decomposition.responses import BLOCK, responses
 from spectral.forward.node_response import pixel_weights
 
@@ -47,6 +51,20 @@ def test_conditions_do_not_depend_on_what_came_before(
     np.testing.assert_array_equal(first.responses.weight, second.responses.weight)
     np.testing.assert_array_equal(first.start.coefficients, second.start.coefficients)
     np.testing.assert_array_equal(first.rate_limit, second.rate_limit)
+
+
+def test_single_precision_serves_until_rounding_would_show(
+    make_calibration: Callable[..., Calibration],
+) -> None:
+    smooth = np.full((4, 16), 1e3)
+    assert precision_for(smooth) is np.float32
+    # half a unit in the last of 24 binary digits: 6e-8 of 1e12 is 0.06 of its root
+    assert precision_for(6e7 * smooth) is np.float64
+    rough = smooth + 1e7 * np.resize([1.0, -1.0], 16)
+    np.testing.assert_allclose(rough.sum(axis=1), smooth.sum(axis=1))
+    assert precision_for(rough) is np.float64
+    made = ConditionsStore(make_calibration()).at(3.0, 1.0, 0.1, np.arange(48))
+    assert made.responses.weight.dtype == np.float32
 
 
 def test_current_read_back_with_noise_needs_few_tables(
