@@ -164,7 +164,9 @@ def make_scan() -> MakeScan:
     return make
 
 
-def _counting_model() -> CountingModel:
+def _counting_model(
+    dead_time_ns: float = 150.0, tail_ns: float = 30.0
+) -> CountingModel:
     """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
     energy = np.arange(12.0, 91.0, 2.0)
     materials = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
@@ -182,8 +184,14 @@ def _counting_model() -> CountingModel:
         heights=heights,
         step_kev=0.5,
         noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=150.0, tail_ns=30.0),
+        shape=PulseShape(dead_time_ns=dead_time_ns, tail_ns=tail_ns),
     )
+
+
+@pytest.fixture(scope="session")
+def counting_model() -> CountingModel:
+    """A made-up average pixel."""
+    return _counting_model()
 
 
 def made_up_calibration(pixels: tuple[int, int] = (6, 8)) -> Calibration:

@@ -11,36 +11,10 @@ from hypothesis import strategies as st
 from hypothesis.extra.numpy import arrays
 
 from spectral.forward.counting_model import CountingModel, counts_to_bins
-from spectral.physics.materials import find_material
-from spectral.physics.pileup import PulseShape
 
 pytestmark = pytest.mark.property
 
-MATERIALS = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
 
-
-def counting_model(dead_time_ns: float = 150.0) -> CountingModel:
-    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
-    energy = np.arange(12.0, 91.0, 2.0)
-    spectrum = (energy - 8.0) * (92.0 - energy)
-    spectrum *= np.exp(-0.7 * MATERIALS[1].mass_attenuation(energy))
-    level = 0.5 * np.arange(316)
-    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
-    tail = (level > 4.0) & (level < energy[:, None])
-    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
-    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
-    return CountingModel(
-        energy_kev=energy,
-        spectrum=spectrum / spectrum.sum(),
-        attenuation=np.array([m.mass_attenuation(energy) for m in MATERIALS]),
-        heights=heights,
-        step_kev=0.5,
-        noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=dead_time_ns, tail_ns=30.0),
-    )
-
-
-MODEL = counting_model()
 areal_densities = arrays(np.float64, (3, 2), elements=st.floats(0.0, 10.0))
 rates = st.floats(1e2, 3e6)
 counts = arrays(np.float64, (4, 5), elements=st.integers(0, 2**24).map(float))
@@ -61,26 +35,38 @@ def test_bins_do_not_care_where_their_axis_stands(above: np.ndarray) -> None:
 
 
 @given(areal_densities)
-def test_transmission_is_a_share_of_the_open_beam(areal: np.ndarray) -> None:
-    passed = MODEL.transmitted(areal)
+def test_transmission_is_a_share_of_the_open_beam(
+    counting_model: CountingModel, areal: np.ndarray
+) -> None:
+    passed = counting_model.transmitted(areal)
     assert np.all(passed > 0.0)
-    assert np.all(passed <= MODEL.spectrum)
+    assert np.all(passed <= counting_model.spectrum)
 
 
 @given(areal_densities, areal_densities)
-def test_stacking_adds_areal_densities(first: np.ndarray, second: np.ndarray) -> None:
+def test_stacking_adds_areal_densities(
+    counting_model: CountingModel, first: np.ndarray, second: np.ndarray
+) -> None:
     # Beer-Lambert law: transmissions multiply
-    behind = MODEL.transmitted(first) * MODEL.transmitted(second) / MODEL.spectrum
-    np.testing.assert_allclose(MODEL.transmitted(first + second), behind, rtol=1e-10)
+    behind = (
+        counting_model.transmitted(first)
+        * counting_model.transmitted(second)
+        / counting_model.spectrum
+    )
+    np.testing.assert_allclose(
+        counting_model.transmitted(first + second), behind, rtol=1e-10
+    )
 
 
 @settings(deadline=None, max_examples=25)
 @given(areal_densities, rates)
-def test_order_of_materials_does_not_matter(areal: np.ndarray, rate: float) -> None:
-    turned = replace(MODEL, attenuation=MODEL.attenuation[::-1])
+def test_order_of_materials_does_not_matter(
+    counting_model: CountingModel, areal: np.ndarray, rate: float
+) -> None:
+    turned = replace(counting_model, attenuation=counting_model.attenuation[::-1])
     np.testing.assert_allclose(
         turned.counting_curves(areal[:, ::-1], rate),
-        MODEL.counting_curves(areal, rate),
+        counting_model.counting_curves(areal, rate),
         rtol=1e-9,
         atol=1e-9 * rate,
     )
@@ -89,9 +75,9 @@ def test_order_of_materials_does_not_matter(areal: np.ndarray, rate: float) -> N
 @settings(deadline=None, max_examples=25)
 @given(areal_densities, st.floats(1.0, 1e7))
 def test_counts_without_dead_time_follow_rate_and_fall_with_level(
-    areal: np.ndarray, rate: float
+    counting_model: CountingModel, areal: np.ndarray, rate: float
 ) -> None:
-    quick = MODEL.with_dead_time(0.0)
+    quick = counting_model.with_dead_time(0.0)
     one, many = quick.counting_curves(areal, 1.0), quick.counting_curves(areal, rate)
     np.testing.assert_allclose(many, rate * one, rtol=1e-9, atol=1e-9 * rate)
     assert np.all(np.diff(one[:, 20:], axis=1) <= 1e-12)
@@ -99,10 +85,12 @@ def test_counts_without_dead_time_follow_rate_and_fall_with_level(
 
 @settings(deadline=None, max_examples=25)
 @given(areal_densities, rates)
-def test_pile_up_takes_from_low_levels_only(areal: np.ndarray, rate: float) -> None:
+def test_pile_up_takes_from_low_levels_only(
+    counting_model: CountingModel, areal: np.ndarray, rate: float
+) -> None:
     # above the largest single pulse (90 keV and noise) it can only add
-    slow = MODEL.counting_curves(areal, rate)
-    quick = MODEL.with_dead_time(0.0).counting_curves(areal, rate)
+    slow = counting_model.counting_curves(areal, rate)
+    quick = counting_model.with_dead_time(0.0).counting_curves(areal, rate)
     tiny = 1e-9 * rate
     assert np.all(slow[:, 20] <= quick[:, 20] + tiny)
     assert np.all(slow[:, 200:] >= quick[:, 200:] - tiny)
@@ -110,9 +98,13 @@ def test_pile_up_takes_from_low_levels_only(areal: np.ndarray, rate: float) -> N
 
 @settings(deadline=None, max_examples=25)
 @given(arrays(np.float64, (1, 2), elements=st.floats(0.0, 8.0)), st.floats(0.01, 2.0))
-def test_more_material_lets_fewer_photons_count(areal: np.ndarray, more: float) -> None:
-    thin = MODEL.counting_curves(areal, 100.0)
+def test_more_material_lets_fewer_photons_count(
+    counting_model: CountingModel, areal: np.ndarray, more: float
+) -> None:
+    thin = counting_model.counting_curves(areal, 100.0)
     for material in range(2):
         thick = areal.copy()
         thick[:, material] += more
-        assert np.all(MODEL.counting_curves(thick, 100.0)[:, 40:160] < thin[:, 40:160])
+        assert np.all(
+            counting_model.counting_curves(thick, 100.0)[:, 40:160] < thin[:, 40:160]
+        )

@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import TYPE_CHECKING
 
 import numpy as np
 import pytest
 
-from spectral.forward.counting_model import CountingModel
 from spectral.forward.node_response import NodeTables, node_tables, pixel_weights
 from spectral.forward.pixel_response import (
     CurveTables,
@@ -15,35 +15,14 @@ from spectral.forward.pixel_response import (
     curve_tables,
     expected_above,
 )
-from spectral.physics.materials import find_material
-from spectral.physics.pileup import PulseShape
+
+if TYPE_CHECKING:
+    from spectral.forward.counting_model import CountingModel
 
 pytestmark = pytest.mark.reference
 
-MATERIALS = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
 LEVELS_KEV = np.array([20.0, 32.0, 45.0, 60.0])
 LARGEST = np.array([9.0, 3.0])
-
-
-def counting_model(dead_time_ns: float = 150.0) -> CountingModel:
-    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
-    energy = np.arange(12.0, 91.0, 2.0)
-    spectrum = (energy - 8.0) * (92.0 - energy)
-    spectrum *= np.exp(-0.7 * MATERIALS[1].mass_attenuation(energy))
-    level = 0.5 * np.arange(316)
-    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
-    tail = (level > 4.0) & (level < energy[:, None])
-    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
-    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
-    return CountingModel(
-        energy_kev=energy,
-        spectrum=spectrum / spectrum.sum(),
-        attenuation=np.array([m.mass_attenuation(energy) for m in MATERIALS]),
-        heights=heights,
-        step_kev=0.5,
-        noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=dead_time_ns, tail_ns=30.0),
-    )
 
 
 OBJECTS = np.array([[0.0, 0.0], [4.0, 0.5], [8.0, 2.5]])
@@ -53,13 +32,13 @@ STEPS = np.array([1e-4, 1e-3, 1e-3, 1e-3, 1e-3, 1e-3, 1e-4])
 
 
 @pytest.fixture(scope="module")
-def tables() -> CurveTables:
-    return curve_tables(counting_model(), OBJECTS, RATE)
+def tables(counting_model: CountingModel) -> CurveTables:
+    return curve_tables(counting_model, OBJECTS, RATE)
 
 
 @pytest.fixture(scope="module")
-def nodes() -> NodeTables:
-    return node_tables(counting_model(), LEVELS_KEV, LARGEST, RATE)
+def nodes(counting_model: CountingModel) -> NodeTables:
+    return node_tables(counting_model, LEVELS_KEV, LARGEST, RATE)
 
 
 @pytest.fixture
@@ -114,9 +93,11 @@ def relative(found: np.ndarray, truth: np.ndarray, scale: np.ndarray) -> float:
     return float((np.abs(found - truth) / scale)[:, part].max())
 
 
-def test_changes_of_the_curve_are_those_of_the_model(tables: CurveTables) -> None:
+def test_changes_of_the_curve_are_those_of_the_model(
+    counting_model: CountingModel, tables: CurveTables
+) -> None:
     # every change of the average pixel's curve, against the whole model computed anew
-    model = counting_model()
+    model = counting_model
     step = 0.01
 
     def curve(of: CountingModel, rate: float = RATE) -> np.ndarray:
@@ -142,10 +123,10 @@ def test_changes_of_the_curve_are_those_of_the_model(tables: CurveTables) -> Non
     ("parameter", "size"), [(0, 0.03), (2, 0.7), (5, 0.8), (6, 0.06)], ids=str
 )
 def test_a_departing_pixel_counts_as_the_model_computed_for_it(
-    tables: CurveTables, parameter: int, size: float
+    counting_model: CountingModel, tables: CurveTables, parameter: int, size: float
 ) -> None:
     # first order in all but the thresholds: usual departures leave less than 0.1 %
-    model = counting_model()
+    model = counting_model
     rate = RATE
     levels = LEVELS_KEV.copy()
     if parameter == 0:

@@ -21,45 +21,23 @@ from spectral.forward.pixel_response import (
     curve_tables,
     expected_above,
 )
-from spectral.physics.materials import find_material
-from spectral.physics.pileup import PulseShape
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
 
-MATERIALS = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
 LEVELS_KEV = np.array([20.0, 32.0, 45.0, 60.0])
 LARGEST = np.array([9.0, 3.0])
-
-
-def counting_model(dead_time_ns: float = 150.0) -> CountingModel:
-    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
-    energy = np.arange(12.0, 91.0, 2.0)
-    spectrum = (energy - 8.0) * (92.0 - energy)
-    spectrum *= np.exp(-0.7 * MATERIALS[1].mass_attenuation(energy))
-    level = 0.5 * np.arange(316)
-    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
-    tail = (level > 4.0) & (level < energy[:, None])
-    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
-    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
-    return CountingModel(
-        energy_kev=energy,
-        spectrum=spectrum / spectrum.sum(),
-        attenuation=np.array([m.mass_attenuation(energy) for m in MATERIALS]),
-        heights=heights,
-        step_kev=0.5,
-        noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=dead_time_ns, tail_ns=30.0),
-    )
 
 
 RATES = {"no pile-up": 1e3, "some": 3e5, "strong": 2e6}
 
 
 @pytest.fixture(scope="module", params=RATES)
-def tables(request: pytest.FixtureRequest) -> tuple[float, NodeTables]:
+def tables(
+    counting_model: CountingModel, request: pytest.FixtureRequest
+) -> tuple[float, NodeTables]:
     rate = RATES[request.param]
-    return rate, node_tables(counting_model(), LEVELS_KEV, LARGEST, rate)
+    return rate, node_tables(counting_model, LEVELS_KEV, LARGEST, rate)
 
 
 def average(count: int = 1) -> PixelDepartures:
@@ -72,33 +50,39 @@ def by_nodes(tables: NodeTables, areal: NDArray[np.float64]) -> NDArray[np.float
     return np.asarray(np.exp(-areal @ tables.attenuation.T) @ weight[0].T)
 
 
-def by_model(rate: float, areal: NDArray[np.float64]) -> NDArray[np.float64]:
+def by_model(
+    counting_model: CountingModel, rate: float, areal: NDArray[np.float64]
+) -> NDArray[np.float64]:
     above, _ = expected_above(
-        curve_tables(counting_model(), areal, rate), LEVELS_KEV, average()
+        curve_tables(counting_model, areal, rate), LEVELS_KEV, average()
     )
     return np.asarray(counts_to_bins(above[0]))
 
 
 def test_error_at_fresh_points_is_within_the_promise(
+    counting_model: CountingModel,
     tables: tuple[float, NodeTables],
 ) -> None:
     rate, reduced = tables
     fresh = np.random.default_rng(99).uniform(0.0, 1.0, (400, 2)) * LARGEST
-    found, truth = by_nodes(reduced, fresh), by_model(rate, fresh)
+    found, truth = by_nodes(reduced, fresh), by_model(counting_model, rate, fresh)
     # 1e-4: twice the tolerance, for points that nobody chose nodes or count by
     assert np.abs(found / truth - 1.0).max() < 1e-4
     assert reduced.error < 1e-4
 
 
-def test_few_nodes_do_without_pile_up_and_more_are_taken_with_it() -> None:
-    still = node_tables(counting_model(), LEVELS_KEV, LARGEST, 1e3)
-    busy = node_tables(counting_model(), LEVELS_KEV, LARGEST, 2e6)
+def test_few_nodes_do_without_pile_up_and_more_are_taken_with_it(
+    counting_model: CountingModel,
+) -> None:
+    still = node_tables(counting_model, LEVELS_KEV, LARGEST, 1e3)
+    busy = node_tables(counting_model, LEVELS_KEV, LARGEST, 2e6)
     assert still.attenuation.shape[0] <= 12
     assert busy.attenuation.shape[0] > still.attenuation.shape[0]
     assert len(busy.by_bin) == LEVELS_KEV.size
 
 
 def test_counts_beyond_the_domain_stay_positive_and_near(
+    counting_model: CountingModel,
     tables: tuple[float, NodeTables],
 ) -> None:
     # the solver steps there: no count may turn negative or run away. Towards more
@@ -110,15 +94,16 @@ def test_counts_beyond_the_domain_stay_positive_and_near(
     )
     found, truth = (
         by_nodes(reduced, outside * LARGEST),
-        by_model(rate, outside * LARGEST),
+        by_model(counting_model, rate, outside * LARGEST),
     )
     np.testing.assert_allclose(found, truth, rtol=0.02)
     far = np.array([[3.0, 0.0], [0.0, 3.0], [2.0, 2.0], [3.0, 3.0]]) * LARGEST
-    ratio = by_nodes(reduced, far) / by_model(rate, far)
+    ratio = by_nodes(reduced, far) / by_model(counting_model, rate, far)
     np.testing.assert_allclose(ratio, 1.0, atol=0.2)
 
 
 def test_every_pixels_own_response_is_met_by_the_nodes(
+    counting_model: CountingModel,
     tables: tuple[float, NodeTables],
 ) -> None:
     rate, reduced = tables
@@ -127,7 +112,7 @@ def test_every_pixels_own_response_is_met_by_the_nodes(
     pixels = PixelDepartures(values=rng.normal(0.0, 1.0, (20, 7)) * scale)
     areal = rng.uniform(0.0, 1.0, (30, 2)) * LARGEST
     above, _ = expected_above(
-        curve_tables(counting_model(), areal, rate), LEVELS_KEV, pixels
+        curve_tables(counting_model, areal, rate), LEVELS_KEV, pixels
     )
     weight, _ = pixel_weights(reduced, LEVELS_KEV, pixels)
     found = np.einsum("pbn,cn->pcb", weight, np.exp(-areal @ reduced.attenuation.T))
@@ -135,22 +120,22 @@ def test_every_pixels_own_response_is_met_by_the_nodes(
     np.testing.assert_allclose(found, counts_to_bins(above), rtol=3e-4)
 
 
-def test_residual_factor_reaches_the_nodes() -> None:
+def test_residual_factor_reaches_the_nodes(counting_model: CountingModel) -> None:
     def factor(areal: NDArray[np.float64]) -> NDArray[np.float64]:
         bend = 0.01 * np.exp(-areal[:, :1] / 5.0)
         return np.asarray(bend * np.array([1.0, -1.0, 0.5, 0.0]))
 
     rate = 3e5
     with_factor = node_tables(
-        counting_model(), LEVELS_KEV, LARGEST, rate, log_factor=factor
+        counting_model, LEVELS_KEV, LARGEST, rate, log_factor=factor
     )
     areal = np.random.default_rng(5).uniform(0.0, 1.0, (50, 2)) * LARGEST
-    expected = by_model(rate, areal) * np.exp(factor(areal))
+    expected = by_model(counting_model, rate, areal) * np.exp(factor(areal))
     np.testing.assert_allclose(by_nodes(with_factor, areal), expected, rtol=2e-4)
 
 
-def test_loose_tolerance_takes_fewer_nodes() -> None:
-    loose = node_tables(counting_model(), LEVELS_KEV, LARGEST, 2e6, tolerance=0.05)
+def test_loose_tolerance_takes_fewer_nodes(counting_model: CountingModel) -> None:
+    loose = node_tables(counting_model, LEVELS_KEV, LARGEST, 2e6, tolerance=0.05)
     assert loose.attenuation.shape[0] == 8
     assert loose.error < 0.05
 

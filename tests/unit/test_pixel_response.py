@@ -18,31 +18,6 @@ from spectral.forward.pixel_response import (
     expected_above,
     read_pixels,
 )
-from spectral.physics.materials import find_material
-from spectral.physics.pileup import PulseShape
-
-MATERIALS = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
-
-
-def counting_model(dead_time_ns: float = 150.0) -> CountingModel:
-    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
-    energy = np.arange(12.0, 91.0, 2.0)
-    spectrum = (energy - 8.0) * (92.0 - energy)
-    spectrum *= np.exp(-0.7 * MATERIALS[1].mass_attenuation(energy))
-    level = 0.5 * np.arange(316)
-    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
-    tail = (level > 4.0) & (level < energy[:, None])
-    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
-    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
-    return CountingModel(
-        energy_kev=energy,
-        spectrum=spectrum / spectrum.sum(),
-        attenuation=np.array([m.mass_attenuation(energy) for m in MATERIALS]),
-        heights=heights,
-        step_kev=0.5,
-        noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=dead_time_ns, tail_ns=30.0),
-    )
 
 
 def cubic(level: np.ndarray) -> np.ndarray:
@@ -151,12 +126,14 @@ def test_scaled_tables_scale_every_curve() -> None:
         np.testing.assert_allclose(ratio[:, 0], [2.0, 3.0])
 
 
-def test_wrong_number_of_materials_is_refused() -> None:
+def test_wrong_number_of_materials_is_refused(counting_model: CountingModel) -> None:
     with pytest.raises(InputError, match="has 3 materials, the model has 2"):
-        counting_model().transmitted(np.zeros((1, 3)))
+        counting_model.transmitted(np.zeros((1, 3)))
 
 
-def test_dead_time_factor_reaches_all_times_of_the_pulse() -> None:
-    slower = counting_model().with_dead_time(2.0).shape
+def test_dead_time_factor_reaches_all_times_of_the_pulse(
+    counting_model: CountingModel,
+) -> None:
+    slower = counting_model.with_dead_time(2.0).shape
     assert (slower.dead_time_ns, slower.tail_ns) == (300.0, 60.0)
-    assert slower.tail_height == counting_model().shape.tail_height
+    assert slower.tail_height == counting_model.shape.tail_height
