@@ -143,7 +143,7 @@ def bound(decomposer: MaterialDecomposer, known: NineRegions) -> NDArray[np.floa
     exposure = int(known.scan.exposures("object")[known.repeats // 2])
     ready = decomposer.conditions(exposure).responses
     truth = known.truth.reshape(len(known.truth), -1)[:, ready.flat].T
-    at = truth, ready.weight, ready.attenuation
+    at = truth, ready.weight.astype(np.float64), ready.attenuation
     smallest = cramer_rao_bound(
         fisher_information(
             expected_counts(*at), count_derivatives(*at)[0], dead=ready.lost_fraction
