@@ -49,8 +49,9 @@ def population_nuisances(thresholds: int) -> tuple[Nuisance, ...]:
         Nuisance(name="ln_anode_angle", start=np.log(12.0), spread=0.3, step=0.05),
         Nuisance(name="extra_filter_mm_al", start=0.3, spread=0.4, step=0.05),
         Nuisance(name="ln_noise", start=np.log(1.5), spread=0.5, step=0.05),
-        Nuisance(name="ln_dead_time", start=np.log(200.0), spread=2.0, step=0.05),
-        Nuisance(name="ln_tail", start=np.log(40.0), spread=1.5, step=0.1),
+        Nuisance(name="ln_dead_time", start=np.log(20.0), spread=2.0, step=0.05),
+        Nuisance(name="ln_tail", start=np.log(60.0), spread=1.5, step=0.05),
+        Nuisance(name="ln_order", start=np.log(1.5), spread=0.5, step=0.05),
         *(
             Nuisance(name=name, start=start, spread=sd, step=step, changes_heights=True)
             for name, start, sd, step in (

@@ -27,6 +27,10 @@ ENOUGH_GAIN = 0.05
 """Relative fall of the penalised chi-square below which the fit is at rest."""
 THREADS = 2
 LARGEST_LOG_STEP = 1.0
+LARGEST_STEP = 1.5
+"""Most that an unknown may move in one round, in spreads of its prior."""
+FIRST_TIMES = (0.1, 0.2, 0.4, 0.7, 1.0, 1.5, 3.0)
+"""Factors on the pulse's times among which the first fit starts."""
 DRIFT_SPREAD = 1e-3
 """Prior spread of the tube's output from exposure to exposure."""
 
@@ -193,7 +197,7 @@ def fit_population(
             values[i] = start[nuisance.name]
     drift = np.zeros(observed.shape[0])
     if start is None:
-        values[0] = _first_flux(problem, values, problem.heights(values), observed)
+        values = _first_values(problem, values, observed)
         prior[0] = values[0]
     fit = _Fit(problem, prior, observed, data.above.shape[0])
     point = fit.at(values, drift)
@@ -301,8 +305,10 @@ class _Fit:
             move = np.linalg.solve(damped, score)
             step = move[:size]
             for i, nuisance in enumerate(self.problem.nuisances):
-                if nuisance.name.startswith("ln_") and i > 0:
-                    step[i] = np.clip(step[i], -LARGEST_LOG_STEP, LARGEST_LOG_STEP)
+                most = LARGEST_STEP * nuisance.spread
+                if nuisance.name.startswith("ln_"):
+                    most = min(most, LARGEST_LOG_STEP)
+                step[i] = np.clip(step[i], -most, most)
             values = np.clip(point.values + step, *self.limits)
             tried = self.at(values, point.drift + move[size:])
             if np.isfinite(tried.loss) and tried.loss < point.loss:
@@ -311,22 +317,40 @@ class _Fit:
         return point, damping
 
 
-def _first_flux(
-    problem: _Problem,
-    values: NDArray[np.float64],
-    heights: NDArray[np.float64],
-    observed: NDArray[np.float64],
-) -> float:
-    """Logarithm of the flux that meets the lowest threshold's counts."""
-    low = 10.0
-    trial = values.copy()
-    trial[0] = low
-    counted = problem.predict(trial, np.zeros(observed.shape[0]), heights)
-    ratio = np.median(observed[:, 0] / counted[:, 0])
-    if not np.isfinite(ratio) or ratio <= 0.0:
+def _first_values(
+    problem: _Problem, values: NDArray[np.float64], observed: NDArray[np.float64]
+) -> NDArray[np.float64]:
+    """Flux and times of the pulse that meet the counts best, all else as it is.
+
+    Counts are compared threshold by threshold, each at its own level: how far they
+    are from proportional to the current tells the time, whatever the spectrum.
+    """
+    names = [n.name for n in problem.nuisances]
+    times = [names.index("ln_dead_time"), names.index("ln_tail")]
+    heights = problem.heights(values)
+    still = np.zeros(observed.shape[0])
+
+    def log_ratio(trial: NDArray[np.float64]) -> NDArray[np.float64]:
+        counted = problem.predict(trial, still, heights)
+        floor = np.maximum(counted, 1e-300)
+        return np.asarray(np.log(np.maximum(observed, 1e-3) / floor))
+
+    best = values
+    least = np.inf
+    for change in FIRST_TIMES:
+        trial = values.copy()
+        trial[times] += np.log(change)
+        trial[0] = 0.0
+        for _ in range(2):
+            trial[0] += np.median(log_ratio(trial)[:, 0])
+        ratio = log_ratio(trial)
+        away = float(np.square(ratio - np.median(ratio, axis=0)).mean())
+        if away < least:
+            best, least = trial, away
+    if not np.isfinite(least):
         msg = "the open and wedge exposures hold no counts above the lowest threshold"
         raise CalibrationError(msg)
-    return float(low + np.log(ratio))
+    return best
 
 
 def _result(

@@ -13,6 +13,7 @@ from spectral.forward.scan_facts import scan_faults
 from spectral.physics.cross_sections import k_edge_kev, mass_attenuation
 from spectral.physics.materials import find_material
 from spectral.physics.pileup import PulseShape
+from spectral.physics.pulse_family import tail_height
 from spectral.physics.sensor import (
     PAIR_ENERGY_EV,
     ChargeTransport,
@@ -220,5 +221,6 @@ class Setup:
             shape=PulseShape(
                 dead_time_ns=float(np.exp(values["ln_dead_time"])),
                 tail_ns=float(np.exp(values["ln_tail"])),
+                tail_height=tail_height(float(np.exp(values["ln_order"]))),
             ),
         )
