@@ -21,16 +21,14 @@ from spectral.calibration.comparison_summary import (
     comparison_text,
 )
 from spectral.calibration.residual import ResidualCorrection
-from spectral.calibration.result import Calibration, Promise, StepTable
+from spectral.calibration.result import Calibration, Promise
 from spectral.errors import CalibrationError
-from spectral.forward.counting_model import CountingModel
-from spectral.physics.materials import find_material
-from spectral.physics.pileup import PulseShape
 from spectral.reporting.comparison_page import comparison_page, write_comparison
 from spectral.scans.bad_pixels import PixelReason
 from spectral.scans.scan import Layer
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
     from pathlib import Path
 
     from numpy.typing import NDArray
@@ -42,60 +40,15 @@ SPREAD = np.array([0.02, 0.6, 0.6, 0.6, 0.6, 0.3, 0.04])
 NAMES = ("ln_flux", "ln_noise", "ln_dead_time", "shift_1_kev")
 
 
-def counting_model() -> CountingModel:
-    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
-    energy = np.arange(12.0, 91.0, 2.0)
-    materials = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
-    attenuation = np.array([m.mass_attenuation(energy) for m in materials])
-    spectrum = (energy - 8.0) * (92.0 - energy) * np.exp(-0.7 * attenuation[1])
-    level = 0.5 * np.arange(316)
-    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
-    tail = (level > 4.0) & (level < energy[:, None])
-    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
-    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
-    return CountingModel(
-        energy_kev=energy,
-        spectrum=spectrum / spectrum.sum(),
-        attenuation=attenuation,
-        heights=heights,
-        step_kev=0.5,
-        noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=150.0, tail_ns=30.0),
-    )
-
-
-def step_table() -> StepTable:
-    mesh = np.meshgrid([0.0, 3.0, 6.0, 9.0], [0.0, 1.0, 2.0, 3.0], indexing="ij")
-    areal = np.stack([m.ravel() for m in mesh], axis=1)
-    n = areal.shape[0]
-    return StepTable(
-        exposure=np.arange(n),
-        areal_density=areal,
-        current_ma=np.full(n, 4.0),
-        count_time_s=np.full(n, 0.25),
-        drift=np.zeros(n),
-        residual=np.full((n, 4), 3e-4),
-        physics_residual=np.full((n, 4), 1e-3),
-        error=np.full((n, 4), 4e-4),
-    )
-
-
-def calibration(
-    departures: NDArray[np.float64], covariance: NDArray[np.float64]
-) -> Calibration:
-    """A calibration of made-up pixels with the posterior that it is given."""
-    steps = step_table()
-    return Calibration(
-        materials=(
-            Layer(name="PMMA", formula="C5H8O2", density_g_cm3=1.19),
-            Layer(name="Al", formula="Al", density_g_cm3=2.7),
-        ),
-        thresholds_kev=LEVELS_KEV - 0.5,
-        levels_kev=LEVELS_KEV,
-        model=counting_model(),
-        photons_per_mas=1e5,
+@pytest.fixture(scope="module")
+def plain(make_calibration: Callable[..., Calibration]) -> Calibration:
+    """A calibration of made-up pixels whose smooth correction does nothing."""
+    made = make_calibration(SHAPE)
+    n = made.steps.exposure.size
+    return replace(
+        made,
         residual=ResidualCorrection(
-            largest=steps.areal_density.max(axis=0),
+            largest=made.largest,
             powers=np.array([[0, 0], [1, 0], [0, 1]]),
             coefficient=np.zeros((5, 4)),
             covariance=np.tile(1e-10 * np.eye(5), (4, 1, 1)),
@@ -106,30 +59,26 @@ def calibration(
             drift=np.zeros(16),
             degree=1,
         ),
-        departures=departures.reshape(*SHAPE, SIZE),
-        departure_covariance=covariance.reshape(*SHAPE, SIZE, SIZE).astype(np.float32),
         spread=np.diag(SPREAD**2),
-        pixel_reasons=np.zeros(SHAPE, np.uint16),
-        deviance=np.ones(SHAPE, np.float32),
-        steps=steps,
-        promise=None,
+        steps=replace(
+            made.steps,
+            residual=np.full((n, 4), 3e-4),
+            physics_residual=np.full((n, 4), 1e-3),
+            error=np.full((n, 4), 4e-4),
+        ),
         unknowns=dict.fromkeys(NAMES, 0.5),
         unknown_errors=dict.fromkeys(NAMES, 0.1),
-        voltage_kv=90.0,
-        sensor="CdTe, 1 mm, 100 um pixels",
-        filters=("Al 2 mm",),
         assumptions=(),
-        findings=(),
         scan_source="wedge.h5",
-        scan_digest="0" * 64,
-        created="2026-01-01T00:00:00+00:00",
         version="1",
-        cross_sections="made up",
     )
 
 
 def pair(
-    *, change: NDArray[np.float64] | float = 0.0, seed: int = 5
+    plain: Calibration,
+    *,
+    change: NDArray[np.float64] | float = 0.0,
+    seed: int = 5,
 ) -> tuple[Calibration, Calibration]:
     """Two calibrations of the same pixels; ``change`` is added to the second's truth.
 
@@ -147,15 +96,33 @@ def pair(
         information = seen.transpose(0, 2, 1) @ seen
         covariance = np.linalg.inv(information + np.diag(SPREAD**-2.0))
         pull = (seen.transpose(0, 2, 1) @ data[..., None])[..., 0]
-        made.append(calibration((covariance @ pull[..., None])[..., 0], covariance))
+        departures = (covariance @ pull[..., None])[..., 0]
+        made.append(
+            replace(
+                plain,
+                departures=departures.reshape(*SHAPE, SIZE),
+                departure_covariance=covariance.reshape(*SHAPE, SIZE, SIZE).astype(
+                    np.float32
+                ),
+            )
+        )
     return made[0], replace(made[1], created="2026-01-08T00:00:00+00:00")
 
 
-OLD, NEW = pair()
+@pytest.fixture(scope="module")
+def old(plain: Calibration) -> Calibration:
+    return pair(plain)[0]
 
 
-def test_unchanged_pixels_are_within_their_errors() -> None:
-    found = compare(OLD, NEW)
+@pytest.fixture(scope="module")
+def new(plain: Calibration) -> Calibration:
+    return pair(plain)[1]
+
+
+def test_unchanged_pixels_are_within_their_errors(
+    old: Calibration, new: Calibration
+) -> None:
+    found = compare(old, new)
     pixels = found.both_good.sum()
     # robust spread of 2000 values: known to 3 %; laws with wide tails, as their
     # covariances differ from pixel to pixel: some 20 % less than the mean variance says
@@ -174,16 +141,18 @@ def test_unchanged_pixels_are_within_their_errors() -> None:
     assert found.notes == ()
 
 
-def test_planted_movement_of_the_average_pixel_is_found() -> None:
+def test_planted_movement_of_the_average_pixel_is_found(
+    old: Calibration, new: Calibration
+) -> None:
     shift = np.array([0.3, -0.2, 0.1, 0.4])
-    model = NEW.model.with_dead_time(1.03)
+    model = new.model.with_dead_time(1.03)
     moved = replace(
-        NEW,
+        new,
         levels_kev=LEVELS_KEV + shift,
         photons_per_mas=1.05e5,
         model=replace(model, noise_kev=1.65),
     )
-    found = compare(OLD, moved)
+    found = compare(old, moved)
     average = found.average
     # expected counts carry no noise: only the priors pull, by a part of the errors
     assert np.all(np.abs(average.shift_kev - shift) < average.shift_error_kev)
@@ -196,47 +165,47 @@ def test_planted_movement_of_the_average_pixel_is_found() -> None:
     np.testing.assert_allclose(
         np.nanmedian(found.change_kev, axis=(1, 2)), found.mean_kev, atol=1e-12
     )
-    back = compare(moved, OLD).average
+    back = compare(moved, old).average
     np.testing.assert_allclose(back.shift_kev, -average.shift_kev, atol=1e-6)
 
 
-def test_changed_beam_is_left_over() -> None:
-    harder = NEW.model.spectrum * np.exp(-0.27 * NEW.model.attenuation[1])
-    found = compare(OLD, replace(NEW, model=replace(NEW.model, spectrum=harder)))
+def test_changed_beam_is_left_over(old: Calibration, new: Calibration) -> None:
+    harder = new.model.spectrum * np.exp(-0.27 * new.model.attenuation[1])
+    found = compare(old, replace(new, model=replace(new.model, spectrum=harder)))
     assert np.abs(found.average.left).max() > 5e-3
 
 
-def test_pixels_that_changed_are_picked_out() -> None:
-    departures = NEW.departures.copy()
+def test_pixels_that_changed_are_picked_out(old: Calibration, new: Calibration) -> None:
+    departures = new.departures.copy()
     departures[3, 4, 1:5] += 3.0
     departures[20:22, 30, 0] += 0.3
-    found = compare(OLD, replace(NEW, departures=departures))
+    found = compare(old, replace(new, departures=departures))
     assert found.changed[3, 4]
     assert found.changed[20:22, 30].all()
     assert found.changed.sum() < 12
     # robust figures do not mind three pixels
-    plain = compare(OLD, NEW)
-    np.testing.assert_allclose(found.spread_kev, plain.spread_kev, rtol=0.01)
-    assert found.area_percent[20, 30] - plain.area_percent[20, 30] > 25.0
+    unchanged = compare(old, new)
+    np.testing.assert_allclose(found.spread_kev, unchanged.spread_kev, rtol=0.01)
+    assert found.area_percent[20, 30] - unchanged.area_percent[20, 30] > 25.0
 
 
-def test_pixels_that_all_drifted_apart_widen_the_spread() -> None:
+def test_pixels_that_all_drifted_apart_widen_the_spread(plain: Calibration) -> None:
     rng = np.random.default_rng(6)
     change = np.zeros((SHAPE[0] * SHAPE[1], SIZE))
     change[:, 1:5] = rng.normal(0.0, 0.5, (change.shape[0], 4))
-    found = compare(*pair(change=change))
+    found = compare(*pair(plain, change=change))
     assert np.all(found.spread_ratio > 1.25)
     assert found.changed.mean() > 0.1
     assert "pixels moved apart" in comparison_text(found)
 
 
-def test_bad_and_recovered_pixels_by_reason() -> None:
+def test_bad_and_recovered_pixels_by_reason(old: Calibration, new: Calibration) -> None:
     before, after = (np.zeros(SHAPE, np.uint16) for _ in range(2))
     before[0, 0] = PixelReason.NOISY
     before[1, 1] = after[1, 1] = PixelReason.DEAD
     after[2, :2] = PixelReason.MISFIT
     found = compare(
-        replace(OLD, pixel_reasons=before), replace(NEW, pixel_reasons=after)
+        replace(old, pixel_reasons=before), replace(new, pixel_reasons=after)
     )
     assert by_reason(found.newly_bad) == {"MISFIT": 2}
     assert by_reason(found.recovered) == {"NOISY": 1}
@@ -245,44 +214,46 @@ def test_bad_and_recovered_pixels_by_reason() -> None:
     assert "2 newly bad (2 misfit), 1 recovered (1 noisy)" in comparison_text(found)
 
 
-def test_other_settings_are_refused() -> None:
+def test_other_settings_are_refused(old: Calibration, new: Calibration) -> None:
     other = Layer(name="Cu", formula="Cu", density_g_cm3=8.96)
     small = replace(
-        NEW,
-        departures=NEW.departures[:10],
-        departure_covariance=NEW.departure_covariance[:10],
-        pixel_reasons=NEW.pixel_reasons[:10],
+        new,
+        departures=new.departures[:10],
+        departure_covariance=new.departure_covariance[:10],
+        pixel_reasons=new.pixel_reasons[:10],
     )
     cases = (
         (small, "has 10 x 50 pixels and not 40 x 50"),
         (
-            replace(NEW, thresholds_kev=LEVELS_KEV),
+            replace(new, thresholds_kev=LEVELS_KEV),
             "has thresholds at 20, 32, 45, 60 keV and not at 19.5",
         ),
         (
-            replace(NEW, thresholds_kev=LEVELS_KEV[:3]),
+            replace(new, thresholds_kev=LEVELS_KEV[:3]),
             "^the new calibration cannot be compared with the old calibration: it has 3",
         ),
-        (replace(NEW, voltage_kv=80.0), "was taken at 80 kV and not at 90 kV"),
-        (replace(NEW, materials=(NEW.materials[0], other)), "and Cu .* and not of"),
-        (replace(NEW, filters=("Cu 0.1 mm",)), "has the filters Cu 0.1 mm and not Al"),
+        (replace(new, voltage_kv=80.0), "was taken at 80 kV and not at 90 kV"),
+        (replace(new, materials=(new.materials[0], other)), "and Cu .* and not of"),
+        (replace(new, filters=("Cu 0.1 mm",)), "has the filters Cu 0.1 mm and not Al"),
     )
     for made, sentence in cases:
         with pytest.raises(CalibrationError, match=sentence):
-            compare(OLD, made)
-    all_bad = replace(NEW, pixel_reasons=np.ones(SHAPE, np.uint16))
+            compare(old, made)
+    all_bad = replace(new, pixel_reasons=np.ones(SHAPE, np.uint16))
     with pytest.raises(CalibrationError, match=r"no pixel is good in both a\.h5 and b"):
-        compare(OLD, all_bad, names=("a.h5", "b.h5"))
+        compare(old, all_bad, names=("a.h5", "b.h5"))
 
 
-def test_what_limits_the_comparison_is_noted() -> None:
+def test_what_limits_the_comparison_is_noted(
+    old: Calibration, new: Calibration
+) -> None:
     child = replace(
-        NEW,
+        new,
         findings=("Refreshed from the calibration of 2026-01-01T00:00:00+00:00 (x)",),
         version="2",
-        steps=replace(step_table(), areal_density=0.5 * step_table().areal_density),
+        steps=replace(new.steps, areal_density=0.5 * new.steps.areal_density),
     )
-    notes = compare(OLD, child).notes
+    notes = compare(old, child).notes
     assert any("is the old one refreshed" in note for note in notes)
     assert any("different versions, 1 and 2" in note for note in notes)
     assert any("thickest steps of the two wedge scans differ" in note for note in notes)
@@ -297,9 +268,9 @@ def promised(pattern: float) -> Promise:
     )
 
 
-def test_summary_and_text() -> None:
+def test_summary_and_text(old: Calibration, new: Calibration) -> None:
     found = compare(
-        replace(OLD, promise=promised(0.1)), replace(NEW, promise=promised(0.2))
+        replace(old, promise=promised(0.1)), replace(new, promise=promised(0.2))
     )
     summary = comparison_summary(found)
     json.dumps(summary, allow_nan=False)
@@ -314,12 +285,14 @@ def test_summary_and_text() -> None:
     assert "which the errors of both explain" in text
 
 
-def test_page_says_what_the_comparison_found(tmp_path: Path) -> None:
+def test_page_says_what_the_comparison_found(
+    old: Calibration, new: Calibration, tmp_path: Path
+) -> None:
     reasons = np.zeros(SHAPE, np.uint16)
     reasons[2, :2] = PixelReason.MISFIT
-    moved = replace(NEW, levels_kev=LEVELS_KEV + 0.3, pixel_reasons=reasons)
+    moved = replace(new, levels_kev=LEVELS_KEV + 0.3, pixel_reasons=reasons)
     page = write_comparison(
-        OLD, moved, tmp_path / "page.html", names=("a/old.h5", "b/new.h5")
+        old, moved, tmp_path / "page.html", names=("a/old.h5", "b/new.h5")
     )
     assert page.title == "from old.h5 to new.h5"
     text = (tmp_path / "page.html").read_text(encoding="utf-8")
@@ -329,14 +302,16 @@ def test_page_says_what_the_comparison_found(tmp_path: Path) -> None:
     assert "There are no recovered pixels." in text
     figures = {f.name: f.value for f in page.figures}
     assert figures["newly bad pixels"] == 2.0
-    found = compare(OLD, moved)
+    found = compare(old, moved)
     assert found.mean_kev.max() in figures.values()
 
 
-def test_page_of_pixels_that_moved_apart_asks_for_a_look() -> None:
-    departures = NEW.departures.copy()
+def test_page_of_pixels_that_moved_apart_asks_for_a_look(
+    old: Calibration, new: Calibration
+) -> None:
+    departures = new.departures.copy()
     rng = np.random.default_rng(9)
     departures[..., 1:5] += rng.normal(0.0, 1.0, (*SHAPE, 4))
-    page = comparison_page(OLD, replace(NEW, departures=departures))
+    page = comparison_page(old, replace(new, departures=departures))
     assert any("Pixels moved apart" in text for text in page.look)
     assert any("are expected by chance" in text for text in page.look)

@@ -21,19 +21,18 @@ from spectral.calibration.promise import with_promise
 from spectral.calibration.refresh import refresh, updated_by_opens
 from spectral.calibration.refresh_summary import refresh_summary, refresh_text
 from spectral.calibration.residual import ResidualCorrection
-from spectral.calibration.result import Calibration, StepTable
 from spectral.calibration.short_scan import short_scan_data
 from spectral.errors import ScanError
-from spectral.forward.counting_model import CountingModel
-from spectral.physics.materials import find_material
-from spectral.physics.pileup import PulseShape
 from spectral.scans.bad_pixels import PixelReason
 from spectral.scans.scan import CountsInMemory, Filter, Layer, Scan
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
     from pathlib import Path
 
     from numpy.typing import NDArray
+
+    from spectral.calibration.result import Calibration
 
 LEVELS_KEV = np.array([20.0, 32.0, 45.0, 60.0])
 SIDE = 24
@@ -42,44 +41,6 @@ SPREAD = np.array([0.02, 0.6, 0.6, 0.6, 0.6, 0.3, 0.04])
 KNOWN = np.array([0.004, 0.1, 0.1, 0.1, 0.1, 0.15, 0.02])
 CURRENT_MA = 4.0
 STEPS = np.array([(0.0, 0.0), (3.0, 0.0), (6.0, 1.0), (0.0, 0.0)])
-
-
-def counting_model() -> CountingModel:
-    """A made-up sensor, a photopeak with a flat tail, behind a made-up tube."""
-    energy = np.arange(12.0, 91.0, 2.0)
-    materials = (find_material("C5H8O2", density_g_cm3=1.19), find_material("Al"))
-    attenuation = np.array([m.mass_attenuation(energy) for m in materials])
-    spectrum = (energy - 8.0) * (92.0 - energy) * np.exp(-0.7 * attenuation[1])
-    level = 0.5 * np.arange(316)
-    peak = np.exp(-0.5 * ((level - energy[:, None]) / 1.0) ** 2)
-    tail = (level > 4.0) & (level < energy[:, None])
-    heights = 0.7 * peak / peak.sum(axis=1, keepdims=True)
-    heights += 0.5 * tail / tail.sum(axis=1, keepdims=True)
-    return CountingModel(
-        energy_kev=energy,
-        spectrum=spectrum / spectrum.sum(),
-        attenuation=attenuation,
-        heights=heights,
-        step_kev=0.5,
-        noise_kev=1.6,
-        shape=PulseShape(dead_time_ns=20.0, tail_ns=5.0),
-    )
-
-
-def step_table(error: float) -> StepTable:
-    mesh = np.meshgrid([0.0, 3.0, 6.0, 9.0], [0.0, 1.0, 2.0, 3.0], indexing="ij")
-    areal = np.stack([m.ravel() for m in mesh], axis=1)
-    n = areal.shape[0]
-    return StepTable(
-        exposure=np.arange(n),
-        areal_density=areal,
-        current_ma=np.full(n, CURRENT_MA),
-        count_time_s=np.full(n, 0.25),
-        drift=np.zeros(n),
-        residual=np.zeros((n, 4)),
-        physics_residual=np.zeros((n, 4)),
-        error=np.full((n, 4), error),
-    )
 
 
 def no_correction(largest: NDArray[np.float64]) -> ResidualCorrection:
@@ -97,55 +58,35 @@ def no_correction(largest: NDArray[np.float64]) -> ResidualCorrection:
     )
 
 
-def calibration() -> Calibration:
+@pytest.fixture(scope="module")
+def old(make_calibration: Callable[..., Calibration]) -> Calibration:
     """A calibration of made-up pixels, each known to `KNOWN`."""
     rng = np.random.default_rng(1)
-    steps = step_table(1e-4)
-    shape = (SIDE, SIDE)
+    plain = make_calibration((SIDE, SIDE))
+    shape = replace(plain.model.shape, dead_time_ns=20.0, tail_ns=5.0)
     learned = np.sqrt(SPREAD**2 - KNOWN**2)
-    return Calibration(
-        materials=(
-            Layer(name="PMMA", formula="C5H8O2", density_g_cm3=1.19),
-            Layer(name="Al", formula="Al", density_g_cm3=2.7),
-        ),
-        thresholds_kev=LEVELS_KEV - 0.5,
-        levels_kev=LEVELS_KEV,
-        model=counting_model(),
-        photons_per_mas=1e5,
-        residual=no_correction(steps.areal_density.max(axis=0)),
-        departures=rng.normal(0.0, 1.0, (*shape, SIZE)) * learned,
+    return replace(
+        plain,
+        model=replace(plain.model, shape=shape),
+        residual=no_correction(plain.largest),
+        departures=rng.normal(0.0, 1.0, (SIDE, SIDE, SIZE)) * learned,
         departure_covariance=np.tile(
-            np.diag(KNOWN**2).astype(np.float32), (*shape, 1, 1)
+            np.diag(KNOWN**2).astype(np.float32), (SIDE, SIDE, 1, 1)
         ),
         spread=np.diag(SPREAD**2),
-        pixel_reasons=np.zeros(shape, np.uint16),
-        deviance=np.ones(shape, np.float32),
-        steps=steps,
-        promise=None,
         unknowns={
             "ln_flux": 11.5, "ln_noise": float(np.log(1.6)), "ln_dead_time": 3.0,
             "ln_tail": 1.6, "trapping": 0.01,
             **{f"shift_{k + 1}_kev": 0.5 for k in range(4)},
         },
         unknown_errors={"ln_flux": 0.01, "shift_1_kev": 0.1},
-        voltage_kv=90.0,
-        sensor="CdTe, 1 mm, 100 um pixels",
-        filters=("Al 2 mm",),
-        assumptions=(),
         findings=("a finding of the wedge scan",),
-        scan_source="a made-up wedge scan",
-        scan_digest="0" * 64,
-        created="2026-01-01T00:00:00+00:00",
-        version="0",
-        cross_sections="made up",
         digest="ab" * 32,
     )  # fmt: skip
 
 
-OLD = calibration()
-
-
 def truth(
+    old: Calibration,
     *,
     shift_kev: NDArray[np.float64] | float = 0.0,
     pixel_shift_kev: float = 0.0,
@@ -153,11 +94,11 @@ def truth(
 ) -> Calibration:
     """The pixels as they truly are: about the calibrated ones, and drifted."""
     rng = np.random.default_rng(seed)
-    true = OLD.departures + rng.normal(0.0, 1.0, OLD.departures.shape) * KNOWN
+    true = old.departures + rng.normal(0.0, 1.0, old.departures.shape) * KNOWN
     true[..., 1:5] += rng.normal(0.0, 1.0, (SIDE, SIDE, 4)) * pixel_shift_kev
     # the calibration's average pixel has the mean response: what is drawn has none
-    true += (OLD.departures - true).mean(axis=(0, 1))
-    return replace(OLD, departures=true, levels_kev=LEVELS_KEV + shift_kev)
+    true += (old.departures - true).mean(axis=(0, 1))
+    return replace(old, departures=true, levels_kev=LEVELS_KEV + shift_kev)
 
 
 def short_scan(
@@ -177,10 +118,10 @@ def short_scan(
     above = np.cumsum(bins[..., ::-1], axis=-1)[..., ::-1].transpose(1, 2, 0)
     return Scan(
         counts=CountsInMemory(above.reshape(n, 4, SIDE, SIDE).astype(np.uint32)),
-        thresholds_kev=OLD.thresholds_kev,
+        thresholds_kev=LEVELS_KEV - 0.5,
         role=tuple("wedge" if a.any() else "open" for a in areal),
         thickness_mm=areal / np.array([0.119, 0.27]),
-        materials=OLD.materials,
+        materials=true.materials,
         count_time_s=np.full(n, time_s),
         current_ma=np.full(n, CURRENT_MA),
         voltage_kv=90.0,
@@ -194,8 +135,8 @@ def short_scan(
 ALL = np.ones((SIDE, SIDE), bool)
 
 
-def test_nothing_moved_and_nothing_is_said_to_have_moved() -> None:
-    done = refresh(OLD, short_scan(truth(), output=1.03))
+def test_nothing_moved_and_nothing_is_said_to_have_moved(old: Calibration) -> None:
+    done = refresh(old, short_scan(truth(old), output=1.03))
     pull = done.common.shift_kev / done.common.shift_error_kev
     assert np.abs(pull).max() < 3.5
     assert done.common.shift_chance > 1e-3
@@ -211,8 +152,10 @@ def test_nothing_moved_and_nothing_is_said_to_have_moved() -> None:
 @pytest.mark.parametrize(
     "shift", [np.full(4, 0.3), np.array([0.2, -0.1, 0.0, 0.35])], ids=["all", "each"]
 )
-def test_planted_shift_is_found_within_its_error(shift: NDArray[np.float64]) -> None:
-    done = refresh(OLD, short_scan(truth(shift_kev=shift), output=0.97))
+def test_planted_shift_is_found_within_its_error(
+    old: Calibration, shift: NDArray[np.float64]
+) -> None:
+    done = refresh(old, short_scan(truth(old, shift_kev=shift), output=0.97))
     common = done.common
     pull = (common.shift_kev - shift) / common.shift_error_kev
     assert np.abs(pull).max() < 3.5
@@ -226,12 +169,14 @@ def test_planted_shift_is_found_within_its_error(shift: NDArray[np.float64]) -> 
 
 
 @pytest.mark.slow
-def test_errors_of_the_common_shift_are_true() -> None:
+def test_errors_of_the_common_shift_are_true(old: Calibration) -> None:
     # the covariance is put to the test by a chi-square of 4 a scan, 25 scans
     total = 0.0
     for seed in range(25):
-        data = short_scan_data(OLD, short_scan(truth(seed=seed), seed=100 + seed), ALL)
-        found = common_drift(OLD, data)
+        data = short_scan_data(
+            old, short_scan(truth(old, seed=seed), seed=100 + seed), ALL
+        )
+        found = common_drift(old, data)
         inverse = np.linalg.inv(found.shift_covariance)
         total += float(found.shift_kev @ inverse @ found.shift_kev)
     # priors that are wider than the truth (noise, dead time) make it smaller
@@ -239,14 +184,14 @@ def test_errors_of_the_common_shift_are_true() -> None:
     assert total > 20.0
 
 
-def test_pixels_that_drifted_are_followed() -> None:
-    true = truth(pixel_shift_kev=0.2)
-    done = refresh(OLD, short_scan(true, time_s=2.0))
+def test_pixels_that_drifted_are_followed(old: Calibration) -> None:
+    true = truth(old, pixel_shift_kev=0.2)
+    done = refresh(old, short_scan(true, time_s=2.0))
     spread, error = done.pixels.spread[1], done.pixels.spread_error[1]
     assert abs(spread - 0.2) < 4.0 * error
     assert error < 0.02
     wanted = true.departures.reshape(-1, SIZE)[:, 1:5]
-    before = OLD.departures.reshape(-1, SIZE)[:, 1:5] - wanted
+    before = old.departures.reshape(-1, SIZE)[:, 1:5] - wanted
     after = done.pixels.values[:, 1:5] - wanted
     # two threshold errors of 0.1 and 0.2 keV, told from 2 s of counts
     assert after.std() < 0.75 * before.std()
@@ -255,80 +200,82 @@ def test_pixels_that_drifted_are_followed() -> None:
     assert (after / stated).std() == pytest.approx(1.0, abs=0.1)
 
 
-def test_far_drifts_ask_for_a_full_scan() -> None:
-    far = refresh(OLD, short_scan(truth(shift_kev=np.array([0.0, 0.0, 0.0, 1.4]))))
+def test_far_drifts_ask_for_a_full_scan(old: Calibration) -> None:
+    far = refresh(old, short_scan(truth(old, shift_kev=np.array([0.0, 0.0, 0.0, 1.4]))))
     assert far.full_scan_needed
     assert any("Threshold 4 moved by +1.4" in r for r in far.reasons)
     assert any("Threshold 4" in finding for finding in far.calibration.findings)
-    apart = refresh(OLD, short_scan(truth(pixel_shift_kev=0.5), time_s=2.0))
+    apart = refresh(old, short_scan(truth(old, pixel_shift_kev=0.5), time_s=2.0))
     assert any("thresholds drifted apart by 0." in r for r in apart.reasons)
     assert "A full wedge scan is needed:" in refresh_text(apart)
 
 
-def test_changed_beam_asks_for_a_full_scan() -> None:
+def test_changed_beam_asks_for_a_full_scan(old: Calibration) -> None:
     # 1 mm of Al more: more than any movement of thresholds can stand for
-    model = OLD.model
+    model = old.model
     harder = model.spectrum * np.exp(-0.27 * model.attenuation[1])
-    true = replace(truth(), model=replace(model, spectrum=harder))
-    done = refresh(OLD, short_scan(true))
+    true = replace(truth(old), model=replace(model, spectrum=harder))
+    done = refresh(old, short_scan(true))
     assert any("does not meet the short scan's mean counts" in r for r in done.reasons)
 
 
-def test_output_current_and_thickness_beyond_the_wedge_scans() -> None:
-    brighter = refresh(OLD, short_scan(truth(), output=1.3))
+def test_output_current_and_thickness_beyond_the_wedge_scans(old: Calibration) -> None:
+    brighter = refresh(old, short_scan(truth(old), output=1.3))
     assert any("The tube's output changed by +30 %" in r for r in brighter.reasons)
     thick = np.array([(0.0, 0.0), (12.0, 0.0), (3.0, 1.0)])
-    done = refresh(OLD, short_scan(truth(), areal=thick))
+    done = refresh(old, short_scan(truth(old), areal=thick))
     assert any("A step holds more PMMA than any step" in r for r in done.reasons)
-    scan = short_scan(truth())
+    scan = short_scan(truth(old))
     stronger = replace(scan, current_ma=np.full(4, 5.0))
-    found = refresh(OLD, stronger)
+    found = refresh(old, stronger)
     assert any(
         "was taken at up to 5 mA, the wedge scan at 4 mA" in r for r in found.reasons
     )
 
 
-def test_pixels_gone_bad_are_named() -> None:
-    scan = short_scan(truth())
+def test_pixels_gone_bad_are_named(old: Calibration) -> None:
+    scan = short_scan(truth(old))
     counts = scan.counts.read(range(4)).copy()
     counts[:, :, 2, 3] = 0
-    few = refresh(OLD, scan.with_counts(counts))
+    few = refresh(old, scan.with_counts(counts))
     assert few.new_reasons[2, 3] & PixelReason.DEAD
     assert few.calibration.pixel_reasons[2, 3] & PixelReason.DEAD
     assert np.isnan(few.calibration.deviance[2, 3])
     assert not few.full_scan_needed
     assert "1 dead" in refresh_text(few)
     counts[:, :, 5, 3:20:2] = 0
-    many = refresh(OLD, scan.with_counts(counts))
+    many = refresh(old, scan.with_counts(counts))
     assert any("pixels that were sound are not any more" in r for r in many.reasons)
 
 
-def test_pixels_that_no_response_meets_are_misfits() -> None:
-    scan = short_scan(truth())
+def test_pixels_that_no_response_meets_are_misfits(old: Calibration) -> None:
+    scan = short_scan(truth(old))
     counts = scan.counts.read(range(4)).copy().astype(float)
     # one step seen through something that no other pixel has before it
     counts[2, :, 7, 7] *= 0.9
-    done = refresh(OLD, scan.with_counts(counts.astype(np.uint32)))
+    done = refresh(old, scan.with_counts(counts.astype(np.uint32)))
     assert done.new_reasons[7, 7] & PixelReason.MISFIT
 
 
-def test_bad_pixels_stay_bad() -> None:
+def test_bad_pixels_stay_bad(old: Calibration) -> None:
     reasons = np.zeros((SIDE, SIDE), np.uint16)
     reasons[0, 0] = PixelReason.NOISY
-    done = refresh(replace(OLD, pixel_reasons=reasons), short_scan(truth()))
+    done = refresh(replace(old, pixel_reasons=reasons), short_scan(truth(old)))
     assert done.calibration.pixel_reasons[0, 0] == PixelReason.NOISY
     assert done.new_reasons[0, 0] == 0
     assert 0 not in done.pixel
 
 
-def test_opens_alone_do_with_a_note() -> None:
-    done = refresh(OLD, short_scan(truth(), areal=np.zeros((4, 2))))
+def test_opens_alone_do_with_a_note(old: Calibration) -> None:
+    done = refresh(old, short_scan(truth(old), areal=np.zeros((4, 2))))
     assert any("The scan holds no wedge step" in note for note in done.notes)
     assert done.common.shift_error_kev.max() > 0.1
 
 
-def test_refreshed_calibration_says_where_it_came_from(tmp_path: Path) -> None:
-    done = refresh(OLD, short_scan(truth(shift_kev=0.2), output=1.02))
+def test_refreshed_calibration_says_where_it_came_from(
+    old: Calibration, tmp_path: Path
+) -> None:
+    done = refresh(old, short_scan(truth(old, shift_kev=0.2), output=1.02))
     write_calibration(done.calibration, tmp_path / "new.h5")
     again = read_calibration(tmp_path / "new.h5")
     assert again.findings[0] == "a finding of the wedge scan"
@@ -344,9 +291,9 @@ def test_refreshed_calibration_says_where_it_came_from(tmp_path: Path) -> None:
     assert again.photons_per_mas == pytest.approx(1.02e5, rel=5e-3)
 
 
-def test_promise_follows_the_pixels() -> None:
-    before = with_promise(OLD)
-    done = refresh(before, short_scan(truth(), time_s=2.0))
+def test_promise_follows_the_pixels(old: Calibration) -> None:
+    before = with_promise(old)
+    done = refresh(before, short_scan(truth(old), time_s=2.0))
     assert before.promise is not None
     assert done.calibration.promise is not None
     # pixels are better known than before: the fixed pattern shrinks
@@ -354,8 +301,8 @@ def test_promise_follows_the_pixels() -> None:
     assert np.all(after < 0.8 * before.promise.fixed_pattern)
 
 
-def test_summary_and_text() -> None:
-    done = refresh(OLD, short_scan(truth(shift_kev=0.3)))
+def test_summary_and_text(old: Calibration) -> None:
+    done = refresh(old, short_scan(truth(old, shift_kev=0.3)))
     found: dict[str, Any] = refresh_summary(done)
     assert found["full_scan_needed"] is False
     assert found["threshold_shift_kev"] == pytest.approx(
@@ -369,31 +316,31 @@ def test_summary_and_text() -> None:
     assert f"{done.common.shift_kev[3]:+.3f}" in text
 
 
-def test_opens_of_an_object_scan_make_pixels_better_known() -> None:
-    true = truth(pixel_shift_kev=0.15)
+def test_opens_of_an_object_scan_make_pixels_better_known(old: Calibration) -> None:
+    true = truth(old, pixel_shift_kev=0.15)
     scan = short_scan(true, areal=np.zeros((6, 2)), time_s=1.0)
-    better = updated_by_opens(OLD, scan)
-    np.testing.assert_array_equal(better.levels_kev, OLD.levels_kev)
+    better = updated_by_opens(old, scan)
+    np.testing.assert_array_equal(better.levels_kev, old.levels_kev)
     wanted = true.departures.reshape(-1, SIZE)
     nothing = np.zeros((1, 2)), np.array([CURRENT_MA]), np.ones(1)
     every = np.arange(SIDE**2)
     exact = true.expected_bins(*nothing, every)
     miss = [
-        np.std(c.expected_bins(*nothing, every) / exact - 1.0) for c in (OLD, better)
+        np.std(c.expected_bins(*nothing, every) / exact - 1.0) for c in (old, better)
     ]
     assert miss[1] < 0.6 * miss[0]
-    before = np.std((OLD.departures.reshape(-1, SIZE) - wanted)[:, 1:5])
+    before = np.std((old.departures.reshape(-1, SIZE) - wanted)[:, 1:5])
     after = np.std((better.departures.reshape(-1, SIZE) - wanted)[:, 1:5])
     assert after < before
     objects = replace(scan, role=("object",) * 6)
-    assert updated_by_opens(OLD, objects) is OLD
+    assert updated_by_opens(old, objects) is old
     unnamed = replace(scan, materials=(), thickness_mm=np.zeros((6, 0)))
-    same = updated_by_opens(OLD, unnamed)
+    same = updated_by_opens(old, unnamed)
     np.testing.assert_array_equal(same.departures, better.departures)
 
 
-def test_scans_of_another_setting_are_refused() -> None:
-    scan = short_scan(truth())
+def test_scans_of_another_setting_are_refused(old: Calibration) -> None:
+    scan = short_scan(truth(old))
     other = Layer(name="Cu", formula="Cu", density_g_cm3=8.96)
     cases: list[tuple[Scan, str]] = [
         (replace(scan, voltage_kv=80.0), "was taken at 80 kV and not at 90 kV"),
@@ -421,11 +368,11 @@ def test_scans_of_another_setting_are_refused() -> None:
     ]
     for made, sentence in cases:
         with pytest.raises(ScanError, match=sentence):
-            refresh(OLD, made)
+            refresh(old, made)
 
 
-def test_scans_of_another_size_are_refused() -> None:
-    scan = short_scan(truth())
+def test_scans_of_another_size_are_refused(old: Calibration) -> None:
+    scan = short_scan(truth(old))
     counts = scan.counts.read(range(4))
     small = replace(
         scan,
@@ -433,46 +380,48 @@ def test_scans_of_another_size_are_refused() -> None:
         pixel_mask=np.zeros((10, SIDE), np.uint32),
     )
     with pytest.raises(ScanError, match="has 10 x 24 pixels and not 24 x 24"):
-        refresh(OLD, small)
+        refresh(old, small)
     fewer = replace(
         scan,
         counts=CountsInMemory(counts[:, :3]),
         thresholds_kev=scan.thresholds_kev[:3],
     )
     with pytest.raises(ScanError, match="has 3 thresholds and not 4"):
-        refresh(OLD, fewer)
+        refresh(old, fewer)
 
 
-def test_counts_that_no_small_movement_meets_are_refused() -> None:
-    scan = short_scan(truth())
+def test_counts_that_no_small_movement_meets_are_refused(old: Calibration) -> None:
+    scan = short_scan(truth(old))
     counts = scan.counts.read(range(4)).copy()
     empty = counts.copy()
     empty[1, 3] = 0
-    data = short_scan_data(OLD, scan.with_counts(empty), ALL)
+    data = short_scan_data(old, scan.with_counts(empty), ALL)
     with pytest.raises(ScanError, match="exposure 1 holds no counts in bin 4"):
-        common_drift(OLD, data)
-    far = short_scan(truth(shift_kev=np.array([0.0, 0.0, 0.0, 9.0])))
+        common_drift(old, data)
+    far = short_scan(truth(old, shift_kev=np.array([0.0, 0.0, 0.0, 9.0])))
     with pytest.raises(ScanError, match="thresholds moved by more than 3 keV"):
-        refresh(OLD, far)
+        refresh(old, far)
 
 
-def test_current_that_the_scan_does_not_give_is_the_calibrations() -> None:
-    scan = replace(short_scan(truth()), current_ma=None)
-    data = short_scan_data(OLD, scan, ALL)
+def test_current_that_the_scan_does_not_give_is_the_calibrations(
+    old: Calibration,
+) -> None:
+    scan = replace(short_scan(truth(old)), current_ma=None)
+    data = short_scan_data(old, scan, ALL)
     np.testing.assert_array_equal(data.current_ma, CURRENT_MA)
 
 
-def test_change_of_pooled_counts_is_their_derivative() -> None:
-    data = short_scan_data(OLD, short_scan(truth()), ALL)
+def test_change_of_pooled_counts_is_their_derivative(old: Calibration) -> None:
+    data = short_scan_data(old, short_scan(truth(old)), ALL)
     n = data.exposure.size
-    _, change = pooled(OLD, data, np.ones(n))
-    up, _ = pooled(OLD, data, np.full(n, np.exp(1e-3)))
-    down, _ = pooled(OLD, data, np.full(n, np.exp(-1e-3)))
+    _, change = pooled(old, data, np.ones(n))
+    up, _ = pooled(old, data, np.full(n, np.exp(1e-3)))
+    down, _ = pooled(old, data, np.full(n, np.exp(-1e-3)))
     np.testing.assert_allclose(change[..., 0], (up - down) / 2e-3, rtol=2e-3)
     for k in range(4):
         step = np.where(np.arange(4) == k, 0.01, 0.0)
-        up, _ = pooled(replace(OLD, levels_kev=LEVELS_KEV + step), data, np.ones(n))
-        down, _ = pooled(replace(OLD, levels_kev=LEVELS_KEV - step), data, np.ones(n))
+        up, _ = pooled(replace(old, levels_kev=LEVELS_KEV + step), data, np.ones(n))
+        down, _ = pooled(replace(old, levels_kev=LEVELS_KEV - step), data, np.ones(n))
         slope = (up - down) / 0.02
         np.testing.assert_allclose(
             change[..., 1 + k], slope, rtol=2e-3, atol=1e-3 * np.abs(slope).max()
