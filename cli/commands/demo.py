@@ -47,9 +47,10 @@ def _text(outcome: DemoOutcome) -> str:
     lines = [
         "An invented connector housing: nylon with an aluminium insert and steel pins.",
         f"check: {outcome.verdict}",
+        *(f"  - {text}" for text in outcome.exceptions),
         f"bad pixels: {outcome.bad_found} of {outcome.bad_true} found",
         f"thresholds: median error {outcome.threshold_error_kev:.2f} keV per pixel",
-        f"scatter between repeats over reported error: {outcome.error_ratio:.3f}",
+        f"scatter between repeats over reported error, 1 if true: {outcome.error_ratio:.3f}",
         "",
         f"{'region':18s}{'material':10s}{'truth':>8s}{'found':>9s}{'+-':>8s}{'':2s}"
         + f"{'one pixel +-':>12s}{'flagged':>9s}   (g/cm2)",

@@ -87,7 +87,7 @@ def _summary(
 ) -> dict[str, Any]:
     scan, truth = made.scan, made.truth
     exposures, thresholds, rows, columns = scan.shape
-    opens = scan.counts.read(scan.exposures("open"))
+    opens = scan.counts.read(scan.exposures("open")).mean(axis=(2, 3))
     return {
         "scan": str(output),
         "truth": None if truth_path is None else str(truth_path),
@@ -98,7 +98,7 @@ def _summary(
         "rows": rows,
         "columns": columns,
         "roles": {role: scan.role.count(role) for role in dict.fromkeys(scan.role)},
-        "open_counts": opens.mean(axis=(0, 2, 3)).tolist() if opens.size else None,
+        "open_counts": opens[opens[:, 0].argmax()].tolist() if opens.size else None,
         "bad_pixels": int(np.count_nonzero(truth.kind)),
         "seed": truth.seed,
         "detector_seed": truth.detector_seed,
@@ -116,7 +116,7 @@ def _text(summary: dict[str, Any]) -> str:
     ]
     if summary["open_counts"] is not None:
         means = ", ".join(f"{n:.0f}" for n in summary["open_counts"])
-        lines.append(f"mean counts of open exposures: {means}")
+        lines.append(f"mean counts of the brightest open exposure: {means}")
     lines.append(f"scan: {summary['scan']}")
     if summary["truth"] is not None:
         lines.append(f"truth: {summary['truth']}")

@@ -12,7 +12,14 @@ import numpy as np
 from spectral.calibration.calibration_file import read_calibration, write_calibration
 from spectral.calibration.calibrator import WedgeCalibrator
 from spectral.decomposition.decomposer import MaterialDecomposer
-from spectral.demo.scenario import REGIONS, WEDGE_TITLE, Scenario, build_scenario
+from spectral.demo.region_mean import region_mean
+from spectral.demo.scenario import (
+    PROFILE_ROW,
+    REGIONS,
+    WEDGE_TITLE,
+    Scenario,
+    build_scenario,
+)
 from spectral.errors import InputError, ScanError
 from spectral.reporting.report import write_report
 from spectral.scans.maps_file import write_maps
@@ -55,6 +62,8 @@ class DemoOutcome:
     regions : tuple of RegionResult
     verdict : str
         First line of the scan's check.
+    exceptions : tuple of str
+        What that line speaks of.
     threshold_error_kev : float
         Median absolute error of the learned thresholds over the good pixels.
     error_ratio : float
@@ -67,6 +76,7 @@ class DemoOutcome:
     files: dict[str, Path]
     regions: tuple[RegionResult, ...]
     verdict: str
+    exceptions: tuple[str, ...]
     threshold_error_kev: float
     error_ratio: float
     bad_found: int
@@ -125,12 +135,14 @@ def run_demo(
     lap("decompose")
     for source in ("wedge", "calibration", "maps"):
         page = next(k for k in files if k.startswith("page") and source in k)
-        write_report(files[source], files[page])
+        row = PROFILE_ROW if source == "maps" else None
+        write_report(files[source], files[page], row=row)
     lap("report")
     return DemoOutcome(
         files=files,
         regions=_regions(scenario, maps),
         verdict=check.verdict.value,
+        exceptions=check.exceptions,
         threshold_error_kev=_threshold_error(scenario, calibration),
         error_ratio=_error_ratio(maps),
         bad_found=int((scenario.bad & ~calibration.good).sum()),
@@ -173,31 +185,23 @@ def _made_here(wedge: Path) -> bool:
 
 
 def _regions(scenario: Scenario, maps: Maps) -> tuple[RegionResult, ...]:
-    """Mean of each region but air and pins, whose content is no plain mixture."""
+    """Truth and mean of each region; that of the pins is no mixture of the basis."""
     results = []
-    usable = (maps.flags == 0) & ~scenario.bad
     for index, name in enumerate(REGIONS):
-        inside = scenario.region == index
-        flagged = float((maps.flags[:, inside & ~scenario.bad] != 0).mean())
+        inside = (scenario.region == index) & ~scenario.bad
         for m, material in enumerate(maps.material):
-            chosen = usable & inside
-            found = maps.areal_density[:, m][chosen].astype(np.float64)
-            if found.size == 0:
+            found = region_mean(maps, inside, m)
+            if found is None:
                 continue
-            truth = np.broadcast_to(scenario.areal_density[m], usable.shape)[chosen]
-            single = maps.areal_density_errors[:, m][chosen]
-            own = maps.calibration_errors[:, m][chosen]
-            pixels = max(int(chosen.any(axis=0).sum()), 1)
-            error = np.sqrt(np.mean(single**2) / found.size + np.mean(own**2) / pixels)
             results.append(
                 RegionResult(
                     region=name,
                     material=material,
-                    truth=float(truth.mean()),
-                    found=float(found.mean()),
-                    error=float(error),
-                    single_error=float(np.median(single)),
-                    flagged=flagged,
+                    truth=float(scenario.areal_density[m][inside].mean()),
+                    found=found.value,
+                    error=found.error,
+                    single_error=found.single_error,
+                    flagged=found.flagged,
                 )
             )
     return tuple(results)

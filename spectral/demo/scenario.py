@@ -34,6 +34,8 @@ ALUMINIUM = Layer(name="Al", formula="Al", density_g_cm3=2.70)
 STEEL = Layer(name="steel", formula="Fe", density_g_cm3=7.87)
 REGIONS = ("air", "housing wall", "housing floor", "aluminium insert", "ramp", "pins")
 PIN_MM = 1.0
+PROFILE_ROW = 11
+"""A row through walls, floor, insert and ramp."""
 WEDGE_TITLE = "demonstration wedge scan (invented)"
 STACKS_MM = (
     (5.0, 0.0), (15.0, 0.0), (30.0, 0.0), (50.0, 0.0),

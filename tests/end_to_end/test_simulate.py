@@ -152,6 +152,16 @@ def test_same_seed_same_file(tmp_path: Path) -> None:
     assert (truth.seed, truth.detector_seed) == (3, 8)
 
 
+def test_open_counts_are_those_of_the_brightest(tmp_path: Path) -> None:
+    dim = '[[exposure]]\nrole = "open"\ncurrent_ma = 0.5\n'
+    at = SCRIPT.index("[[exposure]]")
+    script = written(tmp_path, SCRIPT[:at] + dim + SCRIPT[at:] + OBJECT)
+    done = command(script, "-o", tmp_path / "a.h5", "--json")
+    means = read_scan(tmp_path / "a.h5").counts.read([0, 2]).mean(axis=(2, 3))
+    assert means[0, 0] < 0.7 * means[1, 0]
+    assert json.loads(done.stdout)["open_counts"] == pytest.approx(means[1])
+
+
 def test_pixels_stay_and_photons_change(made: SimulatedScript, tmp_path: Path) -> None:
     other = simulate_script(
         written(tmp_path, (SCRIPT + OBJECT).replace("seed = 3", "seed = 4", 1))
