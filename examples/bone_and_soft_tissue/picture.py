@@ -17,6 +17,8 @@ if TYPE_CHECKING:
     from run import Field
 
 BONES_MM = (0.0, 1.0, 2.0, 4.0, 8.0)
+BANDS_MM = ("0", "1", "2", "4", "8", "0")
+TISSUES_MM = ("20", "40", "60", "80", "100")
 
 
 def draw(mean_mm: NDArray[np.float64], found: Sequence[Field], path: Path) -> None:
@@ -24,21 +26,20 @@ def draw(mean_mm: NDArray[np.float64], found: Sequence[Field], path: Path) -> No
     sheet = Sheet(4.0, width=13.0, columns=3, column_widths=(1.25, 1.0, 1.0))
     with page_style():
         left, middle, right = sheet.axes
-        rows, columns = mean_mm.shape
         image = left.imshow(
             mean_mm,
-            extent=(0.0, 4.0, 2.4, 0.0),
+            extent=(0.0, len(TISSUES_MM), len(BANDS_MM), 0.0),
             cmap=amount_scale(),
             vmin=0.0,
             vmax=9.0,
-            aspect="auto" if rows / columns != 0.6 else "equal",
+            aspect="auto",
         )
-        for k, tissue in enumerate((20, 40, 60, 80, 100)):
-            left.text(0.4 + 0.8 * k, 0.22, f"{tissue} mm", color="white", ha="center")
-        left.set_title("bone, mm, behind 20 to 100 mm of soft tissue")
-        left.set_xlabel("mm on the detector")
-        left.set_ylabel("mm")
-        sheet.figure.colorbar(image, ax=left, label="bone, mm", shrink=0.8)
+        left.set_xticks(np.arange(len(TISSUES_MM)) + 0.5, TISSUES_MM)
+        left.set_yticks(np.arange(len(BANDS_MM)) + 0.5, BANDS_MM)
+        left.set_title("bone found in each pixel")
+        left.set_xlabel("soft tissue drawn, mm")
+        left.set_ylabel("bone drawn, mm")
+        sheet.figure.colorbar(image, ax=left, label="bone found, mm")
         for k, (bone, colour) in enumerate(
             zip(BONES_MM, rank_colours(len(BONES_MM)), strict=True)
         ):
@@ -62,9 +63,9 @@ def draw(mean_mm: NDArray[np.float64], found: Sequence[Field], path: Path) -> No
                 label=label,
             )
         middle.axhline(0.0, color=MUTED, lw=0.8)
-        middle.set_title("mean of a field less drawn, 95 % intervals")
+        middle.set_title("mean of each field, with 95 % interval")
         middle.set_xlabel("soft tissue, mm")
-        middle.set_ylabel("bone, mm")
+        middle.set_ylabel("found less drawn, mm of bone")
         right.set_title("error of one pixel in one exposure")
         right.set_xlabel("soft tissue, mm")
         right.set_ylabel("one standard deviation, mm of bone")

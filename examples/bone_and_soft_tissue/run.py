@@ -5,7 +5,6 @@ Research data on a model of tissue: no medical device, no diagnosis.
 
 from __future__ import annotations
 
-import argparse
 import csv
 import sys
 from dataclasses import asdict, dataclass
@@ -15,13 +14,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 from picture import draw
 
-from spectral.calibration.calibration_file import read_calibration, write_calibration
-from spectral.calibration.calibrator import WedgeCalibrator
 from spectral.decomposition.decomposer import MaterialDecomposer
-from spectral.scans.maps_file import write_maps
-from spectral.scans.scan_writing import write_scan
-from spectral.scans.script import open_scan
-from spectral.virtual.script_scan import simulate_script
+from spectral.demo.region_mean import mean_of_repeats, region_mean
+from spectral.demo.rehearsal import Rehearsal
 
 if TYPE_CHECKING:
     from spectral.scans.maps import Maps
@@ -45,74 +40,44 @@ class Field:
 
 def main() -> None:
     """Simulate, calibrate, decompose, compare with what was drawn."""
-    parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--out", type=Path, default=Path("bone-and-soft-tissue"))
-    parser.add_argument("--pixels", type=int, nargs=2, metavar=("ROWS", "COLUMNS"))
-    parser.add_argument("--quick", action="store_true", help="a rougher calibration")
-    options = parser.parse_args()
-    out: Path = options.out
-    out.mkdir(parents=True, exist_ok=True)
-    pixels = tuple(options.pixels) if options.pixels else None
+    rehearsal = Rehearsal.from_words(__doc__, folder="bone-and-soft-tissue")
+    wedge = rehearsal.scan(HERE / "wedge.toml")
+    leg = rehearsal.scan(HERE / "leg.toml")
+    calibration = rehearsal.calibrator().fit(wedge.scan).calibration_
+    maps = MaterialDecomposer(calibration).decompose(leg.scan)
+    rehearsal.keep(calibration, maps)
 
-    wedge = simulate_script(HERE / "wedge.toml", pixels=pixels)
-    leg = simulate_script(HERE / "leg.toml", pixels=pixels)
-    write_scan(wedge.scan, out / "wedge.h5")
-    write_scan(leg.scan, out / "leg.h5")
-    calibrator = (
-        WedgeCalibrator(rounds=6, samples=256, leave_out=False)
-        if options.quick
-        else WedgeCalibrator()
-    )
-    write_calibration(
-        calibrator.fit(open_scan(out / "wedge.h5")).calibration_,
-        out / "calibration.h5",
-    )
-    calibration = read_calibration(out / "calibration.h5")
-    maps = MaterialDecomposer(calibration).decompose(open_scan(out / "leg.h5"))
-    write_maps(maps, out / "maps.h5")
-
-    per_mm = 0.1 * calibration.materials[BONE].density_g_cm3
-    density = np.array([0.1 * m.density_g_cm3 for m in calibration.materials])
-    found = fields(maps, leg.truth, density)
-    report(found, out)
-    usable = maps.flags == 0
-    picture = np.where(usable, maps.areal_density[:, BONE], np.nan)
-    count = usable.sum(axis=0)
-    total = np.nansum(picture, axis=0)
-    mean = np.where(count > 0, total / np.maximum(count, 1), np.nan) / per_mm
-    draw(mean, found, out / "bone.png")
+    mm = np.array([0.1 * m.density_g_cm3 for m in calibration.materials])
+    found = fields(maps, leg.truth, mm)
+    report(found, rehearsal.folder)
+    draw(mean_of_repeats(maps, BONE) / mm[BONE], found, rehearsal.folder / "bone.png")
 
 
-def fields(maps: Maps, truth: ScanTruth, density: np.ndarray) -> list[Field]:
+def fields(maps: Maps, truth: ScanTruth, mm: np.ndarray) -> list[Field]:
     """Each field of the object: mean over its pixels and all repeats.
 
-    The error holds the counting statistics of all estimates, and the calibration's
-    share, which repeats do not lessen.
+    Parameters
+    ----------
+    maps : Maps
+    truth : ScanTruth
+    mm : array, shape (material,), in g/cm2
+        What one millimetre of each material weighs.
     """
     result = []
-    usable = maps.flags == 0
-    for tissue, bone in {
-        (float(t), float(b)) for t, b in truth.object_areal_density.reshape(2, -1).T
-    }:
-        inside = (truth.object_areal_density[TISSUE] == tissue) & (
-            truth.object_areal_density[BONE] == bone
-        )
-        chosen = usable & inside
-        if not chosen.any():
+    drawn = truth.object_areal_density
+    for tissue, bone in {(float(t), float(b)) for t, b in drawn.reshape(2, -1).T}:
+        inside = (drawn[TISSUE] == tissue) & (drawn[BONE] == bone)
+        found = region_mean(maps, inside, BONE)
+        if found is None:
             continue
-        single = maps.areal_density_errors[:, BONE][chosen].astype(np.float64)
-        own = maps.calibration_errors[:, BONE][chosen].astype(np.float64)
-        pixels = int(chosen.any(axis=0).sum())
-        error = np.sqrt(np.mean(single**2) / single.size + np.mean(own**2) / pixels)
         result.append(
             Field(
-                tissue_mm=tissue / density[TISSUE],
-                bone_mm=bone / density[BONE],
-                found_mm=float(maps.areal_density[:, BONE][chosen].mean(dtype=float))
-                / density[BONE],
-                error_mm=float(error) / density[BONE],
-                pixel_error_mm=float(np.median(single)) / density[BONE],
-                flagged=1.0 - float(usable[:, inside & (truth.kind == 0)].mean()),
+                tissue_mm=tissue / mm[TISSUE],
+                bone_mm=bone / mm[BONE],
+                found_mm=found.value / mm[BONE],
+                error_mm=found.error / mm[BONE],
+                pixel_error_mm=found.single_error / mm[BONE],
+                flagged=found.flagged,
             )
         )
     return sorted(result, key=lambda f: (f.tissue_mm, f.bone_mm))

@@ -14,6 +14,7 @@ from spectral.reporting.palette import (
     marker,
     material_colour,
 )
+from spectral.reporting.panels import name_place
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -43,16 +44,9 @@ def draw(
         )
         for k, vial in enumerate(found):
             row, column = divmod(k, 3)
-            left.text(
-                0.6 + 1.2 * column,
-                0.1 + 1.2 * row,
-                f"{vial.prepared:g} mg/cm2",
-                ha="center",
-                va="center",
-                color="white",
-                fontsize=8,
-            )
-        left.set_title("iodine in the rack, mean of the repeats")
+            middle_mm = (0.6 + 1.2 * column, 0.6 + 1.2 * row)
+            name_place(left, *middle_mm, f"{vial.prepared:g} prepared")
+        left.set_title("iodine found in the rack, mg/cm2")
         left.set_xlabel("mm on the detector")
         left.set_ylabel("mm")
         sheet.figure.colorbar(image, ax=left, label="mg/cm2", shrink=0.8)

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import argparse
 import csv
 import sys
 from dataclasses import asdict, dataclass
@@ -12,13 +11,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 from picture import draw
 
-from spectral.calibration.calibration_file import read_calibration, write_calibration
-from spectral.calibration.calibrator import WedgeCalibrator
 from spectral.decomposition.decomposer import MaterialDecomposer
-from spectral.scans.maps_file import write_maps
-from spectral.scans.scan_writing import write_scan
-from spectral.scans.script import open_scan
-from spectral.virtual.script_scan import simulate_script
+from spectral.demo.region_mean import mean_of_repeats, region_mean
+from spectral.demo.rehearsal import Rehearsal
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -58,64 +53,36 @@ class Line:
 
 def main() -> None:
     """Simulate, calibrate with three materials, decompose, draw the line."""
-    parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--out", type=Path, default=Path("iodine-vials"))
-    parser.add_argument("--pixels", type=int, nargs=2, metavar=("ROWS", "COLUMNS"))
-    parser.add_argument("--quick", action="store_true", help="a rougher calibration")
-    options = parser.parse_args()
-    out: Path = options.out
-    out.mkdir(parents=True, exist_ok=True)
-    pixels = tuple(options.pixels) if options.pixels else None
-
-    wedge = simulate_script(HERE / "wedge.toml", pixels=pixels)
-    rack = simulate_script(HERE / "rack.toml", pixels=pixels)
-    write_scan(wedge.scan, out / "wedge.h5")
-    write_scan(rack.scan, out / "rack.h5")
-    calibrator = (
-        WedgeCalibrator(rounds=6, samples=256, leave_out=False)
-        if options.quick
-        else WedgeCalibrator()
-    )
-    write_calibration(
-        calibrator.fit(open_scan(out / "wedge.h5")).calibration_,
-        out / "calibration.h5",
-    )
-    calibration = read_calibration(out / "calibration.h5")
-    maps = MaterialDecomposer(calibration).decompose(open_scan(out / "rack.h5"))
-    write_maps(maps, out / "maps.h5")
+    rehearsal = Rehearsal.from_words(__doc__, folder="iodine-vials")
+    wedge = rehearsal.scan(HERE / "wedge.toml")
+    rack = rehearsal.scan(HERE / "rack.toml")
+    calibration = rehearsal.calibrator().fit(wedge.scan).calibration_
+    maps = MaterialDecomposer(calibration).decompose(rack.scan)
+    rehearsal.keep(calibration, maps)
 
     found = vials(maps, rack.truth)
     line = straight_line(found)
-    report(found, line, out)
-    usable = maps.flags == 0
-    count = usable.sum(axis=0)
-    total = np.where(usable, maps.areal_density[:, IODINE], 0.0).sum(axis=0)
-    mean = np.where(count > 0, TO_MG * total / np.maximum(count, 1), np.nan)
-    draw(mean, found, line, out / "iodine.png")
+    report(found, line, rehearsal.folder)
+    iodine = TO_MG * mean_of_repeats(maps, IODINE)
+    draw(iodine, found, line, rehearsal.folder / "iodine.png")
 
 
 def vials(maps: Maps, truth: ScanTruth) -> list[Vial]:
     """Mean iodine of each vial over its pixels and all repeats."""
     result = []
-    usable = maps.flags == 0
     for index, name in enumerate(truth.region_name):
         inside = truth.region == index
-        chosen = usable & inside
-        if not name.endswith("mg/cm2") or not chosen.any():
+        found = region_mean(maps, inside, IODINE)
+        if not name.endswith("mg/cm2") or found is None:
             continue
-        single = maps.areal_density_errors[:, IODINE][chosen].astype(np.float64)
-        own = maps.calibration_errors[:, IODINE][chosen].astype(np.float64)
-        pixels = int(chosen.any(axis=0).sum())
-        error = np.sqrt(np.mean(single**2) / single.size + np.mean(own**2) / pixels)
-        found = maps.areal_density[:, IODINE][chosen].mean(dtype=float)
+        prepared = truth.object_areal_density[IODINE][inside].mean()
         result.append(
             Vial(
-                prepared=TO_MG
-                * float(truth.object_areal_density[IODINE][inside].mean()),
-                found=TO_MG * float(found),
-                error=TO_MG * float(error),
-                limit=TO_MG * DETECTION * float(error),
-                pixel_error=TO_MG * float(np.median(single)),
+                prepared=TO_MG * float(prepared),
+                found=TO_MG * found.value,
+                error=TO_MG * found.error,
+                limit=TO_MG * DETECTION * found.error,
+                pixel_error=TO_MG * found.single_error,
             )
         )
     return sorted(result, key=lambda v: v.prepared)

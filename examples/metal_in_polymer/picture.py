@@ -8,6 +8,7 @@ import numpy as np
 
 from spectral.reporting.drawing import Sheet, page_style
 from spectral.reporting.palette import INK, MUTED, amount_scale, marker, material_colour
+from spectral.reporting.panels import name_place
 
 if TYPE_CHECKING:
     from collections.abc import Sequence
@@ -41,19 +42,18 @@ def draw(
             colors="white",
             linewidths=1.2,
         )
-        left.set_title("what stands out of the block (white line: found)")
+        left.set_title(
+            "what stands out of the block, and which metal it is found to be"
+        )
         left.set_xlabel("mm on the detector")
         left.set_ylabel("mm")
         for k, item in enumerate(inclusions):
             row, column = divmod(k, 5)
-            left.text(
-                0.48 + 0.96 * column,
-                0.13 + 2.2 * row,
-                f"{item.metal} {item.true_mm:g} mm",
-                color="white",
-                ha="center",
-                fontsize=8,
-            )
+            drawn = f"{item.metal} {item.true_mm:g} mm"
+            metal = "either metal" if item.named == "either" else item.named
+            said = f"found: {metal}" if item.found else "not found"
+            name_place(left, 0.48 + 0.96 * column, (0.12, 2.2)[row], drawn)
+            name_place(left, 0.48 + 0.96 * column, (1.2, 2.32)[row], said)
         sheet.figure.colorbar(
             image, ax=left, label="standard errors", extend="max", shrink=0.8
         )

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import argparse
 import csv
 import sys
 from dataclasses import asdict, dataclass
@@ -13,14 +12,9 @@ import numpy as np
 from picture import draw
 from scipy import ndimage
 
-from spectral.calibration.calibration_file import read_calibration, write_calibration
-from spectral.calibration.calibrator import WedgeCalibrator
 from spectral.decomposition.decomposer import MaterialDecomposer
+from spectral.demo.rehearsal import Rehearsal
 from spectral.physics.materials import find_material
-from spectral.scans.maps_file import write_maps
-from spectral.scans.scan_writing import write_scan
-from spectral.scans.script import open_scan
-from spectral.virtual.script_scan import simulate_script
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -56,31 +50,12 @@ class Inclusion:
 
 def main() -> None:
     """Simulate, calibrate, decompose, search, draw."""
-    parser = argparse.ArgumentParser(description=__doc__)
-    parser.add_argument("--out", type=Path, default=Path("metal-in-polymer"))
-    parser.add_argument("--pixels", type=int, nargs=2, metavar=("ROWS", "COLUMNS"))
-    parser.add_argument("--quick", action="store_true", help="a rougher calibration")
-    options = parser.parse_args()
-    out: Path = options.out
-    out.mkdir(parents=True, exist_ok=True)
-    pixels = tuple(options.pixels) if options.pixels else None
-
-    wedge = simulate_script(HERE / "wedge.toml", pixels=pixels)
-    part = simulate_script(HERE / "part.toml", pixels=pixels)
-    write_scan(wedge.scan, out / "wedge.h5")
-    write_scan(part.scan, out / "part.h5")
-    calibrator = (
-        WedgeCalibrator(rounds=6, samples=256, leave_out=False)
-        if options.quick
-        else WedgeCalibrator()
-    )
-    write_calibration(
-        calibrator.fit(open_scan(out / "wedge.h5")).calibration_,
-        out / "calibration.h5",
-    )
-    calibration = read_calibration(out / "calibration.h5")
-    maps = MaterialDecomposer(calibration).decompose(open_scan(out / "part.h5"))
-    write_maps(maps, out / "maps.h5")
+    rehearsal = Rehearsal.from_words(__doc__, folder="metal-in-polymer")
+    wedge = rehearsal.scan(HERE / "wedge.toml")
+    part = rehearsal.scan(HERE / "part.toml")
+    calibration = rehearsal.calibrator().fit(wedge.scan).calibration_
+    maps = MaterialDecomposer(calibration).decompose(part.scan)
+    rehearsal.keep(calibration, maps)
 
     rows, columns = maps.deviance.shape[1:]
     pixel_mm = PIXEL_MM * 24 / rows
@@ -109,8 +84,8 @@ def main() -> None:
                     limit_mm=DETECTION * error,
                 )
             )
-    report(inclusions, out)
-    draw(signal, ALARM, inclusions, pixel_mm, out / "inclusions.png")
+    report(inclusions, rehearsal.folder)
+    draw(signal, ALARM, inclusions, pixel_mm, rehearsal.folder / "inclusions.png")
 
 
 def departures(maps: Maps) -> tuple[NDArray[np.float64], NDArray[np.float64]]:

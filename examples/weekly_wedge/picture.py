@@ -59,6 +59,10 @@ def main(folder: Path) -> None:
             lw=1.2,
             ds="steps-mid",
         )
+        middle.errorbar(
+            0.9 * planted.shape[1], 0.2, yerr=1.96 * change.mean_error_kev.mean(),
+            color=MUTED, capsize=3, label="what moves all columns alike, 95 %",
+        )  # fmt: skip
         middle.set_title("drift from column to column")
         middle.set_xlabel("column")
         middle.set_ylabel("keV")

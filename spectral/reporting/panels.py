@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
+from matplotlib import patheffects
 from matplotlib.colors import Normalize
 from matplotlib.patches import Patch
 
@@ -29,6 +30,7 @@ if TYPE_CHECKING:
 
 MOST_POINTS = 192 * 192
 _FLAT = 8
+OUTLINE = "#14181d"
 _NARROW_TITLE = 18
 _LOW_PERCENT, _HIGH_PERCENT = 1.0, 99.0
 LIMITS_NOTE = (
@@ -270,6 +272,14 @@ def note(axes: Axes, text: str, *, height: float = 0.98) -> None:
         fontsize=7.5,
         color=MUTED,
     )
+
+
+def name_place(axes: Axes, x: float, y: float, text: str) -> None:
+    """Words on a map, to be read on dark and on bright colours."""
+    axes.text(
+        x, y, text, color="white", ha="center", va="center", fontsize=8.5,
+        path_effects=[patheffects.withStroke(linewidth=2.2, foreground=OUTLINE)],
+    )  # fmt: skip
 
 
 def mark_row(axes: Axes, row: int) -> None:
