@@ -22,6 +22,22 @@ STATE = 6
 # state: 0 signal, 1 its rising part, 2 time of last arrival, 3 oldest, 4 next, 5 held
 
 
+@njit(nogil=True, cache=True, error_model="numpy", inline="always")
+def _count(
+    below: float,
+    above: float,
+    levels: NDArray[np.float64],
+    counts: NDArray[np.int64],
+) -> None:
+    """Count a rise through the levels between two values of the signal.
+
+    Inlined: as a call it doubles the time of a train of CR-RC pulses.
+    """
+    for k in range(levels.size):
+        if below < levels[k] <= above:
+            counts[k] += 1
+
+
 @njit(nogil=True, cache=True, error_model="numpy")
 def _rectangles(
     times: NDArray[np.float64],
@@ -48,9 +64,7 @@ def _rectangles(
             signal = 0.0
         risen = signal + heights[i]
         if t >= 0.0 and risen >= lowest:
-            for k in range(levels.size):
-                if signal < levels[k] <= risen:
-                    counts[k] += 1
+            _count(signal, risen, levels, counts)
         signal = risen
         ring[0, following] = t + width
         ring[1, following] = heights[i]
@@ -79,9 +93,7 @@ def _exponentials(
         last = t
         risen = signal + heights[i]
         if t >= 0.0 and risen >= lowest:
-            for k in range(levels.size):
-                if signal < levels[k] <= risen:
-                    counts[k] += 1
+            _count(signal, risen, levels, counts)
         signal = risen
     state[0], state[2] = signal, last
 
@@ -101,9 +113,7 @@ def _rise(
         return
     s = min(1.0 - signal / rising, span)
     peak = (signal + rising * s) * math.exp(-s)
-    for k in range(levels.size):
-        if signal < levels[k] <= peak:
-            counts[k] += 1
+    _count(signal, peak, levels, counts)
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
