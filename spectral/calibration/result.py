@@ -67,7 +67,8 @@ class Promise:
         Standard error of one pixel in one such exposure.
     fixed_pattern : array, shape (material,)
         Expected spread between pixels that repeats do not remove, over the
-        single-exposure error; median over the steps.
+        single-exposure error; median over objects half-way from the steps to their
+        middle, without what the open exposures of an object scan add.
     """
 
     exposure: NDArray[np.int64]
