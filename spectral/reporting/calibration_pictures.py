@@ -17,7 +17,6 @@ from spectral.reporting.drawing import Picture, Sheet
 from spectral.reporting.maps_pictures import map_height
 from spectral.reporting.maps_summary import median
 from spectral.reporting.palette import (
-    INK,
     MUTED,
     amount_scale,
     rank_colours,
@@ -125,9 +124,7 @@ def _draw_offsets(
         limits=limits,
         bins=32,
     )
-    # as high as the bars: above them a remark may stand
-    top = 0.8 if axes.texts else 1.0
-    axes.axvline(float(found.mean[threshold]), ymax=top, color=INK, linewidth=1.0)
+    panels.line_over_bars(axes, float(found.mean[threshold]))
     axes.locator_params(nbins=4)
 
 

@@ -136,7 +136,7 @@ def _figures(seen: CalibrationComparison) -> list[KeyFigure]:
         KeyFigure(
             name=f"clearest change of a threshold ({k + 1})",
             text=f"{with_error(mean, error, sign=True)} keV",
-            remark="mean of the pixels",
+            remark="median pixel",
             value=mean,
         ),
         KeyFigure(
@@ -224,7 +224,7 @@ def _threshold_table(seen: CalibrationComparison) -> Table:
         header=(
             "threshold",
             "setting",
-            "new minus old, mean",
+            "new minus old, median pixel",
             "spread between pixels",
             "spread expected of unchanged pixels",
             "ratio",

@@ -10,7 +10,7 @@ from spectral.reporting import panels
 from spectral.reporting.drawing import Picture, Sheet
 from spectral.reporting.maps_pictures import map_height
 from spectral.reporting.maps_summary import median
-from spectral.reporting.palette import INK, MUTED, amount_scale, rank_colours
+from spectral.reporting.palette import INK, amount_scale, rank_colours
 from spectral.reporting.wording import fixed, listed, number, percent
 
 if TYPE_CHECKING:
@@ -21,8 +21,8 @@ if TYPE_CHECKING:
 _MOST_IN_ROW = 5
 _CHANGE_NOTE = (
     "New minus old true threshold of every pixel that is good in both. Histograms show "
-    "the mean as a line; the bar beneath it is as wide as twice the spread that the "
-    "errors of both calibrations explain."
+    "the median pixel as a line; the bar beneath it is as wide as twice the spread "
+    "that the errors of both calibrations explain."
 )
 
 
@@ -73,7 +73,7 @@ def _threshold_sheet(
             sheet.axes[place].set_ylabel("")
             maps[place].set_ylabel("")
     words = [
-        f"{number(float(comparison.thresholds_kev[k]))} keV: mean "
+        f"{number(float(comparison.thresholds_kev[k]))} keV: median pixel "
         f"{fixed(float(comparison.mean_kev[k]), 3, sign=True)} keV, spread "
         f"{fixed(float(comparison.spread_kev[k]), 3)} keV"
         for k in chosen
@@ -93,7 +93,7 @@ def _draw_change(
     threshold: int,
     limits: panels.Limits,
 ) -> None:
-    """Histogram of one threshold's change, its mean and expected spread."""
+    """Histogram of one threshold's change, its median and expected spread."""
     panels.draw_histogram(
         axes,
         comparison.change_kev[threshold],
@@ -106,13 +106,13 @@ def _draw_change(
         limits=panels.Limits(1.15 * limits.low, 1.15 * limits.high),
         bins=32,
     )
-    mean = float(comparison.mean_kev[threshold])
+    middle = float(comparison.mean_kev[threshold])
     expected = float(comparison.expected_spread_kev[threshold])
-    axes.axvline(0.0, color=MUTED, linewidth=0.8, linestyle=":")
-    axes.axvline(mean, color=INK, linewidth=1.0)
+    panels.line_over_bars(axes, 0.0, middle=False)
+    panels.line_over_bars(axes, middle)
     top = axes.get_ylim()[1]
     axes.plot(
-        [mean - expected, mean + expected], [0.06 * top] * 2, color=INK, linewidth=2.5,
+        [middle - expected, middle + expected], [0.06 * top] * 2, color=INK, linewidth=2.5,
         solid_capstyle="butt",
     )  # fmt: skip
     axes.locator_params(nbins=4)

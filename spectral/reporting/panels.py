@@ -15,6 +15,7 @@ from matplotlib.patches import Patch
 from spectral.reporting.palette import (
     ACCENT,
     GRID,
+    INK,
     MUTED,
     NO_VALUE,
     signed_scale,
@@ -290,6 +291,15 @@ def mark_row(axes: Axes, row: int) -> None:
             place, row, marker=shape, markersize=6.0, color=ACCENT, linestyle="none",
             clip_on=False, zorder=5,
         )  # fmt: skip
+
+
+def line_over_bars(axes: Axes, value: float, *, middle: bool = True) -> None:
+    """A vertical line as high as a histogram's bars: a remark may stand above them."""
+    top = 0.8 if axes.texts else 1.0
+    if middle:
+        axes.axvline(value, ymax=top, color=INK, linewidth=1.0)
+    else:
+        axes.axvline(value, ymax=top, color=MUTED, linewidth=0.8, linestyle=":")
 
 
 def mark_value(axes: Axes, value: float, text: str) -> None:
