@@ -132,4 +132,8 @@ def decompose(
         say(f"went on from {run.resumed} of {run.blocks} blocks of an earlier run")
     shown = np.unique(np.linspace(0, run.exposures - 1, SHOWN).astype(int))
     maps = read_maps(output, which=shown.tolist())
-    show(maps_summary(maps), maps_text(maps), as_json=as_json)
+    show(
+        maps_summary(maps, exposures=run.exposures),
+        maps_text(maps, exposures=run.exposures),
+        as_json=as_json,
+    )

@@ -13,8 +13,15 @@ if TYPE_CHECKING:
     from spectral.scans.maps import Maps
 
 
-def maps_summary(maps: Maps) -> dict[str, Any]:
-    """Numbers that describe maps, ready for JSON."""
+def maps_summary(maps: Maps, *, exposures: int | None = None) -> dict[str, Any]:
+    """Numbers that describe maps, ready for JSON.
+
+    Parameters
+    ----------
+    maps : Maps
+    exposures : int, optional
+        How many the series has, if the maps are only some of them.
+    """
     good = maps.flags == 0
     per_material = {}
     for j, name in enumerate(maps.material):
@@ -27,7 +34,8 @@ def maps_summary(maps: Maps) -> dict[str, Any]:
             ),
         }
     return {
-        "exposures": len(maps.exposure),
+        "exposures": len(maps.exposure) if exposures is None else exposures,
+        "summed_up": len(maps.exposure),
         "pixels": int(good[0].size),
         "good_share": round(float(good.mean()), 5),
         "flags": {
@@ -45,13 +53,15 @@ def _rounded(values: Any, how: Any = np.median) -> float | None:
     return round(float(how(values)), 6) if values.size else None
 
 
-def maps_text(maps: Maps) -> str:
-    """One screen of text about maps."""
-    s = maps_summary(maps)
+def maps_text(maps: Maps, *, exposures: int | None = None) -> str:
+    """One screen of text about maps; arguments as `maps_summary`."""
+    s = maps_summary(maps, exposures=exposures)
     lines = [
         f"{s['exposures']} exposures of {s['pixels']} pixels decomposed; "
         + f"{100 * s['good_share']:.2f} % of the estimates carry no flag"
     ]
+    if s["summed_up"] < s["exposures"]:
+        lines.append(f"figures from {s['summed_up']} of them, spread over the series")
     meanings = {str(flag.name): text for flag, text in MEANING.items()}
     lines.extend(
         f"  {100 * share:.2f} % {name}: {meanings[name]}"

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import importlib
+import json
 from dataclasses import replace
 from importlib.metadata import entry_points
 from typing import TYPE_CHECKING
@@ -168,6 +170,22 @@ WRONG_EXPOSURES = [
     ((3, -1), "exposures 0 to 6 exist, asked for -1"),
     ((0,), "exposure 0 is dark: it shows no object"),
 ]
+
+
+def test_a_series_is_told_whole_where_few_of_it_are_summed_up(
+    folder: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    module = importlib.import_module("spectral_cli.commands.decompose")
+    words = (folder / "calibration.h5", folder / "object.h5", "-o", folder / "m.h5")
+    whole = command("decompose", *words).stdout
+    assert whole.startswith("2 exposures of 48 pixels decomposed")
+    assert "figures from" not in whole
+    monkeypatch.setattr(module, "SHOWN", 1)
+    done = command("decompose", *words)
+    assert done.stdout.startswith("2 exposures of 48 pixels decomposed")
+    assert "figures from 1 of them, spread over the series" in done.stdout
+    found = json.loads(command("decompose", *words, "--json").stdout)
+    assert (found["exposures"], found["summed_up"]) == (2, 1)
 
 
 def test_an_object_scan_of_another_setting_is_refused(
