@@ -55,7 +55,7 @@ def sigmas_outside(
     covariance: NDArray[np.float64],
     facets: NDArray[np.float64],
 ) -> NDArray[np.float64]:
-    """Distance outside the domain in standard errors, shape (pixel,); <= 0 inside.
+    """Distance outside the domain in standard errors, shape (pixel,); -inf inside.
 
     Parameters
     ----------
@@ -63,12 +63,15 @@ def sigmas_outside(
     covariance : array, shape (pixel, material, material)
     facets : array, shape (facet, material + 1)
     """
-    normal = facets[:, :-1]
-    beyond = estimate @ normal.T + facets[:, -1]
-    across = np.einsum("fi,fj->ijf", normal, normal).reshape(-1, len(facets))
-    variance = covariance.reshape(len(covariance), -1) @ across
-    spread = np.sqrt(np.maximum(variance, 1e-30))
-    return np.asarray((beyond / spread).max(axis=1))
+    outside = np.full(len(estimate), -np.inf)
+    for facet in facets:
+        normal, offset = facet[:-1], facet[-1]
+        beyond = estimate @ normal + offset
+        here = np.flatnonzero(~(beyond <= 0.0))
+        variance = np.einsum("i,pij,j->p", normal, covariance[here], normal)
+        sigmas = beyond[here] / np.sqrt(np.maximum(variance, 1e-30))
+        outside[here] = np.maximum(outside[here], sigmas)
+    return outside
 
 
 def misfit_limit(freedom: int, extra: NDArray[np.float64]) -> NDArray[np.float64]:

@@ -24,11 +24,13 @@ if TYPE_CHECKING:
     Weight = NDArray[np.float64] | NDArray[np.float32]
 
 
-# Sums may be taken in any order here, so that one instruction serves several nodes.
+# Sums may be taken in any order, so that one instruction serves several nodes. All of
+# it is one compiled function: a part compiled twice, alone and within another, could
+# then give two roundings, and a resumed run other last digits than an undisturbed one.
 ANY_ORDER = {"reassoc", "contract", "nsz"}
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=ANY_ORDER)
+@njit(nogil=True, error_model="numpy", inline="always")
 def _read(
     tables: Single,
     b: int,
@@ -69,7 +71,7 @@ def _read(
     out[0], out[1], out[2], out[3] = rate, variance, dead, along
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=ANY_ORDER)
+@njit(nogil=True, error_model="numpy", inline="always")
 def _expect(
     p: int,
     weight: Weight,
@@ -94,7 +96,7 @@ def _expect(
             slope[b, m] = -total
 
 
-@njit(nogil=True, cache=True, error_model="numpy")
+@njit(nogil=True, error_model="numpy", inline="always")
 def _move(
     p: int,
     tables: Single,
@@ -133,7 +135,7 @@ def _move(
             moved[b, size - 1] += sign * read[2]
 
 
-@njit(nogil=True, cache=True, error_model="numpy", fastmath=ANY_ORDER)
+@njit(nogil=True, error_model="numpy", inline="always")
 def _variance(p: int, spread: NDArray[np.float32], vectors: Array, row: int) -> float:
     """Variance of a sum over the pixel's departures, weighted by a row of vectors."""
     total = 0.0
@@ -145,7 +147,7 @@ def _variance(p: int, spread: NDArray[np.float32], vectors: Array, row: int) -> 
     return total
 
 
-@njit(nogil=True, cache=True, error_model="numpy")
+@njit(nogil=True, cache=True, error_model="numpy", fastmath=ANY_ORDER)
 def shifts(
     tables: Single,
     levels: Array,

@@ -72,11 +72,11 @@ def count_faults(
     at_limit = (counts >= count_limit) & ~no_count
     faults = np.where(no_count.any(1), int(CountFault.NOT_A_COUNT), 0)
     faults |= np.where(at_limit.any(1), int(CountFault.AT_LIMIT), 0)
-    lower = counts[:, :-1].astype(np.float64)
-    upper = counts[:, 1:].astype(np.float64)
-    rises = upper - lower > _RISE_DEVIATIONS * np.sqrt(upper + lower)
     usable = ~(no_count | at_limit)
-    rises &= usable[:, :-1] & usable[:, 1:]
+    rises = (counts[:, 1:] > counts[:, :-1]) & usable[:, :-1] & usable[:, 1:]
+    lower = counts[:, :-1][rises].astype(np.float64)
+    upper = counts[:, 1:][rises].astype(np.float64)
+    rises[rises] = upper - lower > _RISE_DEVIATIONS * np.sqrt(upper + lower)
     faults |= np.where(rises.any(1), int(CountFault.RISING), 0)
     return faults.astype(np.uint8)
 

@@ -81,8 +81,8 @@ def test_distance_outside_is_in_standard_errors() -> None:
     covariance = np.array([[0.25, 0.0], [0.0, 0.01]])
     estimate = np.array([[9.0, 1.0], [4.0, 2.3], [4.0, 1.0], [-1.5, 1.0], [9.0, 2.3]])
     found = sigmas_outside(estimate, np.tile(covariance, (5, 1, 1)), facets)
-    # 1/0.5, 0.3/0.1, the nearest side of the middle: -10, 1.5/0.5, the larger of two
-    np.testing.assert_allclose(found, [2.0, 3.0, -8.0, 3.0, 3.0], atol=1e-6)
+    # 1/0.5, 0.3/0.1, inside, 1.5/0.5, the larger of two
+    np.testing.assert_allclose(found, [2.0, 3.0, -np.inf, 3.0, 3.0], atol=1e-6)
 
 
 def test_correlated_errors_are_taken_across_the_facet() -> None:
