@@ -83,6 +83,9 @@ def ends_well(command: Callable[P, None]) -> Callable[P, None]:
         except MemoryError as error:
             message = "there is not enough memory for this scan"
             raise DataError(message) from error
+        except KeyboardInterrupt:
+            say("interrupted before the end")
+            raise click.exceptions.Exit(INTERRUPTED) from None
 
     return wrapped
 

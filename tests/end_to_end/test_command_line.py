@@ -204,3 +204,17 @@ def test_progress_is_shown_on_a_terminal_only(
     with progress("exposures") as tell:
         tell(1, 2)
     assert "exposures: 1 of 2" in capsys.readouterr().err
+
+
+def test_an_interruption_is_none_of_the_data(
+    capsys: pytest.CaptureFixture[str],
+) -> None:
+    """130 as shells have it, 128 and the signal's number (common practice)."""
+
+    def interrupted() -> None:
+        raise KeyboardInterrupt
+
+    with pytest.raises(click.exceptions.Exit) as end:
+        ends_well(interrupted)()
+    assert end.value.exit_code == 130
+    assert capsys.readouterr().err.strip() == "interrupted before the end"
