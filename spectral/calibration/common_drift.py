@@ -129,10 +129,7 @@ def common_drift(
     stack. Source: A. C. Aitken, Proc. R. Soc. Edinburgh 55 (1935) 42.
     """
     counts = data.bins.sum(axis=0)
-    if np.any(counts <= 0.0):
-        e, b = np.argwhere(counts <= 0.0)[0]
-        msg = f"exposure {data.exposure[e]} holds no counts in bin {b + 1} of any pixel"
-        raise ScanError(msg)
+    _refuse_empty(data, counts)
     return met_by(
         calibration,
         data,
@@ -140,6 +137,14 @@ def common_drift(
         log_covariance(calibration, data, counts),
         shift_prior_kev=shift_prior_kev,
     )
+
+
+def _refuse_empty(data: WedgeData, counts: NDArray[np.float64]) -> None:
+    empty = np.argwhere(~(counts > 0.0))
+    if len(empty):
+        e, b = empty[0]
+        msg = f"exposure {data.exposure[e]} holds no counts in bin {b + 1} of any pixel"
+        raise ScanError(msg)
 
 
 def met_by(
@@ -162,11 +167,13 @@ def met_by(
         Of their logarithm.
     shift_prior_kev : float, in keV
     """
+    _refuse_empty(data, counts)
     problem = _Problem(calibration, data, np.log(counts), covariance, shift_prior_kev)
     first, _ = problem.at(np.zeros(problem.unknowns))
     nothing = np.zeros(problem.unknowns)
     times = counts.sum(axis=1) / first.sum(axis=1)
-    absurd = (times > MOST_OUTPUT) | (times < 1.0 / MOST_OUTPUT)
+    # of expected counts that are no number neither holds
+    absurd = ~((times <= MOST_OUTPUT) & (times >= 1.0 / MOST_OUTPUT))
     if absurd.any():
         e = int(np.argmax(absurd))
         msg = (

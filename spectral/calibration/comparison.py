@@ -10,7 +10,7 @@ from scipy import stats
 
 from spectral.calibration.matching import calibrations_differ
 from spectral.calibration.mean_change import MeanChange, mean_change
-from spectral.errors import CalibrationError
+from spectral.errors import CalibrationError, ScanError
 from spectral.scans.bad_pixels import PixelReason
 
 if TYPE_CHECKING:
@@ -144,7 +144,7 @@ def compare(
     ------
     CalibrationError
         If they are not of the same pixels, thresholds, voltage, filters and
-        materials, or no pixel is good in both.
+        materials, no pixel is good in both, or no movement turns one into the other.
     """
     differs = calibrations_differ(new, old)
     if differs:
@@ -160,7 +160,15 @@ def compare(
             "compare; calibrate again from a scan with sound pixels"
         )
         raise CalibrationError(msg)
-    average = mean_change(old, new)
+    try:
+        average = mean_change(old, new)
+    except ScanError as error:
+        msg = (
+            f"{names[1]} cannot be compared with {names[0]}: no small movement of the "
+            "average pixel turns one into the other; are they of one detector, and "
+            "both whole?"
+        )
+        raise CalibrationError(msg) from error
     change = new.departures[both] - old.departures[both]
     middle = np.median(change, axis=0)
     expected, chi_square, freedom = _expected(old, new, both, change - middle)

@@ -244,6 +244,18 @@ def test_other_settings_are_refused(old: Calibration, new: Calibration) -> None:
         compare(old, all_bad, names=("a.h5", "b.h5"))
 
 
+def test_calibrations_that_no_movement_joins_are_refused(
+    old: Calibration, new: Calibration
+) -> None:
+    words = r"^b\.h5 cannot be compared with a\.h5: no small movement of the average"
+    for other in (
+        replace(new, photons_per_mas=1e8),
+        replace(new, levels_kev=new.levels_kev + np.array([0.0, 0.0, 0.0, 9.0])),
+    ):
+        with pytest.raises(CalibrationError, match=words):
+            compare(old, other, names=("a.h5", "b.h5"))
+
+
 def test_what_limits_the_comparison_is_noted(
     old: Calibration, new: Calibration
 ) -> None:
