@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     from numpy.typing import ArrayLike, NDArray
 
     Array = NDArray[np.float64]
+    Weight = NDArray[np.float64] | NDArray[np.float32]
 
 
 def dead_fraction(dead_time_s: float, count_time_s: float) -> float:
@@ -60,7 +61,7 @@ def dead_fraction(dead_time_s: float, count_time_s: float) -> float:
     return 2.0 * x - x * x
 
 
-def expected_counts(areal_density: Array, weight: Array, attenuation: Array) -> Array:
+def expected_counts(areal_density: Array, weight: Weight, attenuation: Array) -> Array:
     """Expected counts of each bin.
 
     Parameters
@@ -80,7 +81,7 @@ def expected_counts(areal_density: Array, weight: Array, attenuation: Array) -> 
 
 
 def count_derivatives(
-    areal_density: Array, weight: Array, attenuation: Array
+    areal_density: Array, weight: Weight, attenuation: Array
 ) -> tuple[Array, Array]:
     """First and second derivatives of the expected counts by areal density.
 

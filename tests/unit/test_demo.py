@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 from dataclasses import replace
+from importlib import import_module
 from pathlib import Path
 
 import numpy as np
 import pytest
-from spectral_cli.commands.demo import _text
 
 from spectral.demo.run import DemoOutcome, RegionResult, _regions
 from spectral.demo.scenario import REGIONS, Scenario
 from spectral.scans.maps import Maps
+
+_text = import_module("spectral_cli.commands.demo")._text
 
 
 @pytest.fixture

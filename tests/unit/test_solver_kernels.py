@@ -12,10 +12,11 @@ from spectral.kernels import fisher_scoring, fisher_scoring_numpy
 from spectral.kernels.elementary import exponential, logarithm
 
 Array = NDArray[np.float64]
+Real = NDArray[np.float64] | NDArray[np.float32]
 
 
 @njit(error_model="numpy")
-def _both(x: Array, y: Array, e: Array, ln: Array) -> None:
+def _both(x: Real, y: Real, e: Real, ln: Real) -> None:
     for i in range(x.size):
         e[i] = exponential(x[i])
         ln[i] = logarithm(y[i])
