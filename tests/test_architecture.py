@@ -31,10 +31,7 @@ LOOKS_AT: dict[str, set[str]] = {
     "scans": set(),
     "calibration": {"forward", "physics", "kernels", "scans"},
     "decomposition": {"calibration", "forward", "physics", "kernels", "scans"},
-    "planning": {"calibration", "decomposition", "forward", "physics", "scans"}
-    | {"kernels"},
-    "reporting": {"decomposition", "calibration", "forward", "physics", "scans"}
-    | {"planning"},
+    "reporting": {"decomposition", "calibration", "forward", "physics", "scans"},
     "demo": {"reporting", "decomposition", "calibration", "forward", "physics"}
     | {"virtual", "scans"},
     "virtual": {
