@@ -38,7 +38,9 @@ The fixed facts stand once, then each exposure with its role, layers and images:
     repeats = 2
 
 A pattern may hold {exposure}, {threshold}, {threshold_kev}, {frame}, {step} and
-{repeat}, with a format as in {exposure:03d}; numbers begin at 1. What the pattern
+{repeat}, with a format as in {exposure:03d}; these numbers begin at 1 ({exposure} is
+the exposure's `number`, if it has one), while messages and commands count exposures
+from 0. What the pattern
 does not tell apart are the pages of one file, in the order that `pages` gives
 (by default exposure, threshold, frame, the last running fastest). With `dataset`, a
 pattern too, the files are HDF5. `[detector]`, `[source]` and a `[[material]]` may say

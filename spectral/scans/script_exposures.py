@@ -33,6 +33,8 @@ _EXPOSURE = (
     "number",
     "rotation_angle_deg",
 )
+_MEANT = dict.fromkeys(("image", "images", "image_file", "image_files"), "files")
+"""Words that come to mind for a key, but are spelt like another one."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -41,6 +43,8 @@ class ScriptExposure:
 
     Attributes
     ----------
+    index : int
+        Place in the scan, from 0 on.
     number : int
         What {exposure} stands for in a name pattern.
     step : str
@@ -60,6 +64,7 @@ class ScriptExposure:
         Where the exposure stands in the script.
     """
 
+    index: int
     number: int
     step: str
     repeat: int
@@ -76,9 +81,9 @@ class ScriptExposure:
 
     @property
     def label(self) -> str:
-        """What a message calls the exposure."""
+        """What a message calls the exposure, counted from 0 as everywhere."""
         name = f" ({self.step})" if self.step else ""
-        return f"exposure {self.number}{name}"
+        return f"exposure {self.index}{name}"
 
     def error(self, path: Path, text: str) -> ScanError:
         """One sentence that begins with file and line."""
@@ -96,7 +101,7 @@ def read_exposures(
         If one is listed twice, a step is named twice, or a key cannot be.
     """
     defaults = root.table("defaults")
-    defaults.known_keys(_DEFAULTS)
+    defaults.known_keys(_DEFAULTS, meant=_MEANT)
     tables = root.tables("exposure")
     if not tables:
         root.stop("", "the script lists no exposure; add [[exposure]] tables")
@@ -104,7 +109,7 @@ def read_exposures(
     by_number: dict[int, int] = {}
     by_step: dict[str, int] = {}
     for table in tables:
-        table.known_keys(_EXPOSURE)
+        table.known_keys(_EXPOSURE, meant=_MEANT)
         step = table.text("step", "")
         if step and step in by_step:
             msg = f"the step {step!r} has been named before, on line {by_step[step]}"
@@ -115,13 +120,20 @@ def read_exposures(
             number = first + repeat
             if number in by_number:
                 msg = (
-                    f"exposure {number} has been listed before, on line "
+                    f"number {number} has been listed before, on line "
                     f"{by_number[number]}"
                 )
                 table.stop("number", msg)
             by_number[number] = table.line
             found.append(
-                _exposure(table, defaults, materials, number=number, repeat=repeat + 1)
+                _exposure(
+                    table,
+                    defaults,
+                    materials,
+                    index=len(found),
+                    number=number,
+                    repeat=repeat + 1,
+                )
             )
     return tuple(found)
 
@@ -131,6 +143,7 @@ def _exposure(
     defaults: Table,
     materials: tuple[Layer, ...],
     *,
+    index: int,
     number: int,
     repeat: int,
 ) -> ScriptExposure:
@@ -142,6 +155,7 @@ def _exposure(
         own.stop("role", msg)
     frames = table.whole("frames", 1)
     return ScriptExposure(
+        index=index,
         number=number,
         step=own.text("step", ""),
         repeat=repeat,

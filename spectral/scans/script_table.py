@@ -58,12 +58,22 @@ class Table:
             return self
         return self.base.owner(key) if self.base is not None else None
 
-    def known_keys(self, allowed: Iterable[str]) -> None:
-        """Refuse keys that mean nothing, with the likely spelling."""
+    def known_keys(
+        self, allowed: Iterable[str], *, meant: Mapping[str, str] | None = None
+    ) -> None:
+        """Refuse keys that mean nothing, with the likely spelling.
+
+        Parameters
+        ----------
+        allowed : iterable of str
+        meant : mapping, optional
+            Other words for a key, where spelling does not lead to it.
+        """
         allowed = sorted(allowed)
         for key in self.values:
             if key not in allowed:
                 close = difflib.get_close_matches(key, allowed, n=1)
+                close = [meant[key]] if meant and key in meant else close
                 hint = f"; is {close[0]!r} meant?" if close else ""
                 known = "" if close else f"; known are {', '.join(allowed)}"
                 self.stop(key, f"{key!r} is not known here{hint}{known}")

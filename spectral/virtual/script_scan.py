@@ -274,9 +274,9 @@ def _template(
         thickness_mm=np.concatenate([bare.thickness_mm, more], axis=1),
     )
     if unknown.any() and not table.tables("object"):
-        number = script.exposures[int(np.argmax(unknown))].number
+        first = script.exposures[int(np.argmax(unknown))]
         msg = (
-            f"exposure {number} is an object, but nothing says what it is: add "
+            f"{first.label} is an object, but nothing says what it is: add "
             "[[virtual.object]] tables, or its layers_mm"
         )
         table.stop("", msg)
@@ -340,7 +340,7 @@ def _chosen(fault: Table, script: ScanScript) -> list[int]:
     place = {e.number: i for i, e in enumerate(script.exposures)}
     for number in numbers:
         if isinstance(number, bool) or number not in place:
-            fault.stop("exposure", f"there is no exposure {number!r}")
+            fault.stop("exposure", f"no exposure has number = {number!r}")
     return [place[number] for number in numbers]
 
 

@@ -257,7 +257,7 @@ RECTANGLE = '[[virtual.object]]\nshape = "rectangle"\nmaterial = "PMMA"\n'
     [
         (SCRIPT.partition("[virtual]")[0], r"has no \[virtual\] table"),
         (SCRIPT + "photon = 2\n", r"line 32: 'photon' is not known here"),
-        (SCRIPT, r"exposure 4 is an object, but nothing says what it is"),
+        (SCRIPT, r"exposure 3 is an object, but nothing says what it is"),
         (
             SCRIPT.replace("photons_per_mas = 20000", "") + OBJECT,
             r"\[virtual\] needs photons_per_mas",
@@ -323,7 +323,7 @@ RECTANGLE = '[[virtual.object]]\nshape = "rectangle"\nmaterial = "PMMA"\n'
         ),
         (
             SCRIPT + OBJECT + "[[virtual.fault]]\nexposure = 9\n",
-            "there is no exposure 9",
+            "no exposure has number = 9",
         ),
         (
             SCRIPT + OBJECT + '[[virtual.fault]]\nstep = "six"\n',

@@ -318,6 +318,8 @@ SPOILT = [
     ("voltage_kv = 80", "voltage_kv = -1", "voltage_kv", "must be a number above zero"),
     ("voltage_kv = 80", 'voltage_kv = "80"', "voltage_kv", "must be a number above"),
     ("voltage_kv", "voltage_kV", "voltage_kV", "is 'voltage_kv' meant?"),
+    ("files =", "images =", "images", "is 'files' meant?"),
+    ("files =", "image =", "image", "is 'files' meant?"),
     ("start_time =", "weather =", "weather", "'weather' is not known here; known are"),
     ('title = "made for a test"', "title = 3", "title", "title must be text in quotes"),
     ("[20, 35.5]", "[35, 20]", "thresholds_kev", "must rise one by one"),
@@ -339,7 +341,7 @@ SPOILT = [
     ("{ PE = 5, Al = 0.5 }", "5", "layers_mm", "must be a table"),
     ("repeats = 2", "layers_mm = { PE = 1 }", "layers_mm", "nothing in the beam, but"),
     ('"PE 5, Al 0.5"', '"open"', 'step = "open"\nrole = "wedge"', "named before, on "),
-    ("repeats = 2", "number = 1", "number = 1", "exposure 1 has been listed before"),
+    ("repeats = 2", "number = 1", "number = 1", "number 1 has been listed before"),
     ("{exposure:02d}", "{shot}", "files", "holds {shot}; known are {exposure}"),
     ("{exposure:02d}", "{exposure", "files", "cannot be read"),
     ("{exposure:02d}", "{exposure:q}", "files", "cannot be filled in"),
@@ -395,7 +397,7 @@ def test_a_missing_image_names_the_line(tmp_path: Path) -> None:
 def test_no_files_named(tmp_path: Path) -> None:
     text = re.sub(r"files = .*\n", "", HEAD) + EXPOSURES
     path = written(tmp_path, text)
-    with pytest.raises(ScanError, match="line 29: exposure 1 names no image files"):
+    with pytest.raises(ScanError, match="line 29: exposure 0 names no image files"):
         open_scan(path)
 
 
@@ -445,8 +447,8 @@ def test_an_image_taken_twice(tmp_path: Path) -> None:
     again = line_of(text, '[[exposure]]\nstep = "PE 5')
     with pytest.raises(
         ScanError,
-        match=rf"line {again}: exposure 4 .*takes the image .*02_1\.tif, which is "
-        rf"that of exposure 2 \(open\) on line {first}",
+        match=rf"line {again}: exposure 3 .*takes the image .*02_1\.tif, which is "
+        rf"that of exposure 1 \(open\) on line {first}",
     ):
         open_scan(path)
 
