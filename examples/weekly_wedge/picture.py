@@ -60,7 +60,7 @@ def main(folder: Path) -> None:
             ds="steps-mid",
         )
         middle.errorbar(
-            0.9 * planted.shape[1], 0.2, yerr=1.96 * change.mean_error_kev.mean(),
+            0.9 * planted.shape[1], 0.2, yerr=1.96 * change.median_error_kev.mean(),
             color=MUTED, capsize=3, label="what moves all columns alike, 95 %",
         )  # fmt: skip
         middle.set_title("drift from column to column")
@@ -71,7 +71,7 @@ def main(folder: Path) -> None:
         good = change.both_good
         right.errorbar(
             kev, change.change_kev[:, good].mean(axis=1),
-            yerr=1.96 * change.mean_error_kev, fmt=marker(0), capsize=3,
+            yerr=1.96 * change.median_error_kev, fmt=marker(0), capsize=3,
             color=material_colour(0), label="found, 95 % interval",
         )  # fmt: skip
         right.axhline(

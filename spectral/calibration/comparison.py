@@ -52,8 +52,8 @@ class CalibrationComparison:
         Nominal.
     change_kev : array, shape (K, y, x), in keV
         Change of each pixel's true threshold; NaN where it is not good in both.
-    mean_kev, mean_error_kev : arrays, shape (K,), in keV
-        Robust mean of that, and its standard error.
+    median_kev, median_error_kev : arrays, shape (K,), in keV
+        Median of that over the pixels, and its standard error.
     spread_kev : array, shape (K,), in keV
         Robust standard deviation between pixels.
     expected_spread_kev : array, shape (K,), in keV
@@ -86,8 +86,8 @@ class CalibrationComparison:
     new: str
     thresholds_kev: NDArray[np.float64]
     change_kev: NDArray[np.float64]
-    mean_kev: NDArray[np.float64]
-    mean_error_kev: NDArray[np.float64]
+    median_kev: NDArray[np.float64]
+    median_error_kev: NDArray[np.float64]
     spread_kev: NDArray[np.float64]
     expected_spread_kev: NDArray[np.float64]
     area_percent: NDArray[np.float64]
@@ -116,9 +116,9 @@ class CalibrationComparison:
         return FALSE_ALARM * float(self.both_good.sum())
 
     @property
-    def mean_pull(self) -> NDArray[np.float64]:
-        """Mean change over its error, shape (threshold,)."""
-        return np.asarray(self.mean_kev / self.mean_error_kev)
+    def median_pull(self) -> NDArray[np.float64]:
+        """Median change over its error, shape (threshold,)."""
+        return np.asarray(self.median_kev / self.median_error_kev)
 
     @property
     def spread_ratio(self) -> NDArray[np.float64]:
@@ -192,8 +192,8 @@ def compare(
         new=_named(new),
         thresholds_kev=old.thresholds_kev,
         change_kev=np.stack([onto(s) for s in shifts.T]),
-        mean_kev=average.shift_kev + middle[1:-2],
-        mean_error_kev=np.hypot(average.shift_error_kev, at_random),
+        median_kev=average.shift_kev + middle[1:-2],
+        median_error_kev=np.hypot(average.shift_error_kev, at_random),
         spread_kev=spread[1:-2],
         expected_spread_kev=expected[1:-2],
         area_percent=onto(100.0 * np.expm1(change[:, 0] - middle[0])),
@@ -291,6 +291,11 @@ def _named(calibration: Calibration) -> str:
 def _notes(old: Calibration, new: Calibration) -> tuple[str, ...]:
     """What limits the comparison, in sentences."""
     notes = []
+    if old is new or (old.digest and old.digest == new.digest):
+        notes.append(
+            "Both are one and the same calibration, so that nothing can have changed; "
+            "name two different ones."
+        )
     if any(f"calibration of {old.created}" in finding for finding in new.findings):
         notes.append(
             "The new calibration is the old one refreshed: they share data, so that "

@@ -26,9 +26,9 @@ def comparison_summary(comparison: CalibrationComparison) -> dict[str, Any]:
         "new": c.new,
         "pixels_good_in_both": int(c.both_good.sum()),
         "thresholds_kev": c.thresholds_kev.tolist(),
-        "threshold_change_kev": _rounded(c.mean_kev, 4),
-        "threshold_change_error_kev": _rounded(c.mean_error_kev, 4),
-        "threshold_change_over_error": _rounded(c.mean_pull, 2),
+        "threshold_change_kev": _rounded(c.median_kev, 4),
+        "threshold_change_error_kev": _rounded(c.median_error_kev, 4),
+        "threshold_change_over_error": _rounded(c.median_pull, 2),
         "chance_if_no_threshold_moved": float(f"{c.average.shift_chance:.3g}"),
         "spread_of_change_kev": _rounded(c.spread_kev, 4),
         "expected_spread_kev": _rounded(c.expected_spread_kev, 4),
@@ -74,11 +74,11 @@ def comparison_text(comparison: CalibrationComparison) -> str:
         f"old: {c.old}",
         f"new: {c.new}",
         *comparison_sentences(c),
-        "threshold   nominal    change   error    spread   expected (keV)",
+        "threshold   nominal    median   error    spread   expected (change, keV)",
     ]
     lines.extend(
-        f"{k + 1:9d} {c.thresholds_kev[k]:9.2f} {c.mean_kev[k]:+9.3f} "
-        f"{c.mean_error_kev[k]:7.3f} {c.spread_kev[k]:9.3f} "
+        f"{k + 1:9d} {c.thresholds_kev[k]:9.2f} {c.median_kev[k]:+9.3f} "
+        f"{c.median_error_kev[k]:7.3f} {c.spread_kev[k]:9.3f} "
         f"{c.expected_spread_kev[k]:10.3f}"
         for k in range(c.thresholds_kev.size)
     )
@@ -98,11 +98,11 @@ def comparison_sentences(comparison: CalibrationComparison) -> tuple[str, ...]:
 
 
 def _thresholds(c: CalibrationComparison) -> str:
-    k = int(np.abs(c.mean_pull).argmax())
+    k = int(np.abs(c.median_pull).argmax())
     chance = c.average.shift_chance
     size = (
-        f"threshold {k + 1}, {c.mean_kev[k]:+.3f} keV with an error of "
-        f"{c.mean_error_kev[k]:.3f} keV"
+        f"threshold {k + 1}, {c.median_kev[k]:+.3f} keV in the median pixel with an "
+        f"error of {c.median_error_kev[k]:.3f} keV"
     )
     if chance < FALSE_ALARM:
         return (

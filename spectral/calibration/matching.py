@@ -109,7 +109,10 @@ def _filters(scan: Scan) -> tuple[str, ...]:
 def _pixels_differ(one: tuple[int, int], other: tuple[int, int]) -> str:
     if one == other:
         return ""
-    return f"has {one[0]} x {one[1]} pixels and not {other[0]} x {other[1]}"
+    return (
+        f"has {one[0]} x {one[1]} pixels (rows x columns) and not "
+        f"{other[0]} x {other[1]}"
+    )
 
 
 def _setting_differs(one: _Setting, other: _Setting) -> str:

@@ -129,15 +129,15 @@ def _look(seen: CalibrationComparison) -> list[str]:
 
 def _figures(seen: CalibrationComparison) -> list[KeyFigure]:
     average = seen.average
-    k = int(np.abs(seen.mean_pull).argmax())
-    mean, error = float(seen.mean_kev[k]), float(seen.mean_error_kev[k])
+    k = int(np.abs(seen.median_pull).argmax())
+    middle, error = float(seen.median_kev[k]), float(seen.median_error_kev[k])
     share = float(seen.changed.sum() / seen.both_good.sum())
     return [
         KeyFigure(
             name=f"clearest change of a threshold ({k + 1})",
-            text=f"{with_error(mean, error, sign=True)} keV",
+            text=f"{with_error(middle, error, sign=True)} keV",
             remark="median pixel",
-            value=mean,
+            value=middle,
         ),
         KeyFigure(
             name="spread between pixels, over the expected",
@@ -211,7 +211,7 @@ def _threshold_table(seen: CalibrationComparison) -> Table:
             f"{k + 1}",
             number(float(seen.thresholds_kev[k])),
             with_error(
-                float(seen.mean_kev[k]), float(seen.mean_error_kev[k]), sign=True
+                float(seen.median_kev[k]), float(seen.median_error_kev[k]), sign=True
             ),
             fixed(float(seen.spread_kev[k]), 3),
             fixed(float(seen.expected_spread_kev[k]), 3),

@@ -59,13 +59,13 @@ def _threshold_sheet(
     maps = sheet.axes[columns : columns + len(chosen)]
     for place, k in enumerate(chosen):
         _draw_change(sheet.axes[place], comparison, k, limits)
-        mean = fixed(float(comparison.mean_kev[k]), 3, sign=True)
+        middle = fixed(float(comparison.median_kev[k]), 3, sign=True)
         spread = fixed(float(comparison.spread_kev[k]), 3)
         panels.draw_signed_map(
             maps[place],
             comparison.change_kev[k],
             label="keV, new minus old",
-            title=f"{mean}, spread {spread}",
+            title=f"{middle}, spread {spread}",
             limits=limits,
             bar_beside=maps if place == len(chosen) - 1 else [],
         )
@@ -74,7 +74,7 @@ def _threshold_sheet(
             maps[place].set_ylabel("")
     words = [
         f"{number(float(comparison.thresholds_kev[k]))} keV: median pixel "
-        f"{fixed(float(comparison.mean_kev[k]), 3, sign=True)} keV, spread "
+        f"{fixed(float(comparison.median_kev[k]), 3, sign=True)} keV, spread "
         f"{fixed(float(comparison.spread_kev[k]), 3)} keV"
         for k in chosen
     ]
@@ -106,7 +106,7 @@ def _draw_change(
         limits=panels.Limits(1.15 * limits.low, 1.15 * limits.high),
         bins=32,
     )
-    middle = float(comparison.mean_kev[threshold])
+    middle = float(comparison.median_kev[threshold])
     expected = float(comparison.expected_spread_kev[threshold])
     panels.line_over_bars(axes, 0.0, middle=False)
     panels.line_over_bars(axes, middle)

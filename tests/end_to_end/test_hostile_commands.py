@@ -196,7 +196,10 @@ def test_an_object_scan_of_another_setting_is_refused(
     files = folder / "wide.h5", folder / "object.h5"
     done = command("decompose", *files, "-o", folder / "out.h5")
     assert done.exit_code == 1
-    text = "it has 6 x 8 pixels and not 6 x 9; use the calibration of its setting"
+    text = (
+        "it has 6 x 8 pixels (rows x columns) and not 6 x 9; use the calibration of "
+        "its setting"
+    )
     wanted = f"{files[1]} does not go with the calibration: {text}"
     assert wanted in sentence(done)
     assert held(folder) == before
@@ -223,7 +226,10 @@ def test_calibrations_of_two_settings_are_both_named(
     files = folder / "calibration.h5", folder / "wide.h5"
     done = command("compare", *files, "-o", folder / "out.html")
     assert done.exit_code == 1
-    text = "it has 6 x 9 pixels and not 6 x 8; compare calibrations of one setting"
+    text = (
+        "it has 6 x 9 pixels (rows x columns) and not 6 x 8; compare calibrations of "
+        "one setting"
+    )
     wanted = f"{files[1]} cannot be compared with {files[0]}: {text}"
     assert wanted in sentence(done)
     assert held(folder) == before
@@ -379,7 +385,7 @@ dead_time_ns = 100.0
         (
             "photons_per_mas = 100",
             "photons_per_mas = 1e15",
-            "scan.toml, line 18: exposure 1 would send 1e+13 photons upon a pixel",
+            "scan.toml, line 18: exposure 0 would send 1e+13 photons upon a pixel",
         ),
     ],
 )

@@ -136,7 +136,7 @@ def test_unchanged_pixels_are_within_their_errors(
     assert found.by_chance == pytest.approx(FALSE_ALARM * pixels)
     # Poisson with mean 2
     assert found.changed.sum() <= 8
-    assert np.all(np.abs(found.mean_pull) < 3.5)
+    assert np.all(np.abs(found.median_pull) < 3.5)
     assert found.average.shift_chance > 1e-3
     assert found.notes == ()
 
@@ -163,7 +163,7 @@ def test_planted_movement_of_the_average_pixel_is_found(
     assert average.shift_chance < 1e-9
     assert np.abs(average.left).max() < 1e-3
     np.testing.assert_allclose(
-        np.nanmedian(found.change_kev, axis=(1, 2)), found.mean_kev, atol=1e-12
+        np.nanmedian(found.change_kev, axis=(1, 2)), found.median_kev, atol=1e-12
     )
     back = compare(moved, old).average
     np.testing.assert_allclose(back.shift_kev, -average.shift_kev, atol=1e-6)
@@ -223,7 +223,7 @@ def test_other_settings_are_refused(old: Calibration, new: Calibration) -> None:
         pixel_reasons=new.pixel_reasons[:10],
     )
     cases = (
-        (small, "has 10 x 50 pixels and not 40 x 50"),
+        (small, r"has 10 x 50 pixels \(rows x columns\) and not 40 x 50"),
         (
             replace(new, thresholds_kev=LEVELS_KEV),
             "has thresholds at 20, 32, 45, 60 keV and not at 19.5",
@@ -287,7 +287,7 @@ def test_summary_and_text(old: Calibration, new: Calibration) -> None:
     summary = comparison_summary(found)
     json.dumps(summary, allow_nan=False)
     assert summary["pixels_good_in_both"] == 2000
-    assert summary["threshold_change_kev"] == pytest.approx(found.mean_kev, abs=1e-4)
+    assert summary["threshold_change_kev"] == pytest.approx(found.median_kev, abs=1e-4)
     assert summary["fixed_pattern_over_error"] == [[0.1, 0.2], [0.2, 0.4]]
     assert summary["unknowns"]["ln_flux"]["old"] == 0.5
     assert summary["residual_percent"] == pytest.approx([0.03, 0.03])
@@ -295,6 +295,18 @@ def test_summary_and_text(old: Calibration, new: Calibration) -> None:
     assert "The thresholds did not clearly move on average" in text
     assert "PMMA 0.100 and 0.200, Al 0.200 and 0.400" in text
     assert "which the errors of both explain" in text
+    assert "keV in the median pixel with an error of" in text
+
+
+def test_a_calibration_compared_with_itself_says_so(
+    old: Calibration, new: Calibration
+) -> None:
+    said = "note: Both are one and the same calibration"
+    stored = replace(old, digest="ab" * 32), replace(old, digest="ab" * 32)
+    for pair in ((old, old), stored):
+        assert said in comparison_text(compare(*pair))
+        assert any(said[6:] in text for text in comparison_page(*pair).look)
+    assert said not in comparison_text(compare(old, new))
 
 
 def test_page_says_what_the_comparison_found(
@@ -315,7 +327,7 @@ def test_page_says_what_the_comparison_found(
     figures = {f.name: f.value for f in page.figures}
     assert figures["newly bad pixels"] == 2.0
     found = compare(old, moved)
-    assert found.mean_kev.max() in figures.values()
+    assert found.median_kev.max() in figures.values()
 
 
 def test_page_of_pixels_that_moved_apart_asks_for_a_look(
