@@ -325,6 +325,9 @@ def _first_values(
     Counts are compared threshold by threshold, each at its own level: how far they
     are from proportional to the current tells the time, whatever the spectrum.
     """
+    if not np.median(observed[:, 0]) > 0.0:
+        msg = "the open and wedge exposures hold no counts above the lowest threshold"
+        raise CalibrationError(msg)
     names = [n.name for n in problem.nuisances]
     times = [names.index("ln_dead_time"), names.index("ln_tail")]
     heights = problem.heights(values)
@@ -347,9 +350,6 @@ def _first_values(
         away = float(np.square(ratio - np.median(ratio, axis=0)).mean())
         if away < least:
             best, least = trial, away
-    if not np.isfinite(least):
-        msg = "the open and wedge exposures hold no counts above the lowest threshold"
-        raise CalibrationError(msg)
     return best
 
 
