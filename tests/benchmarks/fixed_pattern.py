@@ -212,7 +212,7 @@ def main() -> None:
     curves, promised, longest, single = measure(scans)
     names = [layer.name for layer in longest.materials]
     sys.stdout.write(table(curves, promised, names))
-    sys.stdout.write(floors(curves, longest, single, names))
+    sys.stdout.write(floors(curves[-1], longest, single, names))
     draw(curves, promised, names, options.picture)
 
 
@@ -235,22 +235,21 @@ def table(
 
 
 def floors(
-    curves: Sequence[Curve],
+    curve: Curve,
     longest: Calibration,
     single: NDArray[np.float64],
     names: Sequence[str],
 ) -> str:
-    """Sentences on the fitted law of each curve and material."""
+    """Sentences on the fitted law of a curve, one a material."""
     by_kev = pattern_of_shifts(longest) / np.sqrt(LONGEST)
     lines = []
-    for curve in curves:
-        for m, name in enumerate(names):
-            floor, part = np.sqrt(curve.law()[:, m])
-            lines.append(
-                f"{name}, {curve.label}: floor {floor:.3f} of one error = "
-                f"{1e3 * floor * single[m]:.2f} mg/cm2 = {1e3 * floor / by_kev[m]:.0f} "
-                f"eV in every threshold; {part:.3f} falls with the square root"
-            )
+    for m, name in enumerate(names):
+        floor, part = np.sqrt(curve.law()[:, m])
+        lines.append(
+            f"{name}, {curve.label}: floor {floor:.3f} of one error = "
+            f"{1e3 * floor * single[m]:.2f} mg/cm2 = {1e3 * floor / by_kev[m]:.0f} "
+            f"eV in every threshold; {part:.3f} falls with the square root"
+        )
     return "\n".join(lines) + "\n"
 
 

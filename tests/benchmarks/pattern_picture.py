@@ -47,14 +47,14 @@ def draw(
             axes.set_title(name)
             axes.set_xlabel("exposure of a wedge step (1: 20 000 counts in the open)")
         panels[0].set_ylabel("fixed pattern / error of one pixel in one exposure")
-        panels[-1].legend(loc="lower left")
+        panels[-1].legend(loc="upper right")
         figure.savefig(path, dpi=120)
 
 
 def _panel(
     axes: Axes, curves: Sequence[Curve], promised: NDArray[np.float64], m: int
 ) -> None:
-    """Both curves of a material, the square root through the last one's, its floor."""
+    """Both curves of a material; law, square root and floor of the last."""
     axes.set_xscale("log", base=2)
     axes.set_yscale("log")
     for curve, colours, marker in zip(curves, MATERIAL_NAMES, MARKERS, strict=False):
@@ -62,13 +62,13 @@ def _panel(
             curve.exposure, curve.found[:, m], curve.error[:, m], marker=marker,
             color=colours[0], linestyle="none", label=curve.label,
         )  # fmt: skip
-        floor, part = np.sqrt(curve.law()[:, m])
-        fine = np.geomspace(curve.exposure.min(), curve.exposure.max(), 100)
-        axes.plot(fine, np.hypot(floor, part / np.sqrt(fine)), color=colours[0], lw=1)
-        if curve is curves[-1]:
-            root = part / np.sqrt(fine)
-            axes.plot(fine, root, color=MUTED, ls=":", label="square root of exposure")
-            axes.axhline(floor, color=colours[0], ls="--", lw=1, label="its floor")
+    # the law holds for the wedge scan alone: the last curve
+    floor, part = np.sqrt(curves[-1].law()[:, m])
+    fine = np.geomspace(curves[-1].exposure.min(), curves[-1].exposure.max(), 100)
+    root, colour = part / np.sqrt(fine), MATERIAL_NAMES[len(curves) - 1][0]
+    axes.plot(fine, np.hypot(floor, root), color=colour, lw=1)
+    axes.plot(fine, root, color=MUTED, ls=":", label="square root of exposure")
+    axes.axhline(floor, color=colour, ls="--", lw=1, label="fitted floor")
     axes.plot(
         curves[0].exposure, promised, color=MUTED, marker="x", ls="none",
         label="promised by the calibration",
