@@ -125,7 +125,7 @@ def loss_sentence(loss: CountingLoss) -> str:
     """
     rate = f"{number(loss.highest_rate_per_s)} counts per second and pixel"
     dead = f"{with_error(loss.median_ns, loss.standard_error_ns)} ns"
-    if loss.median_ns > 2.0 * loss.standard_error_ns and loss.loss > 0.0:
+    if loss.is_seen:
         lost = f"{percent(loss.loss)} of the pulses are lost at {rate}"
         return f"dead time {dead} above the lowest threshold: {lost}"
     return (

@@ -31,9 +31,10 @@ class CountingLoss:
         Of the sound pixels' median. The error holds the counting noise and, with
         three exposures or more, how unsteady the tube was.
     highest_rate_per_s : float
-        Median counts per second in the brightest open exposure.
+        Median counts per second in the brightest open exposure, as fitted.
     loss : float
-        Share of the pulses lost there.
+        Share of the pulses lost there, by the median dead time; 0 where that is
+        negative.
     """
 
     dead_time_ns: NDArray[np.float64]
@@ -41,6 +42,11 @@ class CountingLoss:
     standard_error_ns: float
     highest_rate_per_s: float
     loss: float
+
+    @property
+    def is_seen(self) -> bool:
+        """Whether the dead time exceeds 0 by two standard errors."""
+        return self.median_ns > 2.0 * self.standard_error_ns
 
 
 def counting_loss(
@@ -85,8 +91,8 @@ def counting_loss(
     dead[usable] = -slope / per_current * 1e9
     median = float(np.median(dead[usable]))
     brightest = int(np.argmax(np.median(lit, axis=1) / time))
-    rate = np.median(lit[brightest]) / time[brightest]
-    true_rate = np.median(per_current) * current[brightest]
+    true_rate = float(np.median(per_current) * current[brightest])
+    kept = float(np.exp(-true_rate * max(median, 0.0) * 1e-9))
     noise = 1.253**2 * np.mean(variance / per_current**2) / usable.sum()
     common = (height - start - current[:, None] * slope).mean(axis=1)
     unsteady = _slope_variance(current, common) / np.median(per_current) ** 2
@@ -95,8 +101,8 @@ def counting_loss(
         dead_time_ns=dead.reshape(sound.shape),
         median_ns=median,
         standard_error_ns=float(error),
-        highest_rate_per_s=float(rate),
-        loss=float(1.0 - rate / true_rate),
+        highest_rate_per_s=kept * true_rate,
+        loss=1.0 - kept,
     )
 
 

@@ -63,6 +63,12 @@ def _loss_lines(check: ScanCheck) -> Iterator[str]:
         yield "dead time: not measured (it takes open exposures at two currents)"
         return
     loss = check.loss
+    if not loss.is_seen:
+        yield (
+            f"no loss to be seen up to {loss.highest_rate_per_s:.3g} /s (dead time "
+            f"{loss.median_ns:.0f} +- {loss.standard_error_ns:.0f} ns)"
+        )
+        return
     yield (
         f"dead time: {loss.median_ns:.0f} +- {loss.standard_error_ns:.0f} ns, "
         f"{loss.loss:.1%} of the pulses lost at {loss.highest_rate_per_s:.3g} /s"
