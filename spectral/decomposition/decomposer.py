@@ -66,6 +66,8 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
         After `fit`: what was given, its pixels followed by the scan's opens if wished.
     session_ : Session
         After `fit`: the tube's output in the scan.
+    followed_ : bool
+        After `fit`: whether they were; a scan without opens has nothing to follow.
     usable_ : array of bool, shape (row, column)
         After `fit`: pixels that calibration and scan both call sound.
 
@@ -106,8 +108,8 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
             reason = commonest_reason(self.bad_)
             raise ScanError(f"{msg}; of most in the scan, {reason}" if reason else msg)
         self.calibration_ = self.calibration
-        follow = self.follow_pixels and scan.exposures("open").size > 0
-        if follow:
+        self.followed_ = self.follow_pixels and scan.exposures("open").size > 0
+        if self.followed_:
             self.calibration_ = updated_by_opens(self.calibration, scan, bad=self.bad_)
         self.flat_ = np.flatnonzero(self.usable_.ravel())
         self.session_: Session = normalise(self.calibration_, scan, self.usable_)
@@ -281,7 +283,7 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
                 {
                     "bias_correction": self.bias_correction,
                     "nonnegative": self.nonnegative,
-                    "follow_pixels": self.follow_pixels,
+                    "follow_pixels": self.followed_,
                 }
             ),
             "scan": scan.source,

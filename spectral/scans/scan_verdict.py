@@ -72,9 +72,9 @@ def _causes(findings: Findings) -> Iterator[str]:
     """What rules the scan out as it stands."""
     scan, levels = findings.scan, findings.levels
     opens = scan.exposures("open")
-    if len(opens) == 0:
+    if len(opens) == 0 and not _object_alone(scan):
         yield "there is no open exposure to compare the others with"
-    elif levels.mean[opens, 0].max() < 1.0:
+    elif len(opens) and levels.mean[opens, 0].max() < 1.0:
         yield _nothing_counted(levels, opens)
     if findings.shared is not None and findings.shared.none:
         yield _per_bin(findings.shared)
@@ -95,6 +95,11 @@ def _causes(findings: Findings) -> Iterator[str]:
     worst = _not_counts(findings.dispersions)
     if worst:
         yield worst
+
+
+def _object_alone(scan: Scan) -> bool:
+    """Whether the scan needs no open exposure: its maps do without."""
+    return "object" in scan.role and "wedge" not in scan.role
 
 
 def _nothing_counted(levels: ExposureLevels, opens: NDArray[np.int64]) -> str:
@@ -183,6 +188,11 @@ def _exceptions(findings: Findings) -> Iterator[str]:
     scan = findings.scan
     if "dark" not in scan.role:
         yield "there is no dark exposure, so noisy pixels may go unseen"
+    if len(scan.exposures("open")) == 0 and _object_alone(scan):
+        yield (
+            "there is no open exposure: the tube's output will be taken as it was "
+            "during the wedge scan, and its drift passes for a change of the object"
+        )
     if len(scan.exposures("open")) == 1:
         yield "there is one open exposure only, so drift and flicker stay unknown"
     if "wedge" in scan.role and findings.loss is None:

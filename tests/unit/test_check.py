@@ -172,6 +172,13 @@ def test_what_rules_a_scan_out(make_scan: Callable[..., Scan]) -> None:
     assert "25% of the pixels are bad" in causes(scan.with_counts(dead))
 
 
+def test_an_object_scan_needs_no_open_exposure(make_scan: Callable[..., Scan]) -> None:
+    check = check_scan(make_scan(opens=0, wedge=False, objects=3))
+    assert check.causes == ()
+    assert check.verdict is Verdict.EXCEPTIONS
+    assert "no open exposure: the tube's output will be taken as it was" in said(check)
+
+
 def per_bin(scan: Scan) -> Scan:
     """The scan with what was counted in bins where counts above thresholds belong."""
     counts = counts_of(scan)
@@ -301,6 +308,24 @@ def test_dead_time_from_two_currents(make_scan: Callable[..., Scan]) -> None:
     assert counting_loss(scan, nothing) is None
     steady = make_scan(opens=2)
     assert counting_loss(steady, ~nothing) is None
+
+
+@pytest.mark.parametrize("seed", [1, 2, 3, 4])
+def test_a_loss_and_its_dead_time_agree(
+    make_scan: Callable[..., Scan], seed: int
+) -> None:
+    scan = make_scan(seed=seed, pixels=(12, 16), open_counts=2_000.0)
+    check = check_scan(scan)
+    loss = check.loss
+    assert loss is not None
+    lost = np.expm1(loss.median_ns * 1e-9 * loss.highest_rate_per_s / (1.0 - loss.loss))
+    assert loss.loss == pytest.approx(max(lost / (1.0 + lost), 0.0), abs=1e-12)
+    text = check_text(check)
+    if loss.median_ns <= 2.0 * loss.standard_error_ns:
+        assert "no loss to be seen up to" in text
+        assert "of the pulses lost" not in text
+    text = check_text(check_scan(make_scan(seed=seed, pixels=(12, 16), loss=0.1)))
+    assert re.search(r"dead time: \d+ \+- \d+ ns, \d+\.\d% of the pulses lost at", text)
 
 
 def test_an_unsteady_tube_widens_the_dead_times_error(

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from dataclasses import replace
 from typing import TYPE_CHECKING, Protocol
 
@@ -181,6 +182,16 @@ def test_output_is_as_good_as_the_counts(
     # pile-up hides part of a change of the output: its error is a little larger
     assert abs(np.mean(pulls)) < 5.0 / np.sqrt(40) * 1.3
     assert 0.75 < np.std(pulls) < 1.6
+
+
+@pytest.mark.parametrize("opens", [True, False])
+def test_the_record_tells_whether_pixels_were_followed(
+    calibration: Calibration, make_series: Callable[..., Scan], opens: bool
+) -> None:
+    made = make_series(calibration, 1)
+    role = tuple("object" if r == "open" and not opens else r for r in made.role)
+    record = MaterialDecomposer(calibration).decompose(replace(made, role=role)).process
+    assert json.loads(record["options"])["follow_pixels"] is opens
 
 
 def test_bad_pixels_are_looked_for_once(
