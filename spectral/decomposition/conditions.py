@@ -11,6 +11,7 @@ import numpy as np
 from spectral.decomposition.responses import Responses, responses
 from spectral.decomposition.start_values import StartRegression
 from spectral.forward.node_response import pixel_weights
+from spectral.forward.overlap_scatter import overlap_excess
 
 if TYPE_CHECKING:
     from numpy.typing import NDArray
@@ -24,6 +25,8 @@ CURRENT_STEP = 1e-3
 """Steps of ln(current) within which exposures share what depends on current alone."""
 OUTPUT_STEP = 2e-4
 """Steps of ln(photon rate) within which exposures share their weights."""
+EXCESS_STEP = 0.2
+"""Steps of ln(current) within which the excess of the scatter hardly changes."""
 TABLE_STEP = 0.05
 """Steps of ln(photon rate) within which they share their node tables."""
 KEPT = 2
@@ -46,6 +49,8 @@ class Conditions:
     start : StartRegression
     rate_limit : array, shape (pixel,)
         Counts above the lowest threshold at the highest calibrated rate.
+    overlap_excess : float
+        As the function of that name gives for the current.
     """
 
     tables: NodeTables
@@ -53,6 +58,7 @@ class Conditions:
     responses: Responses
     start: StartRegression
     rate_limit: NDArray[np.float64]
+    overlap_excess: float
 
 
 class ConditionsStore:
@@ -69,6 +75,7 @@ class ConditionsStore:
         self._threads = threads
         self._nodes: OrderedDict[tuple[int, int], NodeTables] = OrderedDict()
         self._held: OrderedDict[tuple[float, ...], Conditions] = OrderedDict()
+        self._excess: dict[int, float] = {}
         self._starts: dict[tuple[int, int, float], tuple[StartRegression, Precision]]
         self._starts = {}
         self._highest: dict[tuple[int, int], NDArray[np.float64]] = {}
@@ -134,9 +141,23 @@ class ConditionsStore:
             ),
             start=start,
             rate_limit=self._highest[ends] * count_time_s,
+            overlap_excess=self.excess(current_ma),
         )
         self._held[key] = made
         return made
+
+    def excess(self, current_ma: float) -> float:
+        """What overlapping pulses add to variances (`overlap_excess`)."""
+        coarse = round(np.log(current_ma) / EXCESS_STEP)
+        if coarse not in self._excess:
+            rate = self._calibration.photons_per_mas * np.exp(EXCESS_STEP * coarse)
+            self._excess[coarse] = overlap_excess(
+                self._calibration.model,
+                self._calibration.levels_kev,
+                self._calibration.largest,
+                float(rate),
+            )
+        return self._excess[coarse]
 
     def _highest_rate(self, flat: NDArray[np.int64]) -> NDArray[np.float64]:
         """Counts per second above the lowest threshold at the highest current."""

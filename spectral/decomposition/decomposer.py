@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -245,7 +246,7 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
         counts = counts_to_bins(above)
         found = self._solve(np.maximum(counts, 0.0), where)
         full = unpacked(found.covariance)
-        spread, extra = calibration_spread(
+        spread, extra, seen = calibration_spread(
             self.calibration_,
             where.tables,
             where.responses,
@@ -255,11 +256,14 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
             output=where.output,
             threads=self.threads,
         )
+        more = self._overlaps(exposure, where, seen)
+        found = replace(found, covariance=found.covariance * (1.0 + more[:, None]))
+        full = unpacked(found.covariance)
         flags = judge(
             total_counts=above[:, 0],
             outside=sigmas_outside(found.areal_density, full, self._facets),
             deviance=found.deviance,
-            limit=misfit_limit(counts.shape[1] - full.shape[1], extra),
+            limit=misfit_limit(counts.shape[1] - full.shape[1], extra + more),
             converged=np.isin(found.outcome, ENDED_WELL),
             over_rate=rate_share(above[:, 0], where.rate_limit),
         )
@@ -267,6 +271,13 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
         lost = ~np.isfinite(found.areal_density).all(axis=1)
         flags[lost & (flags == 0)] |= np.uint16(PixelFlag.NOT_CONVERGED)
         filled.put(place, flat, found, spread, flags)
+
+    def _overlaps(
+        self, exposure: int, where: Conditions, seen: NDArray[np.float64]
+    ) -> NDArray[np.float64]:
+        """Relative excess of each estimate's variance by overlapping pulses."""
+        rate = seen / float(self.count_time_[exposure])
+        return where.overlap_excess * rate * self.calibration_.dead_time_ns * 1e-9
 
     def record(self, scan: Scan, chosen: NDArray[np.int64]) -> dict[str, str]:
         """What belongs in the maps' record of the run."""

@@ -129,7 +129,7 @@ def calibration_spread(
     count_time_s: float,
     output: float = 1.0,
     threads: int = 1,
-) -> tuple[NDArray[np.float64], NDArray[np.float64]]:
+) -> tuple[NDArray[np.float64], NDArray[np.float64], NDArray[np.float64]]:
     """What the calibration's own errors add to estimates.
 
     Parameters
@@ -151,6 +151,8 @@ def calibration_spread(
         Standard deviation of the estimate's shift.
     extra : array, shape (pixel,)
         Share by which the deviance per degree of freedom rises.
+    seen : array, shape (pixel,)
+        Counts above the lowest threshold that the estimate leads one to expect.
 
     Notes
     -----
@@ -159,7 +161,7 @@ def calibration_spread(
     """
     flat = ready.flat
     errors = np.empty(estimate.shape)
-    extra = np.empty(flat.size)
+    extra, seen = np.empty(flat.size), np.empty(flat.size)
     lost = lost_fraction(calibration.dead_time_ns, count_time_s)
     spread = calibration.departure_covariance.reshape(
         -1, *calibration.departure_covariance.shape[2:]
@@ -183,8 +185,9 @@ def calibration_spread(
             count_time_s,
             errors[part],
             extra[part],
+            seen[part],
         )
 
     with ThreadPoolExecutor(threads) as pool:
         list(pool.map(block, range(0, flat.size, BLOCK)))
-    return errors, extra
+    return errors, extra, seen

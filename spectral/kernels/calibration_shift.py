@@ -162,14 +162,15 @@ def shifts(
     count_time: float,
     errors: Array,
     extra: Array,
+    seen: Array,
 ) -> None:
-    """Fill the estimates' standard deviations and the deviance's relative rise.
+    """Fill the estimates' errors, the deviance's relative rise and expected counts.
 
     tables (bin, kind, grid, node), per second; levels (threshold,); attenuation
     (node, material); departures (pixel, parameter), spread (pixel, parameter,
     parameter); weight (pixel, bin, node) in counts, read from the same tables;
     estimate (pixel, material), covariance (pixel, material, material); errors
-    (pixel, material), extra (pixel,).
+    (pixel, material), extra (pixel,), seen (pixel,), above the lowest threshold.
     """
     pixels, materials = estimate.shape
     bins, size = levels.shape[0], departures.shape[1]
@@ -207,6 +208,7 @@ def shifts(
         total = 0.0
         for b in range(bins):
             total += counts[b]
+        seen[p] = total
         boost = lost / max(1.0 - lost * total, 0.1)
         for m in range(materials):
             together = 0.0

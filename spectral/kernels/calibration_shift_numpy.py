@@ -28,6 +28,7 @@ def shifts(
     count_time: float,
     errors: Array,
     extra: Array,
+    seen: Array,
 ) -> None:
     """Fill the same arrays as the compiled function, for a few pixels at a time."""
     pixels, materials = estimate.shape
@@ -60,6 +61,7 @@ def shifts(
             moved[:, b, -2] += sign * area * at[2]
             moved[:, b, -1] += sign * area * at[3]
     counts = np.maximum(counts, 1e-6)
+    seen[...] = counts.sum(axis=1)
     slope = -np.einsum("pbn,pn,nm->pbm", weight, passed / count_time, attenuation)
     boost = lost / np.maximum(1.0 - lost * counts.sum(axis=1), 0.1)
     weighted = slope / counts[..., None]

@@ -82,7 +82,7 @@ def test_promised_error_is_the_scatter_of_wrong_calibrations(
 ) -> None:
     covariance = bound(made, tables, lost_fraction(made.dead_time_ns, TIME_S))
     estimate = np.tile(TRUTH, (FLAT.size, 1))
-    errors, extra = calibration_spread(
+    errors, extra, _ = calibration_spread(
         made,
         tables,
         ready(made, tables, TIME_S),
@@ -104,7 +104,7 @@ def test_perfect_calibration_adds_nothing(
         made, departure_covariance=np.zeros_like(made.departure_covariance)
     )
     estimate = np.tile(TRUTH, (FLAT.size, 1))
-    errors, extra = calibration_spread(
+    errors, extra, _ = calibration_spread(
         perfect,
         tables,
         ready(made, tables, TIME_S),
@@ -124,10 +124,10 @@ def test_longer_exposures_do_not_lessen_the_calibrations_error(
     # (common practice, no source)
     estimate = np.tile(TRUTH, (FLAT.size, 1))
     plain = bound(made, tables, 0.0)
-    short, little = calibration_spread(
+    short, little, _ = calibration_spread(
         made, tables, ready(made, tables, TIME_S), estimate, plain, count_time_s=TIME_S
     )
-    long, much = calibration_spread(
+    long, much, _ = calibration_spread(
         made,
         tables,
         ready(made, tables, 100.0 * TIME_S),
@@ -152,7 +152,7 @@ def test_misfit_grows_as_promised(made: Calibration, tables: NodeTables) -> None
     true = responses(replace(made, departures=wrong), tables, FLAT, count_time_s=time)
     counts = rng.poisson(expected_counts(TRUTH, true.weight, true.attenuation))
     found = solve(counts.astype(float), known.weight, known.attenuation, start=TRUTH)
-    _, extra = calibration_spread(
+    _, extra, _ = calibration_spread(
         worse, tables, known, np.tile(TRUTH, (FLAT.size, 1)),
         bound(made, tables, 0.0) * TIME_S / time, count_time_s=time,
     )  # fmt: skip

@@ -40,8 +40,10 @@ def test_kernel_and_twin_agree() -> None:
         (calibration_shift_numpy, tables),
     ):
         errors, extra = np.empty((pixels, materials)), np.empty(pixels)
-        module.shifts(given, *arguments, errors, extra)
-        results.append((errors, extra))
+        seen = np.empty(pixels)
+        module.shifts(given, *arguments, errors, extra, seen)
+        results.append((errors, extra, seen))
     np.testing.assert_allclose(results[0][0], results[1][0], rtol=1e-5)
     np.testing.assert_allclose(results[0][1], results[1][1], rtol=1e-5)
+    np.testing.assert_allclose(results[0][2], results[1][2], rtol=1e-9)
     assert (results[0][0] > 0.0).all()
