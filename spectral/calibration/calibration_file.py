@@ -27,7 +27,7 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
 FORMAT_NAME = "wedgewright calibration"
-FORMAT_VERSION = 1
+FORMAT_VERSION = 2
 
 UNITS = {
     "thresholds_kev": "keV",

@@ -29,7 +29,7 @@ class Counter:
         rate = np.exp(named["ln_flux"]) * CURRENT * PASSED * (1.0 + drift)
         time = np.exp(named["ln_dead_time"]) + 2.4 * np.exp(named["ln_tail"])
         above = rate * np.exp(-rate * time * 1e-9)
-        return above[:, None] * np.array([1.0, 0.3])
+        return np.asarray(above[:, None] * np.array([1.0, 0.3]))
 
 
 @pytest.mark.parametrize("factor", [0.2, 0.7, 1.5])
