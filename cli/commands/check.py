@@ -6,7 +6,7 @@ from typing import TYPE_CHECKING
 
 import click
 
-from spectral.forward.scan_facts import scan_faults
+from spectral.forward.step_thickness import wedge_faults
 from spectral.scans.scan_check import Verdict, check_scan
 from spectral.scans.scan_check_text import check_summary, check_text
 from spectral.scans.script import open_scan
@@ -38,7 +38,7 @@ def check(scan_path: Path, as_json: bool) -> None:
     they are not fit.
     """
     scan = open_scan(scan_path)
-    known = scan_faults(scan) if "wedge" in scan.role else ()
+    known = wedge_faults(scan) if "wedge" in scan.role else ()
     with progress("exposures") as tell:
         result = check_scan(scan, known=known, progress=tell)
     show(check_summary(result), check_text(result), as_json=as_json)

@@ -24,6 +24,7 @@ from spectral.calibration.wedge_data import WedgeData, wedge_data
 from spectral.errors import CalibrationError, InputError
 from spectral.forward.pixel_response import curve_tables
 from spectral.forward.setup import Setup
+from spectral.forward.step_thickness import thickness_faults
 from spectral.scans.bad_pixels import PixelReason, find_bad_pixels
 from spectral.scans.exposure_levels import exposure_levels
 from spectral.scans.exposure_problems import exposure_problems
@@ -113,6 +114,7 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
         reasons = find_bad_pixels(scan)
         suspects = self._suspects(scan, reasons)
         self._refuse_without_opens(scan, suspects)
+        self._refuse_wrong_units(scan, suspects)
         self.progress_ = progress
         with told_of(scan):
             self.calibration_ = self._learned(scan, setup, reasons, suspects)
@@ -148,6 +150,12 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
                 f"{scan.source}: every open exposure has a problem of its own, as "
                 f"exposure {opens[0]}: {suspects[opens[0]]}"
             )
+            raise CalibrationError(msg)
+
+    def _refuse_wrong_units(self, scan: Scan, suspects: dict[int, str]) -> None:
+        faults = thickness_faults(scan, without=(*self.excluded, *suspects))
+        if faults:
+            msg = f"{scan.source}: {faults[0]}"
             raise CalibrationError(msg)
 
     def _suspects(self, scan: Scan, reasons: NDArray[np.uint16]) -> dict[int, str]:

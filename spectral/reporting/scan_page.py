@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from spectral.forward.scan_facts import scan_faults
+from spectral.forward.step_thickness import wedge_faults
 from spectral.physics.cross_sections import table_source
 from spectral.reporting import scan_pictures as pictures
 from spectral.reporting.calibration_pictures import reasons_picture
@@ -52,7 +52,7 @@ def scan_page(scan: Scan, *, check: ScanCheck | None = None) -> Page:
         Made here if not given.
     """
     if check is None:
-        known = scan_faults(scan) if "wedge" in scan.role else ()
+        known = wedge_faults(scan) if "wedge" in scan.role else ()
         check = check_scan(scan, known=known)
     figures = scan_figures(scan, check.reasons == 0)
     n, k, y, x = scan.shape

@@ -141,7 +141,7 @@ def check_scan(
         Read one exposure at a time, but for the part that bad pixels need.
     known : sequence of str, optional
         What is known already to rule the scan out, one sentence each, as
-        `spectral.forward.scan_facts.scan_faults` says of a wedge scan.
+        `spectral.forward.step_thickness.wedge_faults` says of a wedge scan.
     progress : callable, optional
         Called with the exposures done and their number.
     """
