@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from sklearn.base import BaseEstimator, TransformerMixin
 
+from spectral.calibration.open_pattern import open_pattern
 from spectral.calibration.refresh import updated_by_opens
 from spectral.decomposition.block_maps import BlockMaps, joined, unpacked
 from spectral.decomposition.conditions import Conditions, ConditionsStore
@@ -69,6 +70,8 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
         After `fit`: the tube's output in the scan.
     followed_ : bool
         After `fit`: whether they were; a scan without opens has nothing to follow.
+    pattern_ : OpenPattern or None
+        After `fit`: how much of the calibration's pattern the opens show.
     usable_ : array of bool, shape (row, column)
         After `fit`: pixels that calibration and scan both call sound.
 
@@ -109,6 +112,7 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
             reason = commonest_reason(self.bad_)
             raise ScanError(f"{msg}; of most in the scan, {reason}" if reason else msg)
         self.calibration_ = self.calibration
+        self.pattern_ = open_pattern(self.calibration, scan, self.usable_)
         self.followed_ = self.follow_pixels and scan.exposures("open").size > 0
         if self.followed_:
             self.calibration_ = updated_by_opens(self.calibration, scan, bad=self.bad_)
@@ -289,6 +293,9 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
         )
         session = self.session_
         calibration = self.calibration_
+        pattern = []
+        if self.pattern_ is not None and self.pattern_.is_other:
+            pattern.append(self.pattern_.note)
         return {
             "options": json.dumps(
                 {
@@ -322,5 +329,5 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
                     "assumptions": calibration.assumptions,
                 }
             ),
-            "notes": json.dumps([*session.notes, *scan.notes]),
+            "notes": json.dumps([*pattern, *session.notes, *scan.notes]),
         }
