@@ -137,33 +137,43 @@ def _store(
     share: Array,
     steps: Array,
     outcome: Whole,
+    filled: Array,
     areal_density: Array,
     covariance: Array,
     deviance: Array,
     steps_out: Whole,
     outcome_out: Whole,
 ) -> None:
-    """Results of a block's finished lanes; NaN where there is no estimate."""
-    materials = base.shape[0]
-    for lane in range(order.shape[0]):
+    """Results of a block's finished lanes; NaN where there is no estimate.
+
+    filled is room for a number a lane.
+    """
+    materials, lanes = base.shape[0], order.shape[0]
+    for lane in range(LANES):
+        filled[lane] = 0.0
+    for b in range(n.shape[0]):
+        for lane in range(LANES):
+            filled[lane] += 1.0 if n[b, lane] > 0.0 else 0.0
+    for j in range(materials):
+        for lane in range(lanes):
+            areal_density[order[lane], j] = base[j, lane] + move[j, lane]
+    t = 0
+    for j in range(materials):
+        for i in range(j, materials):
+            for lane in range(lanes):
+                covariance[order[lane], t] = v[j, i, lane]
+            t += 1
+    for lane in range(lanes):
         pixel, word = order[lane], outcome[lane]
-        filled = 0
-        for b in range(n.shape[0]):
-            filled += n[b, lane] > 0.0
-        few = filled < materials or share[lane] > LARGEST_INFLATION
-        none = word > FEW_COUNTS
-        if few and not none:
-            word = FEW_COUNTS
-        t = 0
-        for j in range(materials):
-            value = base[j, lane] + move[j, lane]
-            areal_density[pixel, j] = np.nan if none else value
-            for i in range(j, materials):
-                covariance[pixel, t] = np.nan if none else v[j, i, lane]
-                t += 1
-        deviance[pixel] = np.nan if none else chi[lane]
+        few = filled[lane] < materials or share[lane] > LARGEST_INFLATION
+        word = FEW_COUNTS if few and word <= FEW_COUNTS else word
+        deviance[pixel] = chi[lane]
         steps_out[pixel] = steps[lane]
         outcome_out[pixel] = word
+        if word > FEW_COUNTS:
+            areal_density[pixel, :] = np.nan
+            covariance[pixel, :] = np.nan
+            deviance[pixel] = np.nan
 
 
 @njit(nogil=True, cache=True, error_model="numpy")
@@ -224,7 +234,8 @@ def fit_pixels(
     a, base = walk[:materials], walk[materials : 2 * materials]
     move, slope = walk[2 * materials : 3 * materials], walk[3 * materials]
     last, halved, steps = walk[-3], walk[-2], walk[-1]
-    chi, share, outcome = np.empty(ROW), np.zeros(ROW, real), np.empty(ROW, np.int64)
+    chi, share = np.empty(ROW, real), np.zeros(ROW, real)
+    outcome = np.empty(ROW, np.int64)
     g = np.empty((materials, materials, materials, ROW), real)
     y = np.empty_like(g)
     queue, state = np.arange(pixels), np.empty((pixels, walk.shape[0]), real)
@@ -318,6 +329,7 @@ def fit_pixels(
                 share,
                 steps,
                 outcome,
+                blur,
                 areal_density,
                 covariance,
                 deviance,

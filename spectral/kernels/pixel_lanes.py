@@ -33,6 +33,7 @@ MOMENTS = 6  # computed in one pass: all of two materials
 # Of the diagonal: a share of information not to be told from 0, in either precision.
 SMALLEST_PIVOT = 1e-13
 SMALLEST_SINGLE_PIVOT = 3e-6
+NEAR = 0.1  # x of `misfit` below which its series has all digits
 _TINY = 1e-30
 _HUGE = 1e30
 
@@ -361,18 +362,35 @@ def settle(looked: Array, ahead: Array, moment: Array) -> None:
 def misfit(n: Array, moment: Array, scale: Array, dof: float, chi: Array) -> None:
     """Deviance per degree of freedom, with the dead time's share of C^-1.
 
-    chi is double: a difference of large numbers.
+    Near the expectation the logarithm is the series of its own argument, 2 artanh(x)
+    with x = (n - lambda) / (n + lambda): n ln(n / lambda) and n - lambda then differ
+    by more than rounding.
     """
-    rows = scale.shape[0]
-    for lane in range(LANES):
-        chi[lane] = 0.0
+    rows, real = scale.shape[0], chi.dtype.type
+    two, low, high, near = real(2.0), real(_TINY), real(_HUGE), real(NEAR)
+    part = real(1.0 / dof)
+    c3, c5, c7, c9 = real(1 / 3), real(1 / 5), real(1 / 7), real(1 / 9)
+    c1, c11, c13 = real(1.0), real(1 / 11), real(1 / 13)
+    for lane in range(LANES):  # counts in excess of the expectation, then their share
+        chi[lane] = -moment[rows - 1, 0, lane]
     for b in range(rows - 1):
         for lane in range(LANES):
-            count, expected = np.float64(n[b, lane]), np.float64(moment[b, 0, lane])
-            ratio = min(max(count / expected, 1e-300), 1e300)
-            chi[lane] += 2.0 * (count * logarithm(ratio) - count + expected)
+            chi[lane] += n[b, lane]
     for lane in range(LANES):
-        excess = -np.float64(moment[rows - 1, 0, lane])
-        for b in range(rows - 1):
-            excess += n[b, lane]
-        chi[lane] = (chi[lane] + scale[rows - 1, lane] * excess * excess) / dof
+        chi[lane] *= scale[rows - 1, lane] * chi[lane]
+    for b in range(rows - 1):
+        for lane in range(LANES):
+            count, expected = n[b, lane], moment[b, 0, lane]
+            x = (count - expected) / (count + expected)
+            z = x * x
+            series = multiply_add(z, c13, c11)
+            series = multiply_add(z, series, c9)
+            series = multiply_add(z, series, c7)
+            series = multiply_add(z, series, c5)
+            series = multiply_add(z, series, c3)
+            series = two * x * multiply_add(z, series, c1)
+            far = logarithm(min(max(count / expected, low), high))
+            ratio = series if abs(x) < near else far
+            chi[lane] += two * (count * ratio - (count - expected))
+    for lane in range(LANES):
+        chi[lane] *= part
