@@ -379,7 +379,9 @@ def test_scans_of_another_size_are_refused(old: Calibration) -> None:
         counts=CountsInMemory(counts[:, :, :10]),
         pixel_mask=np.zeros((10, SIDE), np.uint32),
     )
-    with pytest.raises(ScanError, match=r"has 10 x 24 pixels \(rows x columns\) and not 24 x 24"):
+    with pytest.raises(
+        ScanError, match=r"has 10 x 24 pixels \(rows x columns\) and not 24 x 24"
+    ):
         refresh(old, small)
     fewer = replace(
         scan,
