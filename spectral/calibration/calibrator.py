@@ -27,7 +27,7 @@ from spectral.forward.setup import Setup
 from spectral.forward.step_thickness import thickness_faults
 from spectral.scans.bad_pixels import PixelReason, find_bad_pixels
 from spectral.scans.exposure_levels import exposure_levels
-from spectral.scans.exposure_problems import exposure_problems
+from spectral.scans.exposure_problems import ProblemKind, exposure_problems
 
 if TYPE_CHECKING:
     from collections.abc import Callable
@@ -35,11 +35,14 @@ if TYPE_CHECKING:
     from numpy.typing import NDArray
 
     from spectral.calibration.result import Calibration
+    from spectral.scans.exposure_problems import ExposureProblem
     from spectral.scans.scan import Scan
 
 Faults = Literal["leave out", "refuse", "keep"]
 FIRST_SPREAD_KEV = 1.5
 MISFIT_SIGMAS = 6.0
+DOUBTFUL = (ProblemKind.LEVEL, ProblemKind.LABEL)
+"""What a look at the counts alone may get wrong."""
 
 
 class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
@@ -125,7 +128,7 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
         scan: Scan,
         setup: Setup,
         reasons: NDArray[np.uint16],
-        suspects: dict[int, str],
+        suspects: dict[int, ExposureProblem],
     ) -> Calibration:
         calibration = self._once(scan, setup, reasons, self.excluded + tuple(suspects))
         if self.faults != "keep":
@@ -143,29 +146,35 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
                 )
                 raise InputError(msg)
 
-    def _refuse_without_opens(self, scan: Scan, suspects: dict[int, str]) -> None:
+    def _refuse_without_opens(
+        self, scan: Scan, suspects: dict[int, ExposureProblem]
+    ) -> None:
         opens = [i for i in scan.exposures("open").tolist() if i not in self.excluded]
         if opens and all(i in suspects for i in opens):
             msg = (
                 f"{scan.source}: every open exposure has a problem of its own, as "
-                f"exposure {opens[0]}: {suspects[opens[0]]}"
+                f"exposure {opens[0]}: {suspects[opens[0]].text}"
             )
             raise CalibrationError(msg)
 
-    def _refuse_wrong_units(self, scan: Scan, suspects: dict[int, str]) -> None:
+    def _refuse_wrong_units(
+        self, scan: Scan, suspects: dict[int, ExposureProblem]
+    ) -> None:
         faults = thickness_faults(scan, without=(*self.excluded, *suspects))
         if faults:
             msg = f"{scan.source}: {faults[0]}"
             raise CalibrationError(msg)
 
-    def _suspects(self, scan: Scan, reasons: NDArray[np.uint16]) -> dict[int, str]:
+    def _suspects(
+        self, scan: Scan, reasons: NDArray[np.uint16]
+    ) -> dict[int, ExposureProblem]:
         """Exposures that a check of the counts alone already finds wrong."""
         if self.faults == "keep":
             return {}
         problems = exposure_problems(scan, exposure_levels(scan, reasons == 0))
         used = set(scan.exposures("dark", "open", "wedge").tolist())
         used -= set(self.excluded)
-        return {p.exposure: p.text for p in problems if p.exposure in used}
+        return {p.exposure: p for p in problems if p.exposure in used}
 
     def _without_faults(
         self,
@@ -173,9 +182,13 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
         setup: Setup,
         reasons: NDArray[np.uint16],
         calibration: Calibration,
-        suspects: dict[int, str],
+        suspects: dict[int, ExposureProblem],
     ) -> Calibration:
-        """The calibration without exposures that contradict the others."""
+        """The calibration without exposures that contradict the others.
+
+        An exposure whose level alone looked wrong comes back if the model, fitted
+        without it, expects just that level: pile-up bends levels, too.
+        """
         found = {f.exposure for f in find_step_faults(calibration)}
         left = set(suspects) | found
         if found:
@@ -185,8 +198,17 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
             )
         named = name_faults(calibration, look_at(calibration, scan, sorted(left)))
         texts = {f.exposure: f.text for f in named}
+        cleared = {
+            e for e, p in suspects.items() if p.kind in DOUBTFUL and e not in texts
+        }
+        if cleared - found:
+            left -= cleared - found
+            calibration = self._once(
+                scan, setup, reasons, self.excluded + tuple(sorted(left))
+            )
+        sayings = {e: p.text for e, p in suspects.items()}
         findings = [
-            texts.get(e, f"exposure {e}: {suspects.get(e, 'unlike the others')}")
+            texts.get(e, f"exposure {e}: {sayings.get(e, 'unlike the others')}")
             + "; left out"
             for e in sorted(left)
         ]

@@ -369,7 +369,7 @@ def _result(
         msg = (
             "the forward model does not come near the scan's mean counts (median "
             f"departure {100 * np.median(np.abs(residual)):.0f} %); check voltage, "
-            "filters, sensor and threshold energies in the file"
+            "filters, sensor, threshold energies and step thicknesses in the file"
         )
         raise CalibrationError(msg)
     deviation = np.sqrt(np.diag(covariance))

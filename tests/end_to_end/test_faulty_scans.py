@@ -17,6 +17,7 @@ import pytest
 from spectral.calibration.calibration_file import read_calibration, write_calibration
 from spectral.calibration.calibrator import WedgeCalibrator
 from spectral.errors import CalibrationError
+from spectral.scans.exposure_problems import ExposureProblem, ProblemKind
 
 if TYPE_CHECKING:
     from spectral.calibration.result import Calibration
@@ -136,6 +137,23 @@ def test_calibration_is_as_good_as_without_the_faulty_exposures(
 def test_faulty_scan_is_refused_if_so_wished(spoilt: Scan) -> None:
     with pytest.raises(CalibrationError, match=rf"exposure {THICKNESS}: the scan says"):
         calibrator(faults="refuse").fit(spoilt)
+
+
+@pytest.mark.parametrize(
+    ("kind", "comes_back"),
+    [(ProblemKind.LABEL, True), (ProblemKind.REPEATED, False)],
+)
+def test_sound_exposure_under_suspicion_comes_back_if_only_its_level_was_doubted(
+    bench: Any, monkeypatch: pytest.MonkeyPatch, kind: ProblemKind, comes_back: bool
+) -> None:
+    doubted = ExposureProblem(exposure=THICKNESS, kind=kind, text="it looks odd")
+    monkeypatch.setattr(
+        "spectral.calibration.calibrator.exposure_problems", lambda *_: [doubted]
+    )
+    found = calibrator().fit(bench.clean).calibration_
+    assert (THICKNESS in found.steps.exposure) == comes_back
+    said = f"exposure {THICKNESS}: it looks odd; left out"
+    assert found.findings == (() if comes_back else (said,))
 
 
 def test_polarisation_is_told_of(kinds: Any, bench: Any) -> None:
