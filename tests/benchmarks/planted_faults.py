@@ -90,6 +90,7 @@ def main() -> None:
     given = options.parse_args()
     with tempfile.TemporaryDirectory() as temporary:
         library, folder = sensor_library(), given.folder or Path(temporary)
+        folder.mkdir(parents=True, exist_ok=True)
         seeds = range(1, 1 + max(given.seeds, given.clean))
         benches = [bench(seed, folder, library) for seed in seeds]
 
