@@ -90,7 +90,7 @@ def solve(
     weight : array of float64 or float32, shape (pixel or 1, bin, node), in counts
         Share of each energy node in each bin at no attenuation; entries may be
         negative (pile-up), sums over the nodes may not. float32 is solved in single
-        precision, half again as fast; it costs less than 0.01 standard errors as long
+        precision, half again as fast; it costs 0.03 standard errors at most as long
         as 6e-8 sqrt(counts) sum |weight| / |sum weight| stays below 0.003 in all bins.
     attenuation : array, shape (node, material), in cm2/g
     start : StartRegression or array of shape (material,) or (pixel, material), optional
