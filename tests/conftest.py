@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import importlib.util
+import sys
+from pathlib import Path
 from typing import TYPE_CHECKING, Protocol
 
 import hypothesis
@@ -16,6 +19,9 @@ from spectral.physics.pileup import PulseShape
 from spectral.scans.scan import CountsInMemory, Filter, Layer, Scan
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+    from types import ModuleType
+
     from numpy.typing import NDArray
 
 # the same examples in every run: a failure then means a change, not a draw
@@ -312,3 +318,20 @@ def made_up_series(
 def make_series() -> MakeSeries:
     """A function that makes a series of object exposures for a calibration."""
     return made_up_series
+
+
+@pytest.fixture(scope="session")
+def load_benchmark() -> Callable[[str], ModuleType]:
+    """A function that loads a program of the benchmarks, wherever tests are run from."""
+
+    def load(name: str) -> ModuleType:
+        path = Path(__file__).parent / "benchmarks" / f"{name}.py"
+        spec = importlib.util.spec_from_file_location(name, path)
+        assert spec is not None
+        assert spec.loader is not None
+        module = importlib.util.module_from_spec(spec)
+        sys.modules[name] = module
+        spec.loader.exec_module(module)
+        return module
+
+    return load

@@ -201,15 +201,14 @@ class WedgeCalibrator(BaseEstimator):  # type: ignore[misc]
         cleared = {
             e for e, p in suspects.items() if p.kind in DOUBTFUL and e not in texts
         }
-        if cleared - found:
-            left -= cleared - found
+        if cleared:
+            left -= cleared
             calibration = self._once(
                 scan, setup, reasons, self.excluded + tuple(sorted(left))
             )
-        sayings = {e: p.text for e, p in suspects.items()}
+        said = {e: f"exposure {e}: {p.text}" for e, p in suspects.items()} | texts
         findings = [
-            texts.get(e, f"exposure {e}: {sayings.get(e, 'unlike the others')}")
-            + "; left out"
+            said.get(e, f"exposure {e}: unlike the others") + "; left out"
             for e in sorted(left)
         ]
         if findings and self.faults == "refuse":

@@ -262,7 +262,7 @@ class MaterialDecomposer(TransformerMixin, BaseEstimator):  # type: ignore[misc]
         )
         more = self._overlaps(exposure, where, seen)
         found = replace(found, covariance=found.covariance * (1.0 + more[:, None]))
-        full = unpacked(found.covariance)
+        full *= 1.0 + more[:, None, None]
         flags = judge(
             total_counts=above[:, 0],
             outside=sigmas_outside(found.areal_density, full, self._facets),

@@ -29,12 +29,14 @@ def folder(
     make_calibration: Callable[..., Calibration],
     make_series: Callable[..., Scan],
     tmp_path_factory: pytest.TempPathFactory,
+    request: pytest.FixtureRequest,
 ) -> Path:
-    """A calibration and a series of it in files."""
+    """A calibration and a series of it, as long as the module says, in files."""
     folder = tmp_path_factory.mktemp("series")
     calibration = make_calibration()
     write_calibration(calibration, folder / "calibration.h5")
-    write_scan(make_series(calibration, OBJECTS), folder / "scan.h5")
+    objects = getattr(request.module, "OBJECTS", OBJECTS)
+    write_scan(make_series(calibration, objects), folder / "scan.h5")
     return folder
 
 

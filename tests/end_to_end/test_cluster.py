@@ -13,19 +13,18 @@ from typing import TYPE_CHECKING, Any, Self
 
 import pytest
 
-from spectral.calibration.calibration_file import read_calibration, write_calibration
+from spectral.calibration.calibration_file import read_calibration
 from spectral.decomposition import cluster, series
 from spectral.decomposition.cluster import on_cluster
 from spectral.decomposition.decomposer import MaterialDecomposer
 from spectral.decomposition.series import decompose_series
 from spectral.errors import InputError, ScanError
-from spectral.scans.scan_file import file_digest, read_scan, write_scan
+from spectral.scans.scan_file import file_digest
 
 if TYPE_CHECKING:
-    from collections.abc import Callable, Iterator
+    from collections.abc import Iterator
     from pathlib import Path
 
-    from spectral.calibration.result import Calibration
     from spectral.scans.scan import Scan
 
 pytestmark = pytest.mark.end_to_end
@@ -35,27 +34,8 @@ OPTIONS = {"bias_correction": True, "nonnegative": False, "follow_pixels": True}
 
 
 @pytest.fixture(scope="module")
-def folder(
-    make_calibration: Callable[..., Calibration],
-    make_series: Callable[..., Scan],
-    tmp_path_factory: pytest.TempPathFactory,
-) -> Path:
-    """A calibration and a series of it in files."""
-    folder = tmp_path_factory.mktemp("cluster")
-    calibration = make_calibration()
-    write_calibration(calibration, folder / "calibration.h5")
-    write_scan(make_series(calibration, OBJECTS), folder / "scan.h5")
-    return folder
-
-
-@pytest.fixture(scope="module")
 def decomposer(folder: Path) -> MaterialDecomposer:
     return MaterialDecomposer(read_calibration(folder / "calibration.h5"))
-
-
-@pytest.fixture(scope="module")
-def scan(folder: Path) -> Scan:
-    return read_scan(folder / "scan.h5")
 
 
 @pytest.fixture(autouse=True)

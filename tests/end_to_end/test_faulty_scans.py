@@ -6,9 +6,6 @@ spoil one scan together.
 
 from __future__ import annotations
 
-import importlib.util
-import sys
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -20,6 +17,9 @@ from spectral.errors import CalibrationError
 from spectral.scans.exposure_problems import ExposureProblem, ProblemKind
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
+    from pathlib import Path
+
     from spectral.calibration.result import Calibration
     from spectral.scans.scan import Scan
 
@@ -30,16 +30,9 @@ SWAPPED = (10, 22)
 
 
 @pytest.fixture(scope="module")
-def kinds() -> Any:
-    """The module of planted faults, wherever the tests are run from."""
-    path = Path(__file__).parents[1] / "benchmarks" / "fault_kinds.py"
-    spec = importlib.util.spec_from_file_location("fault_kinds", path)
-    assert spec is not None
-    assert spec.loader is not None
-    module = importlib.util.module_from_spec(spec)
-    sys.modules["fault_kinds"] = module
-    spec.loader.exec_module(module)
-    return module
+def kinds(load_benchmark: Callable[[str], Any]) -> Any:
+    """The module of planted faults."""
+    return load_benchmark("fault_kinds")
 
 
 @pytest.fixture(scope="module")

@@ -6,10 +6,7 @@ that of the tables in tests/benchmarks.
 
 from __future__ import annotations
 
-import importlib.util
-import sys
 from dataclasses import dataclass, replace
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -20,6 +17,7 @@ from spectral.calibration.promise import promise
 from spectral.decomposition.decomposer import MaterialDecomposer
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
     from types import ModuleType
 
     from numpy.typing import NDArray
@@ -45,16 +43,9 @@ def calibrated(scan: Scan, *, excluded: tuple[int, ...] = ()) -> Calibration:
 
 
 @pytest.fixture(scope="module")
-def table() -> ModuleType:
-    """The module that describes the instrument, wherever the tests are run from."""
-    path = Path(__file__).parents[1] / "benchmarks" / "witness_table.py"
-    spec = importlib.util.spec_from_file_location("witness_table", path)
-    assert spec is not None
-    assert spec.loader is not None
-    module = importlib.util.module_from_spec(spec)
-    sys.modules["witness_table"] = module
-    spec.loader.exec_module(module)
-    return module
+def table(load_benchmark: Callable[[str], ModuleType]) -> ModuleType:
+    """The module that describes the instrument."""
+    return load_benchmark("witness_table")
 
 
 @pytest.fixture(scope="module")

@@ -7,9 +7,6 @@ here one sensor is compared, on few pixels.
 
 from __future__ import annotations
 
-import importlib.util
-import sys
-from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -18,28 +15,19 @@ import pytest
 from spectral.calibration.calibrator import WedgeCalibrator
 
 if TYPE_CHECKING:
+    from collections.abc import Callable
     from types import ModuleType
 
-SCRIPT = Path(__file__).resolve().parents[1] / "benchmarks" / "witness_table.py"
 PIXELS = 12
 
 pytestmark = [pytest.mark.reference, pytest.mark.slow]
 
 
-def loaded() -> ModuleType:
-    """The script that makes the table, as a module."""
-    spec = importlib.util.spec_from_file_location("witness_table", SCRIPT)
-    assert spec is not None
-    assert spec.loader is not None
-    module = importlib.util.module_from_spec(spec)
-    sys.modules["witness_table"] = module
-    spec.loader.exec_module(module)
-    return module
-
-
 @pytest.fixture(scope="module")
-def silicon() -> tuple[Any, Any, ModuleType]:
-    table = loaded()
+def silicon(
+    load_benchmark: Callable[[str], ModuleType],
+) -> tuple[Any, Any, ModuleType]:
+    table = load_benchmark("witness_table")
     (bench,) = (b for b in table.BENCHES if b.detector == "silicon")
     instrument = table.Instrument.build(bench, pixels=PIXELS)
     scan = instrument.wedge_scan().scan
